@@ -1,0 +1,179 @@
+"""Physical constants (CODATA 2022) and every conversion between units.
+
+k_B, e, h, c and N_A are exact by the definition of the SI (2019). The Bohr magneton is the
+CODATA 2022 value (Mohr, Newell, Taylor and Tiesinga, CODATA recommended values 2022).
+
+The electromagnetic CGS conversions use μ0 = 4π·10⁻⁷ N/A² exactly, because "emu" is defined by
+it; the measured μ0 differs by 1.3·10⁻¹⁰, far below anything that matters here. So
+1 emu/mol of susceptibility = 4π·10⁻⁶ m³/mol, and 1 emu/mol of moment = 10⁻³ A m²/mol.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Mapping
+from types import MappingProxyType
+from typing import Literal
+
+from thermo.errors import UnitsError
+
+BOLTZMANN = 1.380649e-23  # J/K, exact
+ELEMENTARY_CHARGE = 1.602176634e-19  # C, exact
+PLANCK = 6.62607015e-34  # J s, exact
+LIGHT_SPEED = 299_792_458.0  # m/s, exact
+AVOGADRO = 6.02214076e23  # 1/mol, exact
+BOHR_MAGNETON = 9.2740100657e-24  # J/T
+VACUUM_PERMEABILITY = 1.25663706127e-6  # N/A^2, measured; conversions use MU_0_EMU
+MU_0_EMU = 4e-7 * math.pi  # N/A^2, the value that defines the emu
+
+GAS_CONSTANT = BOLTZMANN * AVOGADRO  # J/(mol K)
+R = GAS_CONSTANT
+
+MEV = ELEMENTARY_CHARGE * 1e-3  # J
+WAVENUMBER = PLANCK * LIGHT_SPEED * 100  # J, of 1 cm^-1
+GIGAHERTZ = PLANCK * 1e9  # J
+
+#: k_B in meV/K and in cm^-1/K.
+BOLTZMANN_MEV = BOLTZMANN / MEV
+BOLTZMANN_WAVENUMBER = BOLTZMANN / WAVENUMBER
+#: μ_B/k_B in K/T: the temperature of one Bohr magneton in one tesla.
+BOHR_MAGNETON_KELVIN = BOHR_MAGNETON / BOLTZMANN
+
+#: 1 emu/mol (= 1 cm3/mol Gaussian) of susceptibility in m3/mol.
+CHI_SI_PER_EMU = 4e-6 * math.pi
+#: 1 emu/mol of magnetic moment in A m2/mol.
+MOMENT_SI_PER_EMU = 1e-3
+
+#: N_A μ_B, one Bohr magneton per ion, in A m2/mol and in emu/mol.
+MOLAR_BOHR_MAGNETON = AVOGADRO * BOHR_MAGNETON
+MOLAR_BOHR_MAGNETON_EMU = MOLAR_BOHR_MAGNETON / MOMENT_SI_PER_EMU
+#: N_A μ_B²/k_B in m3 K/mol and emu K/mol: the Curie constant of spin ½ with g = 2.
+CURIE = AVOGADRO * MU_0_EMU * BOHR_MAGNETON**2 / BOLTZMANN
+CURIE_EMU = CURIE / CHI_SI_PER_EMU
+#: μ_eff = EFFECTIVE_MOMENT · sqrt(χT), in μ_B with χT in emu K/mol.
+EFFECTIVE_MOMENT = math.sqrt(3 / CURIE_EMU)
+
+EnergyUnit = Literal["K", "meV", "cm-1", "1"]
+#: Units a model file may use; "1" is dimensionless, k_B = μ_B = 1.
+ENERGY_UNITS: tuple[str, ...] = ("K", "meV", "cm-1", "1")
+UNITS_SYSTEMS: tuple[str, ...] = ("molar-si", "molar-cgs", "reduced")
+
+_KELVIN_PER: Mapping[str, float] = MappingProxyType(
+    {
+        "K": 1.0,
+        "meV": MEV / BOLTZMANN,
+        "cm-1": WAVENUMBER / BOLTZMANN,
+        "GHz": GIGAHERTZ / BOLTZMANN,
+        "T": BOHR_MAGNETON_KELVIN,
+    }
+)
+
+#: quantity -> unit -> factor to the quantity's SI unit (first of each row).
+_FACTORS: Mapping[str, Mapping[str, float]] = MappingProxyType(
+    {
+        "temperature": {"K": 1.0, "mK": 1e-3},
+        "field": {"T": 1.0, "mT": 1e-3, "kOe": 0.1, "Oe": 1e-4, "kG": 0.1, "G": 1e-4},
+        "susceptibility": {
+            "m3/mol": 1.0,
+            "emu/mol": CHI_SI_PER_EMU,
+            "cm3/mol": CHI_SI_PER_EMU,
+        },
+        "chi_T": {
+            "m3 K/mol": 1.0,
+            "emu K/mol": CHI_SI_PER_EMU,
+            "cm3 K/mol": CHI_SI_PER_EMU,
+        },
+        "specific_heat": {"J/(mol K)": 1.0, "mJ/(mol K)": 1e-3, "R": GAS_CONSTANT},
+        "C/T": {"J/(mol K2)": 1.0, "mJ/(mol K2)": 1e-3},
+        "entropy": {"J/(mol K)": 1.0, "mJ/(mol K)": 1e-3, "R": GAS_CONSTANT},
+        "magnetization": {
+            "A m2/mol": 1.0,
+            "emu/mol": MOMENT_SI_PER_EMU,
+            "muB": MOLAR_BOHR_MAGNETON,
+        },
+    }
+)
+#: Every quantity a column of measured data may hold.
+QUANTITIES: tuple[str, ...] = tuple(_FACTORS)
+
+
+def kelvin_per(energy_unit: str) -> float:
+    """Kelvin in one ``energy_unit`` (energy/k_B); 1 for "K" and for the dimensionless "1".
+
+    Also knows "GHz" (h·ν/k_B) and "T" (μ_B·B/k_B). Raises UnitsError for any other name.
+    """
+    if energy_unit == "1":
+        return 1.0
+    try:
+        return _KELVIN_PER[energy_unit]
+    except (KeyError, TypeError):
+        raise UnitsError(
+            f"energy unit {energy_unit!r} is not known; use one of {', '.join(ENERGY_UNITS)}"
+        ) from None
+
+
+def tesla_to_energy(energy_unit: str) -> float:
+    """μ_B·(1 T) in ``energy_unit``; 1 for the dimensionless "1", where μ_B = 1."""
+    if energy_unit == "1":
+        return 1.0
+    return BOHR_MAGNETON_KELVIN / kelvin_per(energy_unit)
+
+
+def convert_energy(value: float, from_unit: str, to_unit: str) -> float:
+    """``value`` in another of "K", "meV", "cm-1", "GHz", "T" (as k_B T, E, hcν̃, hν, μ_B B).
+
+    The dimensionless "1" converts only to itself; anything else is a UnitsError.
+    """
+    if (from_unit == "1") != (to_unit == "1"):
+        raise UnitsError(
+            f"an energy in {from_unit!r} cannot become {to_unit!r}: a dimensionless energy has "
+            "no physical scale; state the model in K, meV or cm-1"
+        )
+    return value * (kelvin_per(from_unit) / kelvin_per(to_unit))
+
+
+def quantity_units(quantity: str) -> tuple[str, ...]:
+    """The unit spellings accepted for a measured quantity, its SI unit first."""
+    return tuple(_factors(quantity))
+
+
+def quantity_factor(quantity: str, unit: str, reduced: bool | None = None) -> float:
+    """Factor from ``unit`` to the SI unit of a measured quantity.
+
+    SI units: susceptibility m3/mol, chi_T m3 K/mol, specific_heat and entropy J/(mol K),
+    C/T J/(mol K2), magnetization A m2/mol, temperature K, field T. "muB" and "R" are per ion
+    (or formula unit) and per mole of the same. Fields in Oe and G are taken as B, 1 Oe -> 10⁻⁴ T.
+    ``reduced=True`` accepts only "1" (factor 1), ``False`` everything but it, ``None`` both.
+    Raises UnitsError where the unit does not fit the quantity.
+    """
+    factors = _factors(quantity)
+    if unit == "1" and reduced is not False:
+        return 1.0
+    if reduced:
+        raise UnitsError(
+            f'unit {unit!r} of {quantity} does not fit a dimensionless model; use "1", '
+            "or state the model's energies in K, meV or cm-1"
+        )
+    if unit not in factors:
+        known = ", ".join(f'"{name}"' for name in factors)
+        extra = '; "1" belongs to dimensionless models' if unit == "1" else ""
+        raise UnitsError(f"unit {unit!r} does not fit {quantity}{extra}; use one of {known}")
+    return factors[unit]
+
+
+def check_units_system(units_system: str) -> str:
+    """The name itself, or a UnitsError that lists the three there are."""
+    if units_system not in UNITS_SYSTEMS:
+        raise UnitsError(
+            f"units {units_system!r} are not known; use one of {', '.join(UNITS_SYSTEMS)}"
+        )
+    return units_system
+
+
+def _factors(quantity: str) -> Mapping[str, float]:
+    try:
+        return _FACTORS[quantity]
+    except (KeyError, TypeError):
+        raise UnitsError(
+            f"quantity {quantity!r} is not known; use one of {', '.join(_FACTORS)}"
+        ) from None
