@@ -1,0 +1,155 @@
+"""What a user may write on the command line, read and checked before any long work starts."""
+
+from __future__ import annotations
+
+import os
+import tempfile
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+from thermo.errors import FileFormatError, RangeError
+from thermo.storage import write_failure
+
+if TYPE_CHECKING:
+    import xarray as xr
+    from numpy.typing import NDArray
+
+PICTURES = (".png", ".svg", ".pdf")
+LARGEST_GRID = 1_000_000
+_SIZES = {"": 1, "b": 1}
+for _power, _letter in enumerate("kmgt", start=1):
+    _SIZES[_letter + "b"] = 1000**_power
+    _SIZES[_letter + "ib"] = _SIZES[_letter + "i"] = _SIZES[_letter] = 1024**_power
+
+
+def parse_size(text: str | None) -> int | None:
+    """Bytes meant by "4 GiB", "500MB" or a plain number."""
+    if text is None:
+        return None
+    number = text.strip().rstrip("BbIiKkMmGgTt")
+    unit = text.strip()[len(number) :].lower()
+    try:
+        value = float(number) * _SIZES[unit]
+        size = int(value)
+    except (ValueError, KeyError, OverflowError):
+        size = 0
+    if size <= 0:
+        raise RangeError(f'--memory {text!r} is not a size; write it like "4 GiB" or "500 MB"')
+    return size
+
+
+def parse_grid(text: str, what: str) -> NDArray[Any]:
+    """Numbers meant by a grid: start:stop:count, log start:stop:count, a list, or a file.
+
+    Returns a strictly increasing array, shape (n,); temperatures are positive. Raises RangeError.
+    """
+    import numpy as np
+
+    option = f"--{what} {text!r}"
+    shape = 'write "start:stop:count", "log start:stop:count" or a list like "2,5,10"'
+    words = text.strip()
+    if Path(words).is_file():
+        values = _column(Path(words), what)
+    elif ":" in words:
+        logarithmic = words.lower().startswith("log")
+        parts = (words[3:].lstrip(" :") if logarithmic else words).split(":")
+        if len(parts) != 3:
+            raise RangeError(f"{option} has {len(parts)} parts where a grid has three; {shape}")
+        start, stop = (_number(part, option, shape) for part in parts[:2])
+        if not parts[2].strip().isdigit() or not 1 <= int(parts[2]) <= LARGEST_GRID:
+            raise RangeError(
+                f"{option} asks for {parts[2].strip()!r} points; give a whole number from 1 to "
+                f"{LARGEST_GRID}"
+            )
+        count = int(parts[2])
+        if logarithmic and min(start, stop) <= 0:
+            raise RangeError(f"{option} is logarithmic and must start above zero; raise its start")
+        spaced = np.geomspace if logarithmic else np.linspace
+        values = spaced(start, stop, count)
+        if count > 1 and not stop > start:
+            raise RangeError(f"{option} does not rise from start to stop; put the smaller first")
+    else:
+        values = np.array([_number(part, option, shape) for part in words.split(",")])
+    if what == "temperature" and values.min() <= 0:
+        raise RangeError(
+            f"{option} has the temperature {values.min():g}, and temperatures must be above zero; "
+            "leave it out or raise it"
+        )
+    falls = np.flatnonzero(np.diff(values) <= 0)
+    if falls.size:
+        first = falls[0]
+        raise RangeError(
+            f"{option} has {values[first + 1]:g} after {values[first]:g}; "
+            f"give each {what} once, in rising order"
+        )
+    return values
+
+
+def default_temperatures(levels: xr.Dataset) -> NDArray[Any]:
+    """200 temperatures, shape (200,), over the decades where a spectrum does something.
+
+    They run from 0.02 to 20 times the width of the spectrum per site, a measure of its couplings;
+    1 to 300 where the levels do not spread at all. In K, or in the energy unit when dimensionless.
+    """
+    import numpy as np
+
+    from thermo.units import kelvin_per
+
+    energy = levels["energy"].values
+    kelvin = kelvin_per(levels.attrs["energy_unit"])
+    width = float(energy.max() - energy.min()) * kelvin / int(levels.attrs["n_sites"])
+    low, high = (0.02 * width, 20 * width) if width > 0 else (1.0, 300.0)
+    return np.geomspace(float(f"{low:.2g}"), float(f"{high:.2g}"), 200)
+
+
+def _number(text: str, where: str, shape: str) -> float:
+    try:
+        value = float(text)
+    except ValueError:
+        raise RangeError(f"{where} has {text.strip()!r} where a number belongs; {shape}") from None
+    if value - value != 0:
+        raise RangeError(f"{where} has {value}, which is not a finite number; {shape}")
+    return value
+
+
+def _column(path: Path, what: str) -> NDArray[Any]:
+    """One number a line; empty lines and lines that start with # are passed over."""
+    import numpy as np
+
+    try:
+        lines = path.read_text(encoding="utf-8").splitlines()
+    except UnicodeDecodeError:
+        raise RangeError(f"{path} is not text; give a file with one {what} a line") from None
+    rows = [(n, line.strip()) for n, line in enumerate(lines, start=1)]
+    rows = [(n, line) for n, line in rows if line and not line.startswith("#")]
+    shape = f"give one {what} a line, with a decimal point"
+    if not rows:
+        raise RangeError(f"{path} has no numbers; {shape}")
+    return np.array([_number(line, f"{path}, line {n},", shape) for n, line in rows])
+
+
+def check_source(path: Path) -> None:
+    """Refuse a missing file before anything slow is imported."""
+    if path.is_dir():
+        raise FileFormatError(f"{path} is a directory where a file belongs; name a file in it")
+    if not path.exists():
+        raise FileFormatError(f"{path} does not exist; check the name and the directory")
+
+
+def check_target(path: Path, suffixes: tuple[str, ...], sources: tuple[Path, ...]) -> None:
+    """Refuse, before any work, a target that could not be written at its end."""
+    if path.suffix.lower() not in suffixes:
+        known = " or ".join(suffixes)
+        raise FileFormatError(f"the output {path} must end in {known}; change its name")
+    real = Path(os.path.realpath(path))
+    if real.exists():
+        if not real.is_file():
+            raise FileFormatError(f"the output {path} is not a regular file; choose another name")
+        if any(source.exists() and real.samefile(source) for source in sources):
+            raise FileFormatError(f"the output {path} is also the input; choose another name")
+    try:
+        with tempfile.TemporaryFile(dir=real.parent) as probe:
+            probe.write(bytes(4096))
+            probe.flush()
+    except OSError as fault:
+        raise write_failure(path, fault) from None

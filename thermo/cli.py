@@ -1,0 +1,481 @@
+"""The command ``partita``: glue between files, the terminal and the library, nothing numeric.
+
+Results go to files or to standard output; progress, notes and errors go to standard error.
+Nothing slow is imported until a command needs it.
+"""
+
+from __future__ import annotations
+
+import contextlib
+import os
+import sys
+import threading
+import time
+from collections.abc import Callable, Sequence
+from enum import StrEnum
+from pathlib import Path
+from typing import Annotated, Any, TypeVar
+
+import typer
+
+from thermo import __version__
+from thermo.arguments import (
+    PICTURES,
+    check_source,
+    check_target,
+    default_temperatures,
+    parse_grid,
+    parse_size,
+)
+from thermo.errors import PartitaError
+
+Result = TypeVar("Result")
+
+EXIT_CODES = """\b
+Exit codes:
+  0    done
+  1    unexpected fault of the program
+  2    command line not understood
+  3    model, study, data or argument not usable
+  4    file cannot be read or written
+  5    not enough memory
+  6    a spectrum failed its own check
+  130  interrupted"""
+
+app = typer.Typer(
+    name="partita",
+    add_completion=False,
+    pretty_exceptions_enable=False,
+    rich_markup_mode=None,
+    context_settings={"help_option_names": ["-h", "--help"], "max_content_width": 100},
+)
+
+
+class Method(StrEnum):
+    auto = "auto"
+    full = "full"
+    sampled = "sampled"
+
+
+class Units(StrEnum):
+    si = "molar-si"
+    cgs = "molar-cgs"
+    reduced = "reduced"
+
+
+class Per(StrEnum):
+    ion = "ion"
+    formula = "formula"
+
+
+def _show_version(value: bool) -> None:
+    if value:
+        print(f"partita {__version__}")
+        raise typer.Exit
+
+
+@app.callback(invoke_without_command=True, epilog=EXIT_CODES)
+def _partita(
+    context: typer.Context,
+    version: Annotated[
+        bool,
+        typer.Option("--version", callback=_show_version, is_eager=True, help="Show the version."),
+    ] = False,
+) -> None:
+    """Finite-temperature thermodynamics of interacting spins.
+
+    From a model file to its spectrum (survey, solve), from the spectrum to curves (curves, plot,
+    export), from measured curves to exchange constants (fit).
+    """
+    if context.invoked_subcommand is None:
+        print(context.get_help())
+
+
+@app.command()
+def survey(
+    model: Annotated[Path, typer.Argument(metavar="MODEL", help="Model file (TOML or JSON).")],
+    memory: Annotated[
+        str | None, typer.Option(metavar="SIZE", help='Memory limit, for example "4 GiB".')
+    ] = None,
+) -> None:
+    """Show what a model conserves, its blocks, and the work ahead."""
+    limit = parse_size(memory)
+    check_source(model)
+    import thermo
+    from thermo.report import print_plan
+
+    print_plan(thermo.survey(thermo.read_model(model), memory=limit))
+
+
+@app.command()
+def solve(
+    model: Annotated[Path, typer.Argument(metavar="MODEL", help="Model file (TOML or JSON).")],
+    output: Annotated[
+        Path, typer.Option("--output", "-o", metavar="FILE", help="Where the levels go (.nc).")
+    ],
+    method: Annotated[Method, typer.Option(help="How to find the levels.")] = Method.auto,
+    memory: Annotated[
+        str | None,
+        typer.Option(
+            metavar="SIZE", help='Memory limit, for example "4 GiB"; default: what is free.'
+        ),
+    ] = None,
+    threads: Annotated[
+        int | None, typer.Option(min=1, metavar="N", help="Processor cores to use; default: all.")
+    ] = None,
+) -> None:
+    """Find all levels of a model and write them to a file."""
+    limit = parse_size(memory)
+    check_source(model)
+    check_target(output, (".nc",), sources=(model,))
+    _set_threads(threads)
+    import thermo
+
+    spins = thermo.read_model(model)
+    _tell_notes(spins.notes)
+    started = time.monotonic()
+    levels = _work(
+        lambda report: thermo.solve(spins, method=method.value, memory=limit, progress=report)
+    )
+    thermo.write(levels, output)
+    _confirm(
+        f"wrote {output}: {len(spins.sites)} sites, {spins.n_states} states, "
+        f"{levels.sizes['level']} levels, {time.monotonic() - started:.1f} s"
+    )
+
+
+@app.command()
+def curves(
+    levels: Annotated[Path, typer.Argument(metavar="LEVELS", help="Levels file from solve.")],
+    temperature: Annotated[
+        str | None,
+        typer.Option(
+            "--temperature",
+            "-t",
+            metavar="GRID",
+            help='"start:stop:count", "log start:stop:count", a list "2,5,10", or a file with one '
+            "number a line; default: from the width of the spectrum.",
+        ),
+    ] = None,
+    field: Annotated[
+        str,
+        typer.Option("--field", "-b", metavar="GRID", help='Fields in T, for example "0,1,5".'),
+    ] = "0",
+    units: Annotated[
+        Units | None,
+        typer.Option(help="Units of the curves; default: molar-si, or reduced without a unit."),
+    ] = None,
+    per: Annotated[Per, typer.Option(help="Per mole of magnetic ions or of formula units.")] = (
+        Per.ion
+    ),
+    output: Annotated[
+        Path | None,
+        typer.Option(
+            "--output", "-o", metavar="FILE", help=".nc or .csv; default: CSV to standard output."
+        ),
+    ] = None,
+) -> None:
+    """Turn levels into curves over temperature and field."""
+    temperatures = None if temperature is None else parse_grid(temperature, "temperature")
+    fields = parse_grid(field, "field")
+    check_source(levels)
+    if output is not None:
+        check_target(output, (".nc", ".csv"), sources=(levels,))
+    import thermo
+
+    spectrum = thermo.read(levels, "levels")
+    dimensionless = spectrum.attrs["energy_unit"] == "1"
+    system = units or (Units.reduced if dimensionless else Units.si)
+    if temperatures is None:
+        temperatures = default_temperatures(spectrum)
+        unit = "" if dimensionless else " K"
+        _note(
+            f"{len(temperatures)} temperatures from {temperatures[0]:g} to "
+            f"{temperatures[-1]:g}{unit}, from the width of the spectrum; "
+            "--temperature sets others"
+        )
+    found = thermo.curves(spectrum, temperatures, fields, units=system.value, per=per.value)
+    if output is None:
+        thermo.export_csv(found, sys.stdout)
+    elif output.suffix.lower() == ".csv":
+        thermo.export_csv(found, output)
+    else:
+        thermo.write(found, output)
+    if output is not None:
+        _confirm(f"wrote {output}: {len(temperatures)} temperatures, {len(fields)} fields")
+
+
+@app.command()
+def fit(
+    study: Annotated[Path, typer.Argument(metavar="STUDY", help="Study file (TOML).")],
+    output: Annotated[
+        Path | None,
+        typer.Option("--output", "-o", metavar="FILE", help="Where the result goes (.nc)."),
+    ] = None,
+    picture: Annotated[
+        Path | None,
+        typer.Option(
+            "--picture", metavar="FILE", help="Picture of data, fit and residuals (.png .svg .pdf)."
+        ),
+    ] = None,
+    threads: Annotated[
+        int | None, typer.Option(min=1, metavar="N", help="Processor cores to use; default: all.")
+    ] = None,
+) -> None:
+    """Fit exchange constants to measured curves and print the result."""
+    check_source(study)
+    if output is not None:
+        check_target(output, (".nc",), sources=(study,))
+    if picture is not None:
+        check_target(picture, PICTURES, sources=(study,))
+    _set_threads(threads)
+    import thermo
+    from thermo.report import print_fit
+
+    problem = thermo.read_study(study)
+    _tell_notes(problem.model.notes)
+    result = _work(lambda report: thermo.fit(problem, progress=report)).to_dataset()
+    print_fit(result)
+    if output is not None:
+        thermo.write(result, output)
+        _confirm(f"wrote {output}")
+    if picture is not None:
+        thermo.plot(result, picture)
+        _confirm(f"wrote {picture}")
+
+
+@app.command()
+def plot(
+    file: Annotated[Path, typer.Argument(metavar="FILE", help="Curves, fit or levels file.")],
+    output: Annotated[
+        Path | None,
+        typer.Option(
+            "--output",
+            "-o",
+            metavar="FILE",
+            help="Picture (.png .svg .pdf); default: FILE with .png, in this directory.",
+        ),
+    ] = None,
+    what: Annotated[
+        str | None, typer.Option(metavar="QUANTITY", help="What to draw; default: all there is.")
+    ] = None,
+) -> None:
+    """Draw the curves, the fit or the levels of a file."""
+    target = Path(file.with_suffix(".png").name) if output is None else output
+    check_source(file)
+    check_target(target, PICTURES, sources=(file,))
+    import thermo
+
+    options = {} if what is None else {"what": what}
+    thermo.plot(thermo.read(file), target, **options)
+    _confirm(f"wrote {target}")
+
+
+@app.command()
+def export(
+    file: Annotated[Path, typer.Argument(metavar="FILE", help="Curves, fit or levels file.")],
+    output: Annotated[
+        Path | None,
+        typer.Option("--output", "-o", metavar="FILE", help=".csv; default: standard output."),
+    ] = None,
+    units: Annotated[
+        Units | None, typer.Option(help="Units of the table; default: those of the file.")
+    ] = None,
+) -> None:
+    """Write the table in a file as CSV, with units in its header."""
+    check_source(file)
+    if output is not None:
+        check_target(output, (".csv",), sources=(file,))
+    import thermo
+
+    options = {} if units is None else {"units_system": units.value}
+    thermo.export_csv(thermo.read(file), sys.stdout if output is None else output, **options)
+    if output is not None:
+        _confirm(f"wrote {output}")
+
+
+def _set_threads(threads: int | None) -> None:
+    """Bound every thread pool; they read these when they are first loaded."""
+    if threads is not None:
+        for name in ("OMP_NUM_THREADS", "OPENBLAS_NUM_THREADS", "NUMBA_NUM_THREADS"):
+            os.environ[name] = str(threads)
+
+
+# ---------------------------------------------------------------- what the user is told
+
+
+def _say(sentence: str) -> None:
+    # One sentence, one line, whatever a library put into its message.
+    print("partita: " + " ".join(sentence.split()), file=sys.stderr, flush=True)
+
+
+def _note(sentence: str) -> None:
+    _say("note: " + sentence)
+
+
+def _tell_notes(notes: Sequence[str]) -> None:
+    for note in notes:
+        _note(note)
+
+
+def _confirm(sentence: str) -> None:
+    """Tell someone who watches what was done; a script needs only the exit code."""
+    if sys.stderr.isatty():
+        _say(sentence)
+
+
+class _Bar:
+    """A progress bar on a terminal, shown only once the work has taken two seconds."""
+
+    patience = 2.0
+
+    def __init__(self) -> None:
+        self.started = time.monotonic()
+        self.done = 0.0
+        self.text = ""
+        self.bar: Any = None
+        self.task: Any = None
+
+    def report(self, done: float, text: str) -> None:
+        self.done, self.text = done, text
+
+    def refresh(self) -> None:
+        if self.bar is None:
+            if not sys.stderr.isatty() or time.monotonic() - self.started < self.patience:
+                return
+            from rich.console import Console
+            from rich.progress import BarColumn, Progress, TaskProgressColumn, TextColumn
+            from rich.progress import TimeElapsedColumn as Elapsed
+
+            columns = (
+                BarColumn(30),
+                TaskProgressColumn(),
+                Elapsed(),
+                TextColumn("{task.description}"),
+            )
+            self.bar = Progress(*columns, console=Console(stderr=True), transient=True)
+            self.task = self.bar.add_task("", total=1.0)
+            self.bar.start()
+        self.bar.update(self.task, completed=self.done, description=self.text)
+
+    def close(self) -> None:
+        if self.bar is not None:
+            self.bar.stop()
+
+
+class _Interrupted(BaseException):
+    """Ctrl-C while the worker thread still computes: the process must not wait for it."""
+
+
+def _work(task: Callable[[Callable[[float, str], None]], Result]) -> Result:
+    """Run a long task in its own thread, so that Ctrl-C and the bar need not wait for LAPACK."""
+    bar = _Bar()
+    result: list[Result] = []
+    faults: list[BaseException] = []
+
+    def body() -> None:
+        try:
+            result.append(task(bar.report))
+        except BaseException as fault:
+            faults.append(fault)
+
+    worker = threading.Thread(target=body, daemon=True)
+    try:
+        worker.start()
+        while worker.is_alive():
+            worker.join(0.1)
+            bar.refresh()
+    except KeyboardInterrupt:
+        raise _Interrupted from None
+    finally:
+        bar.close()
+    if faults:
+        raise faults[0]
+    return result[0]
+
+
+# ---------------------------------------------------------------- faults to sentences
+
+
+def run(arguments: Sequence[str]) -> int:
+    """Run one command line; the exit code. Every fault becomes one sentence on standard error."""
+    try:
+        code = app(list(arguments), prog_name="partita", standalone_mode=False)
+        sys.stdout.flush()
+    except PartitaError as fault:
+        _say(str(fault))
+        return _leave(fault, fault.exit_code)
+    except typer.Abort as fault:
+        return _interrupted(fault)
+    except KeyboardInterrupt as fault:
+        return _interrupted(fault)
+    except MemoryError as fault:
+        _say(
+            "the machine ran out of memory; close other programs, or take a smaller cluster or one "
+            "that conserves more"
+        )
+        return _leave(fault, 5)
+    except BrokenPipeError:
+        # Whoever read the output has had enough (partita export … | head): not a fault.
+        _drop_stdout()
+        return 0
+    except OSError as fault:
+        where = fault.filename or "standard output"
+        reason = (fault.strerror or str(fault)).lower()
+        _say(f"{where}: {reason}; free space, or check the name and its permissions")
+        _drop_stdout()
+        return _leave(fault, 4)
+    except Exception as fault:
+        # Misuse of the command line, by whichever class this version of typer raises.
+        usage = getattr(fault, "format_message", None)
+        if usage is not None:
+            command = getattr(getattr(fault, "ctx", None), "command_path", "partita")
+            _say(f"{str(usage()).rstrip('.')}; see {command} --help")
+            return 2
+        _say(
+            f"unexpected fault ({type(fault).__name__}: {fault}); please report it, with the "
+            "output of the same command run with PARTITA_DEBUG=1 in the environment"
+        )
+        return _leave(fault, 1)
+    if code == 130:
+        return _interrupted(KeyboardInterrupt())
+    return code if isinstance(code, int) else 0
+
+
+def _interrupted(fault: BaseException) -> int:
+    _say("interrupted; nothing was written")
+    return _leave(fault, 130)
+
+
+def _leave(fault: BaseException, code: int) -> int:
+    if os.environ.get("PARTITA_DEBUG") == "1":
+        import traceback
+
+        traceback.print_exception(fault)
+    return code
+
+
+def _drop_stdout() -> None:
+    """Point standard output nowhere, so that the interpreter's last flush cannot fail again."""
+    with contextlib.suppress(OSError, ValueError):
+        os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+
+
+def main() -> None:
+    """Entry point of the command."""
+    import warnings
+
+    if os.environ.get("PARTITA_DEBUG") != "1":
+        warnings.simplefilter("ignore")
+    try:
+        code = run(sys.argv[1:])
+    except _Interrupted as fault:
+        # A thread deep in compiled code cannot be stopped: leave without waiting for it.
+        code = _interrupted(fault)
+        sys.stdout.flush()
+        os._exit(code)
+    sys.exit(code)
+
+
+if __name__ == "__main__":
+    main()
