@@ -1,4 +1,4 @@
-"""Settings every test shares: no display, repeatable random examples, a working installed command."""
+"""Settings all tests share: no display, repeatable random examples, the installed command."""
 
 from __future__ import annotations
 

@@ -261,8 +261,8 @@ def plot(
     ] = None,
 ) -> None:
     """Draw the curves, the fit or the levels of a file."""
-    target = Path(file.with_suffix(".png").name) if output is None else output
     check_source(file)
+    target = Path(file.with_suffix(".png").name) if output is None else output
     check_target(target, PICTURES, sources=(file,))
     import thermo
 
