@@ -15,7 +15,10 @@ from thermo.model.spin_model import Matrix
 
 def show(value: object) -> str:
     """The value as it should stand in a sentence: on one line and not too long."""
-    shown = repr(value)
+    try:
+        shown = repr(value)
+    except (RecursionError, ValueError):  # endless nesting, or thousands of digits
+        return "this value"
     return shown if len(shown) <= 60 else shown[:56] + " ..."
 
 
@@ -77,6 +80,8 @@ def number(value: object, path: str) -> float:
         result = math.inf
     if not math.isfinite(result):
         raise fault(path, f"{show(value)} is not a finite number; give one")
+    if abs(result) > 1e30:  # squares of products of two such numbers must not overflow
+        raise fault(path, f"{show(value)} is too large to compute with; give one below 1e30")
     return result
 
 
@@ -84,6 +89,8 @@ def whole(value: object, path: str) -> int:
     """A whole number."""
     if isinstance(value, bool) or not isinstance(value, int):
         raise fault(path, f"{show(value)} is not a whole number; give one, such as 4")
+    if abs(value) > 10**9:
+        raise fault(path, f"{show(value)} is far too large; give a small whole number")
     return value
 
 

@@ -84,7 +84,10 @@ def read_model(source: str | os.PathLike[str] | Mapping[str, Any]) -> SpinModel:
     the key. The cost is negligible.
     """
     if isinstance(source, Mapping):
-        data = plain(source)
+        try:
+            data = plain(source)
+        except RecursionError:
+            raise ModelError("the mapping is nested without end; give plain tables") from None
         # NaN is refused by build; until then the text only has to exist.
         return build(data, json.dumps(data, ensure_ascii=False), "mapping")
     if not isinstance(source, str | os.PathLike):
@@ -165,6 +168,8 @@ def plain(value: Any, path: str = "") -> Any:
         value = value.tolist()
     if isinstance(value, list | tuple):
         return [plain(v, f"{path}[{k}]") for k, v in enumerate(value)]
+    if isinstance(value, int) and value.bit_length() > 1000:
+        raise fault(path, "the number has hundreds of digits; give a smaller one")
     if isinstance(value, str | int | float):
         return value
     raise fault(path, f"{show(value)} has no place in a model; give numbers, strings, lists and "
@@ -180,12 +185,12 @@ def build(data: dict[str, Any], text: str, source: str) -> SpinModel:
     title = string(table.get("title", "untitled"), "title")
     unit = word(table.need("energy_unit", "one of 'K', 'meV', 'cm-1' or '1' (dimensionless)"),
                 "energy_unit", ENERGY_UNITS)
-    bond_term = word(
-        table.need("bond_term", "the term one bond adds to H, one of "
-                   + ", ".join(map(repr, BOND_TERMS)) + ", since the sign and factor of J differ "
-                   "between authors"),
-        "bond_term", list(BOND_TERMS),
-    )
+    offer = ("the term one bond adds to H, one of " + ", ".join(map(repr, BOND_TERMS))
+             + ", since authors differ in the sign and factor of J")
+    bond_term = table.need("bond_term", offer)
+    if not isinstance(bond_term, str) or bond_term not in BOND_TERMS:
+        # No guess at the nearest spelling: it would be a guess at the sign.
+        raise fault("bond_term", f"{show(bond_term)} is not known; give {offer}")
     per_formula = number(table.get("ions_per_formula", 1), "ions_per_formula")
     if per_formula <= 0:
         raise fault("ions_per_formula", f"{per_formula:g} is not positive; give the number of "

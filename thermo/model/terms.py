@@ -173,7 +173,8 @@ def read_bonds(value: object, path: str, names: Sequence[str], couplings: Mappin
         sites = listing(table.need("sites", "the names of its two sites"), table.at("sites"),
                         "the names of two sites")
         if len(sites) != 2:
-            raise fault(table.at("sites"), f"names {len(sites)} sites; a bond joins two")
+            raise fault(table.at("sites"), f"names {len(sites)} site(s), but a bond joins "
+                        "two; give two names")
         a, b = (site_index(s, f"{table.at('sites')}[{m}]", names) for m, s in enumerate(sites))
         offset = read_offset(table, dimension)
         if a == b and not any(offset):
