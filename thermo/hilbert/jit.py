@@ -1,0 +1,61 @@
+"""The one place that configures numba: where compiled kernels are kept, and how they compile.
+
+numba's cache does not notice edits in other files, so its folder is named after a hash of all
+kernel sources. It is looked for where caches of this user belong, then in the temporary
+folder; with neither writable the kernels are compiled anew each time.
+"""
+
+from __future__ import annotations
+
+import hashlib
+import os
+import tempfile
+from collections.abc import Callable
+from pathlib import Path
+from typing import Any, TypeVar
+
+import numba
+import platformdirs
+
+Function = TypeVar("Function", bound=Callable[..., Any])
+
+
+def _source_hash() -> str:
+    digest = hashlib.sha256(numba.__version__.encode())
+    for path in sorted(Path(__file__).parent.glob("*.py")):
+        digest.update(path.read_bytes())
+    return digest.hexdigest()[:16]
+
+
+def _writable(folder: Path) -> bool:
+    try:
+        folder.mkdir(parents=True, exist_ok=True)
+        with tempfile.TemporaryFile(dir=folder):
+            return True
+    except OSError:
+        return False
+
+
+def cache_folder() -> Path | None:
+    """The folder for compiled kernels, made if need be; None when no place is writable."""
+    name = f"kernels-{_source_hash()}"
+    places = [Path(tempfile.gettempdir()) / f"partita-{os.getuid() if hasattr(os, 'getuid') else 0}"]
+    try:
+        places.insert(0, Path(platformdirs.user_cache_dir("partita", appauthor=False)))
+    except (RuntimeError, KeyError):  # no home folder and no entry for this user
+        pass
+    for place in places:
+        if _writable(place / name):
+            return place / name
+    return None
+
+
+_FOLDER = cache_folder()
+if _FOLDER is not None and not os.environ.get("NUMBA_CACHE_DIR"):
+    numba.config.CACHE_DIR = str(_FOLDER)
+
+
+def kernel(function: Function) -> Function:
+    """Compile a kernel on plain arrays; it releases the interpreter while it runs."""
+    compiled: Function = numba.njit(cache=_FOLDER is not None, nogil=True)(function)
+    return compiled

@@ -1,0 +1,123 @@
+"""Pair and ion tensors as tables: a diagonal and the moves between configurations.
+
+A move takes a configuration to one other: it adds δ_i and δ_j to two digits, with an
+amplitude that depends on those two digits only. Amplitudes are linear in the channels
+(couplings), so changing a coupling changes tables of a few numbers and nothing else.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from thermo.hilbert.encoding import Encoding, Ints
+
+Tensors = NDArray[np.float64]
+
+
+def spin_matrices(twice_spin: int) -> NDArray[np.complex128]:
+    """Sˣ, Sʸ, Sᶻ of one spin, shape (3, d, d), in the basis m = −S … S."""
+    s = twice_spin / 2
+    m = np.arange(twice_spin + 1) - s
+    raising = np.zeros((twice_spin + 1, twice_spin + 1))
+    k = np.arange(twice_spin)
+    raising[k + 1, k] = np.sqrt(s * (s + 1) - m[:-1] * (m[:-1] + 1))
+    lowering = raising.T
+    return np.array([(raising + lowering) / 2, (raising - lowering) / 2j, np.diag(m)])
+
+
+@dataclass(frozen=True, eq=False)
+class MoveTables:
+    """Moves and diagonal of H for P channels, as flat arrays that kernels take.
+
+    Per move: ``site_i``, ``site_j`` (equal for a single-site move), ``step_i``, ``step_j``,
+    ``offset`` of its amplitudes. Per diagonal term: ``diagonal_i``, ``diagonal_j``,
+    ``diagonal_offset``. Amplitude of digits (a, b): entry offset + a·d_j + b of row p of
+    ``amplitudes`` (P, A) complex, or of ``diagonals`` (P, D) real; a single-site term has
+    b = 0 and d_j = 1. ``constant`` (P,) is what every configuration has in common.
+    """
+
+    site_i: Ints
+    site_j: Ints
+    step_i: Ints
+    step_j: Ints
+    offset: Ints
+    diagonal_i: Ints
+    diagonal_j: Ints
+    diagonal_offset: Ints
+    amplitudes: NDArray[np.complex128]
+    diagonals: NDArray[np.float64]
+
+    def combined(
+        self, values: NDArray[np.float64]
+    ) -> tuple[NDArray[np.complex128], NDArray[np.float64]]:
+        """Amplitudes and diagonals for one set of coupling values (P,)."""
+        return values @ self.amplitudes, values @ self.diagonals
+
+
+def _steps(operator: NDArray[np.complex128], di: int, dj: int) -> dict[tuple[int, int], Tensors]:
+    """Split a (P, d_i, d_j, d_i, d_j) operator [a′ b′ a b] by steps, tables over (a, b)."""
+    a, b = np.arange(di)[:, None], np.arange(dj)[None, :]
+    tables = {}
+    for step_i in range(-2, 3):
+        for step_j in range(-1, 2):
+            a_new, b_new = a + step_i, b + step_j
+            inside = (a_new >= 0) & (a_new < di) & (b_new >= 0) & (b_new < dj)
+            picked = operator[:, a_new.clip(0, di - 1), b_new.clip(0, dj - 1), a, b] * inside
+            if np.any(picked):
+                tables[step_i, step_j] = picked
+    return tables
+
+
+def move_tables(
+    encoding: Encoding, pair: Mapping[tuple[int, int], Tensors], ion: Mapping[int, Tensors]
+) -> MoveTables:
+    """Tables of Σ S_iᵀ A_ij S_j + Σ S_iᵀ D_i S_i; tensors have shape (P, 3, 3)."""
+    moves: list[tuple[int, int, int, int, Tensors]] = []
+    diagonal: list[tuple[int, int, Tensors]] = []
+    spins = [spin_matrices(int(d) - 1) for d in encoding.dimension]
+
+    def collect(i: int, j: int, tables: dict[tuple[int, int], Tensors]) -> None:
+        for (step_i, step_j), table in tables.items():
+            flat = table.reshape(len(table), -1)
+            if step_i == 0 and step_j == 0:
+                diagonal.append((i, j, flat.real))
+            else:
+                moves.append((i, j, step_i, step_j, flat))
+
+    for (i, j), a in sorted(pair.items()):
+        operator = np.einsum("pxy,xac,ybd->pabcd", a, spins[i], spins[j])
+        scale = np.abs(a).max()
+        operator = np.where(np.abs(operator) > 1e-15 * scale, operator, 0)
+        collect(i, j, _steps(operator, int(encoding.dimension[i]), int(encoding.dimension[j])))
+    for i, d in sorted(ion.items()):
+        operator = np.einsum("pxy,xab,ybc->pac", d, spins[i], spins[i])[:, :, None, :, None]
+        operator = np.where(np.abs(operator) > 1e-15 * np.abs(d).max(), operator, 0)
+        collect(i, i, _steps(operator, int(encoding.dimension[i]), 1))
+
+    def column(values: list[int]) -> Ints:
+        return np.array(values, dtype=np.int64)
+
+    def offsets(tables: list[Tensors]) -> Ints:
+        sizes = [t.shape[1] for t in tables]
+        return np.concatenate([[0], np.cumsum(sizes)]).astype(np.int64)[: len(tables)]
+
+    n_channels = len(next(iter([*pair.values(), *ion.values()]), np.zeros((1, 3, 3))))
+    amplitudes = [m[4] for m in moves]
+    diagonals = [d[2] for d in diagonal]
+    empty = np.zeros((n_channels, 0))
+    return MoveTables(
+        column([m[0] for m in moves]),
+        column([m[1] for m in moves]),
+        column([m[2] for m in moves]),
+        column([m[3] for m in moves]),
+        offsets(amplitudes),
+        column([d[0] for d in diagonal]),
+        column([d[1] for d in diagonal]),
+        offsets(diagonals),
+        np.concatenate([empty.astype(np.complex128), *amplitudes], axis=1),
+        np.concatenate([empty, *diagonals], axis=1),
+    )

@@ -1,0 +1,388 @@
+"""Full spectra: every block dense, eigenvalues by LAPACK, levels with exact multiplicities."""
+
+from __future__ import annotations
+
+import contextlib
+import functools
+import json
+import os
+import platform
+from collections.abc import Callable, Iterator, Mapping
+from dataclasses import dataclass
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from thermo.errors import ModelError, RangeError, SpectrumError, UnavailableError
+from thermo.hilbert import blocks, encoding, operators, orbits
+from thermo.model.level_table import LevelTable, check_levels
+from thermo.model.spin_model import SpinModel
+from thermo.model.traces import total_matrices
+from thermo.spectrum import lapack, planning
+from thermo.spectrum.memory import memory_limit
+from thermo.spectrum.tasks import run_tasks
+from thermo.symmetry.sectors import MagneticSector, Sector, plan_symmetry
+
+if TYPE_CHECKING:
+    import xarray as xr
+
+# Blocks below this dimension are solved side by side, one thread each; larger ones one after
+# the other with all threads (tests/bench/test_lapack.py).
+SIDE_BY_SIDE_BELOW = 1000
+# Λ in units of the width of the energy bounds; above ½ the windows of different S are apart.
+SHIFT = 0.6
+
+Progress = Callable[[float, str], None]
+
+
+@dataclass(frozen=True, eq=False)
+class _Structure:
+    """What all blocks of one M share, whatever the couplings' values."""
+
+    orbits: orbits.Orbits
+    links: orbits.Links
+    images: dict[bytes, orbits.Links]
+
+    @property
+    def nbytes(self) -> int:
+        """Memory held."""
+        return self.links.targets.nbytes + self.links.elements.nbytes
+
+
+class FullSolver:
+    """Full spectra of one model for many values of its couplings.
+
+    Symmetries are those that hold for *every* value of the couplings (``generic``), so the
+    orbits and links are found once and each further ``table`` call only fills and
+    diagonalises. Raises MemoryLimitError before anything large is allocated.
+    """
+
+    def __init__(
+        self,
+        model: SpinModel,
+        memory: int | float | str | None = None,
+        generic: bool = True,
+        **switches: bool,
+    ):
+        self.model = model
+        self._generic = generic
+        self._limit = memory_limit(memory)
+        self.plan = plan_symmetry(model, generic, **switches)
+        planning.refuse_if_too_large(self.plan, self._limit)
+        terms = self.plan.terms
+        self._encoding = encoding.encode(terms.twice_spin)
+        pair, ion = dict(terms.pair), dict(terms.ion)
+        n_channels = len(terms.scale)
+        if self.plan.conserved.total_spin:
+            # One more channel: S² without its constant, 2 Σ_{i<j} S_i·S_j.
+            for i in range(terms.n_sites):
+                for j in range(i + 1, terms.n_sites):
+                    old = pair.get((i, j), np.zeros((n_channels, 3, 3)))
+                    pair[i, j] = np.concatenate([old, 2 * np.eye(3)[None]])
+            ion = {k: np.concatenate([d, np.zeros((1, 3, 3))]) for k, d in ion.items()}
+        self._moves = operators.move_tables(self._encoding, pair, ion)
+        self._structures: dict[int, _Structure] = {}
+
+    def _values(self, model: SpinModel) -> NDArray[np.float64]:
+        if self._generic:
+            return np.array([model.couplings[name] for name in self.plan.terms.names])
+        return np.ones(1)
+
+    def _structure(self, magnetic: MagneticSector) -> _Structure:
+        if magnetic.twice_m in self._structures:
+            return self._structures[magnetic.twice_m]
+        code, elements = self._encoding, magnetic.elements
+        tables = encoding.element_tables(code, elements.permutations, elements.reversed)
+        halves = encoding.half_lists(
+            code, self.plan.terms.twice_spin, magnetic.twice_m, self.plan.conserved.modulus
+        )
+        found = orbits.find_orbits(code, halves, tables, magnetic.orbits)
+        links = orbits.find_links(code, found, tables, self._moves)
+        identity = np.arange(code.n_sites)
+        images: dict[bytes, orbits.Links] = {}
+        for sector in magnetic.sectors:
+            p = sector.conjugating
+            if p is None or np.array_equal(p, identity) or p.tobytes() in images:
+                continue
+            table = encoding.element_tables(code, p[None], np.zeros(1, dtype=bool))
+            images[p.tobytes()] = orbits.find_images(code, found, tables, table)
+        structure = _Structure(found, links, images)
+        held = sum(s.nbytes for s in self._structures.values())
+        if self._generic and held + structure.nbytes < self._limit // 4:
+            self._structures[magnetic.twice_m] = structure
+        return structure
+
+    def table(
+        self, couplings: Mapping[str, float] | None = None, progress: Progress | None = None
+    ) -> LevelTable:
+        """The levels for the given couplings (the model's own where not named), checked."""
+        return self.solve(couplings, progress)[0]
+
+    def solve(
+        self, couplings: Mapping[str, float] | None = None, progress: Progress | None = None
+    ) -> tuple[LevelTable, NDArray[np.int64]]:
+        """The checked levels and, for each, the index of its sector in ``plan.sectors``."""
+        model = self.model.with_couplings(couplings or {})
+        values = self._values(model)
+        low, high = energy_bounds(model)
+        shift = 0.0
+        if self.plan.conserved.total_spin:
+            shift = SHIFT * (high - low) if high > low else 1.0
+            values = np.append(values, shift)
+        tables = self._moves.combined(values)
+        costs = {id(s): planning.block_cost(s.dimension, s.real) for s in self.plan.sectors}
+        total, done = sum(costs.values()), 0.0
+        found: dict[int, NDArray[np.float64]] = {}
+        for magnetic in self.plan.magnetic:
+            structure = self._structure(magnetic)
+            for sector, energies in self._blocks(magnetic, structure, tables):
+                found[id(sector)] = energies
+                done += costs[id(sector)]
+                if progress is not None:
+                    text = f"{len(found)} of {len(costs)} blocks"
+                    progress(min(done / total, 1.0), text)
+        table, sectors = self._collect(found, shift, low, high)
+        check_levels(table, model)
+        return table, sectors
+
+    def _blocks(
+        self,
+        magnetic: MagneticSector,
+        structure: _Structure,
+        tables: tuple[NDArray[np.complex128], NDArray[np.float64]],
+    ) -> Iterator[tuple[Sector, NDArray[np.float64]]]:
+        ordered = sorted(magnetic.sectors, key=lambda s: (-s.dimension, not s.real))
+        large = [s for s in ordered if s.dimension >= SIDE_BY_SIDE_BELOW]
+        small = [s for s in ordered if s.dimension < SIDE_BY_SIDE_BELOW]
+        width = thread_count()
+        for group, workers, blas in ((large, 1, width), (small, width, 1)):
+            if not group:
+                continue
+            tasks = [
+                functools.partial(self._solve_block, s, magnetic, structure, tables) for s in group
+            ]
+            with blas_threads(blas):
+                for index, energies in run_tasks(tasks, workers):
+                    yield group[index], energies
+
+    def _solve_block(
+        self,
+        sector: Sector,
+        magnetic: MagneticSector,
+        structure: _Structure,
+        tables: tuple[NDArray[np.complex128], NDArray[np.float64]],
+    ) -> NDArray[np.float64]:
+        n = sector.dimension
+        block: NDArray[np.float64] | NDArray[np.complex128]
+        block = np.empty((n, n), dtype=np.float64 if sector.real else np.complex128, order="F")
+        p = sector.conjugating
+        images = structure.images.get(p.tobytes()) if p is not None else None
+        blocks.dense_block(
+            self._encoding, structure.orbits, structure.links, self._moves, *tables,
+            sector.phases, magnetic.elements.modulus, images, sector.real, block,
+        )  # fmt: skip
+        return lapack.eigenvalues(block)
+
+    def _collect(
+        self, found: dict[int, NDArray[np.float64]], shift: float, low: float, high: float
+    ) -> tuple[LevelTable, NDArray[np.int64]]:
+        energy, weight, twice_spin, twice_m, index = [], [], [], [], []
+        resolved = self.plan.resolved
+        casimir = float(np.sum(self.plan.terms.twice_spin * (self.plan.terms.twice_spin + 2)) / 4)
+        for k, sector in enumerate(self.plan.sectors):
+            values = found[id(sector)]
+            count = np.full(len(values), float(sector.multiplicity))
+            spin = np.full(len(values), -1, dtype=np.int64)
+            m = np.full(len(values), -1, dtype=np.int64)
+            if resolved == "total_spin":
+                shifted = values + shift * casimir
+                spin = _spin_by_window(shifted, shift, low, high, sector.twice_m)
+                values = shifted - shift * spin * (spin + 2) / 4
+                count *= spin + 1
+            elif resolved == "magnetic_number":
+                m[:] = abs(sector.twice_m)
+            energy.append(values)
+            weight.append(count)
+            twice_spin.append(spin)
+            twice_m.append(m)
+            index.append(np.full(len(values), k, dtype=np.int64))
+        joined = np.concatenate(energy)
+        order = np.argsort(joined, kind="stable")
+        table = LevelTable(
+            joined[order],
+            np.concatenate(weight)[order],
+            np.concatenate(twice_spin)[order],
+            np.concatenate(twice_m)[order],
+            resolved,
+            self.plan.terms.n_sites,
+        )
+        return table, np.concatenate(index)[order]
+
+
+def _spin_by_window(
+    shifted: NDArray[np.float64], shift: float, low: float, high: float, twice_m: int
+) -> NDArray[np.int64]:
+    """2S of each eigenvalue E + Λ S(S+1): the one S whose window [low, high] holds it."""
+    slack = 0.25 * (2 * shift - (high - low))
+    largest = np.sqrt(max(float(shifted.max() - low) / shift, 0.0) + 1.0) + 2
+    ladder = np.arange(twice_m, 2 * int(largest) + 3, 2)
+    floors = shift * ladder * (ladder + 2) / 4 + low - slack
+    place = np.searchsorted(floors, shifted, side="right") - 1
+    spin = ladder[place.clip(0)]
+    inside = shifted - shift * spin * (spin + 2) / 4
+    if np.any(place < 0) or np.any(inside > high + slack):
+        raise SpectrumError(
+            "an eigenvalue lies in the window of no total spin; a coupling may be too large "
+            "or too small for double precision"
+        )
+    return spin
+
+
+def energy_bounds(model: SpinModel) -> tuple[float, float]:
+    """Bounds of the spectrum: the sums of every pair's and ion's own extreme eigenvalues."""
+    pairs, ions = total_matrices(model)
+    low = high = 0.0
+    twice = [round(2 * s.spin) for s in model.sites]
+
+    @functools.cache
+    def pair_extremes(key: bytes, a: int, b: int) -> tuple[float, float]:
+        s, t = operators.spin_matrices(a), operators.spin_matrices(b)
+        matrix = np.frombuffer(key).reshape(3, 3)
+        local = np.einsum("xy,xac,ybd->abcd", matrix, s, t).reshape((a + 1) * (b + 1), -1)
+        ends = np.linalg.eigvalsh(local)
+        return float(ends[0]), float(ends[-1])
+
+    for (i, j), a in pairs.items():
+        bottom, top = pair_extremes(np.ascontiguousarray(a).tobytes(), twice[i], twice[j])
+        low, high = low + bottom, high + top
+    for i, d in ions.items():
+        s = operators.spin_matrices(twice[i])
+        ends = np.linalg.eigvalsh(np.einsum("xy,xab,ybc->ac", d, s, s))
+        low, high = low + float(ends[0]), high + float(ends[-1])
+    return low, high
+
+
+def thread_count() -> int:
+    """Threads to use: PARTITA_THREADS, else the cores this process may run on."""
+    text = os.environ.get("PARTITA_THREADS", "")
+    if text:
+        if not text.isdigit() or int(text) == 0:
+            raise RangeError(
+                f"PARTITA_THREADS is {text!r}, not a number of threads; set a whole number above 0"
+            )
+        return int(text)
+    if hasattr(os, "sched_getaffinity"):
+        return len(os.sched_getaffinity(0))
+    return os.cpu_count() or 1
+
+
+@functools.cache
+def _thread_pools() -> Any:
+    import scipy.linalg  # noqa: F401  both OpenBLAS copies must be loaded to be found
+    import threadpoolctl
+
+    return threadpoolctl.ThreadpoolController()
+
+
+
+@contextlib.contextmanager
+def blas_threads(count: int) -> Iterator[None]:
+    """Limit every BLAS of this process to ``count`` threads for a while."""
+    with _thread_pools().limit(limits=count, user_api="blas"):
+        yield
+
+
+def solve_full(
+    model: SpinModel,
+    memory: int | float | str | None = None,
+    progress: Progress | None = None,
+    **switches: bool,
+) -> xr.Dataset:
+    """The levels dataset of a model's full spectrum.
+
+    ``switches`` (use_total_spin, use_magnetization, use_permutations) turn symmetries off; the
+    result is the same, only slower. Cost: 4n³/3 operations per block of dimension n, four
+    times that for a complex one; peak memory is that of the largest block and its links.
+    """
+    solver = FullSolver(model, memory, generic=False, **switches)
+    table, sector = solver.solve(progress=progress)
+    return levels_dataset(model, solver, table, sector)
+
+
+def levels_dataset(
+    model: SpinModel, solver: FullSolver, table: LevelTable, sector: NDArray[np.int64]
+) -> xr.Dataset:
+    """Label a table of levels with everything its file must say."""
+    import numba
+    import scipy
+
+    from thermo.variables import build_levels
+
+    def halved(twice: NDArray[np.int64]) -> NDArray[np.float64]:
+        return np.where(twice < 0, np.nan, twice / 2)
+
+    plan = solver.plan
+    known_m = plan.conserved.modulus == 0
+    return build_levels(
+        {
+            "energy": table.energy,
+            "weight": table.weight,
+            "total_spin": halved(table.twice_spin),
+            "magnetic_number": halved(table.twice_m),
+            "vector": np.full(len(table.energy), -1),
+            "sector": sector,
+        },
+        {
+            "dimension": [s.dimension for s in plan.sectors],
+            "multiplicity": [float(s.multiplicity) for s in plan.sectors],
+            "magnetic_number": [s.twice_m / 2 if known_m else np.nan for s in plan.sectors],
+            "real": [int(s.real) for s in plan.sectors],
+        },
+        {
+            "title": model.title,
+            "method": "full",
+            "resolved": table.resolved,
+            "model_text": model.text,
+            "model_digest": model.digest,
+            "model_couplings": json.dumps({k: float(v) for k, v in model.couplings.items()}),
+            "energy_unit": model.energy_unit,
+            "bond_term": model.bond_term,
+            "n_sites": len(model.sites),
+            "ions_per_formula": float(model.ions_per_formula),
+            "seed": -1,
+            "versions": json.dumps(
+                {
+                    "python": platform.python_version(),
+                    "numpy": np.__version__,
+                    "scipy": scipy.__version__,
+                    "numba": numba.__version__,
+                }
+            ),
+        },
+    )
+
+
+def solve(
+    model: SpinModel,
+    method: str = "auto",
+    *,
+    memory: int | float | str | None = None,
+    progress: Progress | None = None,
+) -> xr.Dataset:
+    """Solve a model: the levels dataset that ``curves`` takes.
+
+    ``method``: "full" diagonalises every block; "auto" does so when it fits; "sampled" is not
+    part of this version. ``memory``: limit in bytes or as text ("4 GiB"), None for what is
+    free. ``progress(fraction, text)`` is called as blocks finish. Raises MemoryLimitError
+    before allocating a block that does not fit, SpectrumError if the self-check fails.
+    """
+    if not isinstance(model, SpinModel):
+        raise ModelError("solve takes a model from read_model; pass the file through it first")
+    if method == "sampled":
+        raise UnavailableError(
+            "sampled spectra are not part of this version; use method='full' on a smaller cluster"
+        )
+    if method not in ("full", "auto"):
+        raise RangeError(f"method {method!r} is unknown; use 'full' or 'auto'")
+    return solve_full(model, memory, progress)

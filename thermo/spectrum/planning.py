@@ -1,0 +1,215 @@
+"""What a full solution costs: memory, time, and whether it fits."""
+
+from __future__ import annotations
+
+import functools
+import time
+from dataclasses import asdict, dataclass
+from typing import Any
+
+import numpy as np
+
+from thermo.errors import MemoryLimitError
+from thermo.model.spin_model import SpinModel
+from thermo.spectrum.memory import memory_limit, size_text
+from thermo.symmetry.sectors import MagneticSector, SymmetryPlan, plan_symmetry
+
+# Seconds of one eigenvalue call as a n² + b n³ on the machine these were measured on (two
+# cores, tests/bench/test_lapack.py); survey rescales them by a short probe.
+_QUADRATIC, _CUBIC, _COMPLEX_FACTOR = 2.5e-8, 3.8e-11, 3.5
+_PROBE_SIZE, _PROBE_SECONDS = 500, 0.0085
+_LINK_SECONDS = 3e-9
+_START_SECONDS = 0.15
+# Beyond this time a full solution is no longer the sensible choice.
+_PATIENCE_SECONDS = 4 * 3600.0
+# Bytes per representative and move: int32 target, uint16 element.
+_LINK_BYTES = 6
+# Representative, its stabiliser, its slots and weights in the real basis.
+_ORBIT_BYTES = 100
+_BASE_BYTES = 60 * 2**20
+
+
+@dataclass(frozen=True)
+class SectorPlan:
+    """One kind of block: how large, how many of the whole space are equal to it."""
+
+    label: str
+    magnetic_number: float
+    dimension: int
+    multiplicity: int
+    real: bool
+
+
+@dataclass(frozen=True)
+class Plan:
+    """What solving a model would involve; see ``survey``.
+
+    ``conserved`` is "total_spin", "magnetic_number", "parity" or "none"; ``group_order``
+    counts the site permutations that leave H unchanged and ``abelian_order`` those used to
+    split it; ``memory_bytes`` is the peak of a full solution, ``seconds`` its time on this
+    machine, ``method`` what would be chosen. ``largest`` is the largest block's dimension.
+    """
+
+    title: str
+    sites: int
+    bonds: int
+    couplings: dict[str, float]
+    energy_unit: str
+    conserved: str
+    group_order: int
+    abelian_order: int
+    spin_reversal: bool
+    sectors: tuple[SectorPlan, ...]
+    n_states: int
+    largest: int
+    memory_bytes: int
+    memory_limit: int
+    seconds: float
+    method: str
+    notes: tuple[str, ...]
+
+    def as_dict(self) -> dict[str, Any]:
+        """The plan as plain data."""
+        return asdict(self)
+
+
+def move_count(plan: SymmetryPlan) -> int:
+    """Number of moves H (with the total-spin shift) makes from a configuration, at most."""
+    n = plan.terms.n_sites
+    if plan.conserved.total_spin:
+        return n * (n - 1)
+    per_pair = {0: 2, 2: 4, 1: 8}[plan.conserved.modulus]
+    return per_pair * len(plan.terms.pair) + 4 * len(plan.terms.ion)
+
+
+def block_bytes(dimension: int, real: bool) -> int:
+    """Memory of a dense block while its eigenvalues are computed."""
+    item = 8 if real else 16
+    return item * dimension * (dimension + 120)
+
+
+def sector_bytes(magnetic: MagneticSector, moves: int, n_sites: int) -> int:
+    """Peak memory for all blocks of one M: orbits, links, the half lists, the largest block."""
+    orbits = magnetic.orbits * (_ORBIT_BYTES + moves * _LINK_BYTES)
+    halves = 40 * int(magnetic.configurations ** 0.5 + 1) * n_sites
+    blocks = sorted((block_bytes(s.dimension, s.real) for s in magnetic.sectors), reverse=True)
+    return orbits + halves + sum(blocks[:1])
+
+
+def memory_needed(plan: SymmetryPlan) -> int:
+    """Peak memory of a full solution, bytes."""
+    moves = move_count(plan)
+    peak = max(sector_bytes(m, moves, plan.terms.n_sites) for m in plan.magnetic)
+    levels = 64 * sum(s.dimension for s in plan.sectors)
+    return peak + levels + _BASE_BYTES
+
+
+def refuse_if_too_large(plan: SymmetryPlan, limit: int) -> None:
+    """Raise MemoryLimitError, before anything is allocated, when a full solution cannot fit."""
+    needed = memory_needed(plan)
+    if needed <= limit:
+        return
+    largest = max(plan.sectors, key=lambda s: block_bytes(s.dimension, s.real))
+    kind = "real" if largest.real else "complex"
+    raise MemoryLimitError(
+        f"the largest block has {largest.dimension:,} states ({kind}), so the full spectrum "
+        f"needs {size_text(needed)} where the limit is {size_text(limit)}; take a smaller "
+        "cluster, keep more symmetry (equal couplings, isotropic or axial terms), or raise "
+        "memory= if the machine has more"
+    )
+
+
+@functools.cache
+def _speed_factor() -> float:
+    """This machine's time for a block relative to the one the constants come from."""
+    from thermo.spectrum.lapack import eigenvalues
+
+    rng = np.random.default_rng(0)
+    block = np.asfortranarray(rng.standard_normal((_PROBE_SIZE, _PROBE_SIZE)))
+    best = np.inf
+    for _ in range(4):
+        trial = block.copy(order="F")
+        start = time.perf_counter()
+        eigenvalues(trial)
+        best = min(best, time.perf_counter() - start)
+    return float(best) / _PROBE_SECONDS
+
+
+def block_cost(dimension: int, real: bool) -> float:
+    """Seconds for one block on the reference machine."""
+    n = float(dimension)
+    return (_QUADRATIC * n**2 + _CUBIC * n**3) * (1.0 if real else _COMPLEX_FACTOR)
+
+
+def time_needed(plan: SymmetryPlan) -> float:
+    """Seconds of a full solution on this machine: a probe of LAPACK scales known constants."""
+    blocks = sum(block_cost(s.dimension, s.real) for s in plan.sectors)
+    links = sum(m.orbits * m.elements.order for m in plan.magnetic) * move_count(plan)
+    scan = sum(m.configurations for m in plan.magnetic) * 4
+    return _START_SECONDS + _speed_factor() * (blocks + _LINK_SECONDS * (links + scan))
+
+
+def survey(model: SpinModel, memory: int | float | str | None = None) -> Plan:
+    """What solving a model would involve, without solving it.
+
+    ``memory``: the limit in bytes or as a text ("4 GiB"); None means what is free now.
+    The symmetry is found, the blocks are counted (exactly, for any size), memory and time are
+    estimated; nothing large is allocated. The time is a forecast for an idle machine, good to
+    about a factor of two.
+    """
+    limit = memory_limit(memory)
+    symmetry = plan_symmetry(model)
+    needed = memory_needed(symmetry)
+    seconds = time_needed(symmetry)
+    notes = list(model.notes)
+    method = "full"
+    if needed > limit or seconds > _PATIENCE_SECONDS:
+        method = "sampled"
+        reason = "memory" if needed > limit else "time"
+        notes.append(
+            f"the full spectrum exceeds the {reason} at hand, and sampling is not part of this "
+            "version yet; a smaller cluster or more symmetry is the way out"
+        )
+    return Plan(
+        title=model.title,
+        sites=len(model.sites),
+        bonds=len({(min(b.i, b.j), max(b.i, b.j)) for b in model.bonds}),
+        couplings=dict(model.couplings),
+        energy_unit=model.energy_unit,
+        conserved=symmetry.conserved.name,
+        group_order=symmetry.group_order,
+        abelian_order=symmetry.abelian.order,
+        spin_reversal=any(s.parity for s in symmetry.sectors),
+        sectors=tuple(
+            SectorPlan(
+                label=_label(s.twice_m, s.character, s.parity, symmetry),
+                magnetic_number=s.twice_m / 2,
+                dimension=s.dimension,
+                multiplicity=s.multiplicity,
+                real=s.real,
+            )
+            for s in symmetry.sectors
+        ),
+        n_states=model.n_states,
+        largest=max(s.dimension for s in symmetry.sectors),
+        memory_bytes=needed,
+        memory_limit=limit,
+        seconds=seconds,
+        method=method,
+        notes=tuple(notes),
+    )
+
+
+def _label(twice_m: int, character: int, parity: int, plan: SymmetryPlan) -> str:
+    m = f"{twice_m // 2}" if twice_m % 2 == 0 else f"{twice_m}/2"
+    if plan.conserved.modulus == 0:
+        text = f"M = {m}"
+    elif plan.conserved.modulus == 2:
+        text = f"M = {m} modulo 2"
+    else:
+        text = "all M"
+    if plan.abelian.order > 1:
+        text += f", character {character}"
+    if parity:
+        text += ", even" if parity > 0 else ", odd"
+    return text
