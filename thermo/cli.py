@@ -68,6 +68,16 @@ class Per(StrEnum):
     formula = "formula"
 
 
+ModelFile = Annotated[Path, typer.Argument(metavar="MODEL", help="Model file (TOML or JSON).")]
+Memory = Annotated[
+    str | None,
+    typer.Option(metavar="SIZE", help='Memory limit, for example "4 GiB"; default: what is free.'),
+]
+Threads = Annotated[
+    int | None, typer.Option(min=1, metavar="N", help="Processor cores to use; default: all.")
+]
+
+
 def _show_version(value: bool) -> None:
     if value:
         print(f"partita {__version__}")
@@ -93,10 +103,8 @@ def _partita(
 
 @app.command()
 def survey(
-    model: Annotated[Path, typer.Argument(metavar="MODEL", help="Model file (TOML or JSON).")],
-    memory: Annotated[
-        str | None, typer.Option(metavar="SIZE", help='Memory limit, for example "4 GiB".')
-    ] = None,
+    model: ModelFile,
+    memory: Memory = None,
 ) -> None:
     """Show what a model conserves, its blocks, and the work ahead."""
     limit = parse_size(memory)
@@ -109,20 +117,13 @@ def survey(
 
 @app.command()
 def solve(
-    model: Annotated[Path, typer.Argument(metavar="MODEL", help="Model file (TOML or JSON).")],
+    model: ModelFile,
     output: Annotated[
         Path, typer.Option("--output", "-o", metavar="FILE", help="Where the levels go (.nc).")
     ],
     method: Annotated[Method, typer.Option(help="How to find the levels.")] = Method.auto,
-    memory: Annotated[
-        str | None,
-        typer.Option(
-            metavar="SIZE", help='Memory limit, for example "4 GiB"; default: what is free.'
-        ),
-    ] = None,
-    threads: Annotated[
-        int | None, typer.Option(min=1, metavar="N", help="Processor cores to use; default: all.")
-    ] = None,
+    memory: Memory = None,
+    threads: Threads = None,
 ) -> None:
     """Find all levels of a model and write them to a file."""
     limit = parse_size(memory)
@@ -218,11 +219,11 @@ def fit(
             "--picture", metavar="FILE", help="Picture of data, fit and residuals (.png .svg .pdf)."
         ),
     ] = None,
-    threads: Annotated[
-        int | None, typer.Option(min=1, metavar="N", help="Processor cores to use; default: all.")
-    ] = None,
+    memory: Memory = None,
+    threads: Threads = None,
 ) -> None:
     """Fit exchange constants to measured curves and print the result."""
+    limit = parse_size(memory)
     check_source(study)
     if output is not None:
         check_target(output, (".nc",), sources=(study,))
@@ -234,8 +235,10 @@ def fit(
 
     problem = thermo.read_study(study)
     _tell_notes(problem.model.notes)
-    result = _work(lambda report: thermo.fit(problem, progress=report)).to_dataset()
+    found = _work(lambda report: thermo.fit(problem, progress=report, memory=limit))
+    result = found.to_dataset()
     print_fit(result)
+    _tell_notes(found.cautions)
     if output is not None:
         thermo.write(result, output)
         _confirm(f"wrote {output}")
@@ -257,7 +260,15 @@ def plot(
         ),
     ] = None,
     what: Annotated[
-        str | None, typer.Option(metavar="QUANTITY", help="What to draw; default: all there is.")
+        str | None,
+        typer.Option(
+            metavar="NAMES",
+            help='Curves to draw, for example "specific_heat,chi_T", or the name of a data set of '
+            "a fit; default: all there is.",
+        ),
+    ] = None,
+    units: Annotated[
+        Units | None, typer.Option(help="Units of the curves; default: those of the file.")
     ] = None,
 ) -> None:
     """Draw the curves, the fit or the levels of a file."""
@@ -266,8 +277,8 @@ def plot(
     check_target(target, PICTURES, sources=(file,))
     import thermo
 
-    options = {} if what is None else {"what": what}
-    thermo.plot(thermo.read(file), target, **options)
+    system = None if units is None else units.value
+    thermo.plot(thermo.read(file), target, what=what, units_system=system)
     _confirm(f"wrote {target}")
 
 
@@ -278,8 +289,12 @@ def export(
         Path | None,
         typer.Option("--output", "-o", metavar="FILE", help=".csv; default: standard output."),
     ] = None,
+    what: Annotated[
+        str | None,
+        typer.Option(metavar="TABLE", help="Of a fit: points (default) or parameters."),
+    ] = None,
     units: Annotated[
-        Units | None, typer.Option(help="Units of the table; default: those of the file.")
+        Units | None, typer.Option(help="Units of the curves; default: those of the file.")
     ] = None,
 ) -> None:
     """Write the table in a file as CSV, with units in its header."""
@@ -288,8 +303,9 @@ def export(
         check_target(output, (".csv",), sources=(file,))
     import thermo
 
-    options = {} if units is None else {"units_system": units.value}
-    thermo.export_csv(thermo.read(file), sys.stdout if output is None else output, **options)
+    system = None if units is None else units.value
+    target = sys.stdout if output is None else output
+    thermo.export_csv(thermo.read(file), target, units_system=system, what=what)
     if output is not None:
         _confirm(f"wrote {output}")
 
