@@ -313,8 +313,8 @@ def export(
 def _set_threads(threads: int | None) -> None:
     """Bound every thread pool; they read these when they are first loaded."""
     if threads is not None:
-        for name in ("OMP_NUM_THREADS", "OPENBLAS_NUM_THREADS", "NUMBA_NUM_THREADS"):
-            os.environ[name] = str(threads)
+        pools = ("OMP_NUM_THREADS", "OPENBLAS_NUM_THREADS", "NUMBA_NUM_THREADS")
+        os.environ.update(dict.fromkeys(("PARTITA_THREADS", *pools), str(threads)))
 
 
 # ---------------------------------------------------------------- what the user is told
