@@ -348,7 +348,7 @@ class _Bar:
     def __init__(self) -> None:
         self.started = time.monotonic()
         self.done = 0.0
-        self.text = ""
+        self.text = "preparing"
         self.bar: Any = None
         self.task: Any = None
 
