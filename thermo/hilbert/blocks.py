@@ -25,7 +25,7 @@ from thermo.hilbert.orbits import Links, Orbits
 
 
 @kernel
-def _diagonal(c, shift, mask, dimension, site_i, site_j, offset, values):  # type: ignore[no-untyped-def]
+def _diagonal(c, shift, mask, dimension, site_i, site_j, offset, values):
     total = 0.0
     for k in range(site_i.shape[0]):
         i, j = site_i[k], site_j[k]
@@ -38,7 +38,7 @@ def _diagonal(c, shift, mask, dimension, site_i, site_j, offset, values):  # typ
 
 
 @kernel
-def _amplitude(c, m, shift, mask, dimension, site_i, site_j, offset, values):  # type: ignore[no-untyped-def]
+def _amplitude(c, m, shift, mask, dimension, site_i, site_j, offset, values):
     i, j = site_i[m], site_j[m]
     a = (c >> shift[i]) & mask[i]
     if i == j:
@@ -47,7 +47,7 @@ def _amplitude(c, m, shift, mask, dimension, site_i, site_j, offset, values):  #
 
 
 @kernel
-def _add_real(H, t, r, z, slots, weights):  # type: ignore[no-untyped-def]
+def _add_real(H, t, r, z, slots, weights):
     """Add the element z = ⟨t|H|r⟩ to the real block: Re(u_t* z u_r) over the real vectors u."""
     for x in range(2):
         row = slots[t, x]
@@ -62,7 +62,7 @@ def _add_real(H, t, r, z, slots, weights):  # type: ignore[no-untyped-def]
 
 
 @kernel
-def _fill_real(  # type: ignore[no-untyped-def]
+def _fill_real(
     H, representatives, root_stabiliser, targets, elements, slots, weights, character,
     shift, mask, dimension, site_i, site_j, offset, amplitudes,
     diagonal_i, diagonal_j, diagonal_offset, diagonals,
@@ -71,9 +71,7 @@ def _fill_real(  # type: ignore[no-untyped-def]
         if slots[r, 0] < 0:
             continue
         c = representatives[r]
-        z = _diagonal(
-            c, shift, mask, dimension, diagonal_i, diagonal_j, diagonal_offset, diagonals
-        )
+        z = _diagonal(c, shift, mask, dimension, diagonal_i, diagonal_j, diagonal_offset, diagonals)
         _add_real(H, r, r, z + 0j, slots, weights)
         for m in range(targets.shape[1]):
             t = targets[r, m]
@@ -85,7 +83,7 @@ def _fill_real(  # type: ignore[no-untyped-def]
 
 
 @kernel
-def _fill_complex(  # type: ignore[no-untyped-def]
+def _fill_complex(
     H, representatives, root_stabiliser, targets, elements, slots, character,
     shift, mask, dimension, site_i, site_j, offset, amplitudes,
     diagonal_i, diagonal_j, diagonal_offset, diagonals,

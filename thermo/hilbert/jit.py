@@ -7,17 +7,16 @@ folder; with neither writable the kernels are compiled anew each time.
 
 from __future__ import annotations
 
+import contextlib
 import hashlib
 import os
 import tempfile
 from collections.abc import Callable
 from pathlib import Path
-from typing import Any, TypeVar
+from typing import Any
 
 import numba
 import platformdirs
-
-Function = TypeVar("Function", bound=Callable[..., Any])
 
 
 def _source_hash() -> str:
@@ -39,11 +38,11 @@ def _writable(folder: Path) -> bool:
 def cache_folder() -> Path | None:
     """The folder for compiled kernels, made if need be; None when no place is writable."""
     name = f"kernels-{_source_hash()}"
-    places = [Path(tempfile.gettempdir()) / f"partita-{os.getuid() if hasattr(os, 'getuid') else 0}"]
-    try:
+    user = os.getuid() if hasattr(os, "getuid") else 0
+    places = [Path(tempfile.gettempdir()) / f"partita-{user}"]
+    # A user may have neither a home folder nor an entry in the system's list.
+    with contextlib.suppress(RuntimeError, KeyError):
         places.insert(0, Path(platformdirs.user_cache_dir("partita", appauthor=False)))
-    except (RuntimeError, KeyError):  # no home folder and no entry for this user
-        pass
     for place in places:
         if _writable(place / name):
             return place / name
@@ -55,7 +54,6 @@ if _FOLDER is not None and not os.environ.get("NUMBA_CACHE_DIR"):
     numba.config.CACHE_DIR = str(_FOLDER)
 
 
-def kernel(function: Function) -> Function:
+def kernel(function: Callable[..., Any]) -> Any:
     """Compile a kernel on plain arrays; it releases the interpreter while it runs."""
-    compiled: Function = numba.njit(cache=_FOLDER is not None, nogil=True)(function)
-    return compiled
+    return numba.njit(cache=_FOLDER is not None, nogil=True)(function)

@@ -7,8 +7,9 @@ amplitude that depends on those two digits only. Amplitudes are linear in the ch
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -58,7 +59,9 @@ class MoveTables:
         return values @ self.amplitudes, values @ self.diagonals
 
 
-def _steps(operator: NDArray[np.complex128], di: int, dj: int) -> dict[tuple[int, int], Tensors]:
+def _steps(
+    operator: NDArray[np.complex128], di: int, dj: int
+) -> dict[tuple[int, int], NDArray[np.complex128]]:
     """Split a (P, d_i, d_j, d_i, d_j) operator [a′ b′ a b] by steps, tables over (a, b)."""
     a, b = np.arange(di)[:, None], np.arange(dj)[None, :]
     tables = {}
@@ -76,11 +79,11 @@ def move_tables(
     encoding: Encoding, pair: Mapping[tuple[int, int], Tensors], ion: Mapping[int, Tensors]
 ) -> MoveTables:
     """Tables of Σ S_iᵀ A_ij S_j + Σ S_iᵀ D_i S_i; tensors have shape (P, 3, 3)."""
-    moves: list[tuple[int, int, int, int, Tensors]] = []
+    moves: list[tuple[int, int, int, int, NDArray[np.complex128]]] = []
     diagonal: list[tuple[int, int, Tensors]] = []
     spins = [spin_matrices(int(d) - 1) for d in encoding.dimension]
 
-    def collect(i: int, j: int, tables: dict[tuple[int, int], Tensors]) -> None:
+    def collect(i: int, j: int, tables: dict[tuple[int, int], NDArray[np.complex128]]) -> None:
         for (step_i, step_j), table in tables.items():
             flat = table.reshape(len(table), -1)
             if step_i == 0 and step_j == 0:
@@ -101,7 +104,7 @@ def move_tables(
     def column(values: list[int]) -> Ints:
         return np.array(values, dtype=np.int64)
 
-    def offsets(tables: list[Tensors]) -> Ints:
+    def offsets(tables: Sequence[NDArray[Any]]) -> Ints:
         sizes = [t.shape[1] for t in tables]
         return np.concatenate([[0], np.cumsum(sizes)]).astype(np.int64)[: len(tables)]
 

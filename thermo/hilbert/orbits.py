@@ -19,7 +19,7 @@ from thermo.hilbert.operators import MoveTables
 
 
 @kernel
-def _image(c, tables, g, chunk_shift, chunk_mask):  # type: ignore[no-untyped-def]
+def _image(c, tables, g, chunk_shift, chunk_mask):
     image = np.int64(0)
     for k in range(chunk_shift.shape[0]):
         image += tables[g, k, (c >> chunk_shift[k]) & chunk_mask[k]]
@@ -27,7 +27,7 @@ def _image(c, tables, g, chunk_shift, chunk_mask):  # type: ignore[no-untyped-de
 
 
 @kernel
-def _smallest_image(c, tables, chunk_shift, chunk_mask):  # type: ignore[no-untyped-def]
+def _smallest_image(c, tables, chunk_shift, chunk_mask):
     """The representative of c's orbit and the first element that carries c to it."""
     best, element = c, 0
     for g in range(1, tables.shape[0]):
@@ -38,7 +38,7 @@ def _smallest_image(c, tables, chunk_shift, chunk_mask):  # type: ignore[no-unty
 
 
 @kernel
-def _locate(representatives, value):  # type: ignore[no-untyped-def]
+def _locate(representatives, value):
     low, high = 0, representatives.shape[0] - 1
     while low < high:
         middle = (low + high) >> 1
@@ -50,7 +50,7 @@ def _locate(representatives, value):  # type: ignore[no-untyped-def]
 
 
 @kernel
-def _representatives(  # type: ignore[no-untyped-def]
+def _representatives(
     high, partner, low, low_start, tables, chunk_shift, chunk_mask, found, stabilisers
 ):
     """Fill ``found`` with each orbit's smallest member, ascending, and ``stabilisers`` with how
@@ -78,7 +78,7 @@ def _representatives(  # type: ignore[no-untyped-def]
 
 
 @kernel
-def _fixing(representatives, start, tables, chunk_shift, chunk_mask, elements):  # type: ignore[no-untyped-def]
+def _fixing(representatives, start, tables, chunk_shift, chunk_mask, elements):
     """The non-trivial elements that fix each representative, ``start[r]:start[r+1]``."""
     for r in range(representatives.shape[0]):
         position = start[r]
@@ -92,7 +92,7 @@ def _fixing(representatives, start, tables, chunk_shift, chunk_mask, elements): 
 
 
 @kernel
-def _links(  # type: ignore[no-untyped-def]
+def _links(
     representatives, tables, chunk_shift, chunk_mask, dimension, shift, mask,
     site_i, site_j, step_i, step_j, targets, elements,
 ):  # fmt: skip
@@ -112,7 +112,7 @@ def _links(  # type: ignore[no-untyped-def]
 
 
 @kernel
-def _images(representatives, table, tables, chunk_shift, chunk_mask, targets, elements):  # type: ignore[no-untyped-def]
+def _images(representatives, table, tables, chunk_shift, chunk_mask, targets, elements):
     for r in range(representatives.shape[0]):
         moved = _image(representatives[r], table, 0, chunk_shift, chunk_mask)
         best, element = _smallest_image(moved, tables, chunk_shift, chunk_mask)
@@ -136,7 +136,8 @@ class Orbits:
     def allowed(self, phases: Ints) -> NDArray[np.bool_]:
         """Which orbits carry a state of the character with the given exponents (R,)."""
         forbidden = np.concatenate([[0], np.cumsum(phases[self.fixing] != 0)])
-        return forbidden[self.start[1:]] == forbidden[self.start[:-1]]
+        allowed: NDArray[np.bool_] = forbidden[self.start[1:]] == forbidden[self.start[:-1]]
+        return allowed
 
 
 @dataclass(frozen=True, eq=False)

@@ -15,7 +15,8 @@ import numpy as np
 from numpy.typing import NDArray
 
 from thermo.errors import ModelError, RangeError, SpectrumError, UnavailableError
-from thermo.hilbert import blocks, encoding, operators, orbits
+from thermo.hilbert import blocks, encoding, operators
+from thermo.hilbert.orbits import Links, Orbits, find_images, find_links, find_orbits
 from thermo.model.level_table import LevelTable, check_levels
 from thermo.model.spin_model import SpinModel
 from thermo.model.traces import total_matrices
@@ -40,14 +41,14 @@ Progress = Callable[[float, str], None]
 class _Structure:
     """What all blocks of one M share, whatever the couplings' values."""
 
-    orbits: orbits.Orbits
-    links: orbits.Links
-    images: dict[bytes, orbits.Links]
+    orbits: Orbits
+    links: Links
+    images: dict[bytes, Links]
 
     @property
     def nbytes(self) -> int:
         """Memory held."""
-        return self.links.targets.nbytes + self.links.elements.nbytes
+        return int(self.links.targets.nbytes + self.links.elements.nbytes)
 
 
 class FullSolver:
@@ -97,16 +98,16 @@ class FullSolver:
         halves = encoding.half_lists(
             code, self.plan.terms.twice_spin, magnetic.twice_m, self.plan.conserved.modulus
         )
-        found = orbits.find_orbits(code, halves, tables, magnetic.orbits)
-        links = orbits.find_links(code, found, tables, self._moves)
+        found = find_orbits(code, halves, tables, magnetic.orbits)
+        links = find_links(code, found, tables, self._moves)
         identity = np.arange(code.n_sites)
-        images: dict[bytes, orbits.Links] = {}
+        images: dict[bytes, Links] = {}
         for sector in magnetic.sectors:
             p = sector.conjugating
             if p is None or np.array_equal(p, identity) or p.tobytes() in images:
                 continue
             table = encoding.element_tables(code, p[None], np.zeros(1, dtype=bool))
-            images[p.tobytes()] = orbits.find_images(code, found, tables, table)
+            images[p.tobytes()] = find_images(code, found, tables, table)
         structure = _Structure(found, links, images)
         held = sum(s.nbytes for s in self._structures.values())
         if self._generic and held + structure.nbytes < self._limit // 4:
@@ -174,8 +175,7 @@ class FullSolver:
         tables: tuple[NDArray[np.complex128], NDArray[np.float64]],
     ) -> NDArray[np.float64]:
         n = sector.dimension
-        block: NDArray[np.float64] | NDArray[np.complex128]
-        block = np.empty((n, n), dtype=np.float64 if sector.real else np.complex128, order="F")
+        block: NDArray[Any] = np.empty((n, n), np.float64 if sector.real else complex, order="F")
         p = sector.conjugating
         images = structure.images.get(p.tobytes()) if p is not None else None
         blocks.dense_block(
@@ -229,7 +229,7 @@ def _spin_by_window(
     ladder = np.arange(twice_m, 2 * int(largest) + 3, 2)
     floors = shift * ladder * (ladder + 2) / 4 + low - slack
     place = np.searchsorted(floors, shifted, side="right") - 1
-    spin = ladder[place.clip(0)]
+    spin: NDArray[np.int64] = ladder[place.clip(0)]
     inside = shifted - shift * spin * (spin + 2) / 4
     if np.any(place < 0) or np.any(inside > high + slack):
         raise SpectrumError(
@@ -283,7 +283,6 @@ def _thread_pools() -> Any:
     import threadpoolctl
 
     return threadpoolctl.ThreadpoolController()
-
 
 
 @contextlib.contextmanager

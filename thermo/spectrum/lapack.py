@@ -63,7 +63,9 @@ def _call(library: _Library, block: Block, two_stage: bool) -> NDArray[np.float6
     def pointer(array: NDArray[Any]) -> ctypes.c_void_p:
         return array.ctypes.data_as(ctypes.c_void_p)
 
-    def run(work: NDArray[Any], lwork: int, rwork: Any, lrwork: int, iwork: Any, liwork: int) -> None:
+    def run(
+        work: NDArray[Any], lwork: int, rwork: Any, lrwork: int, iwork: Any, liwork: int
+    ) -> None:
         sizes = [(work, lwork)]
         if complex_block:
             sizes.append((rwork, lrwork))
@@ -121,7 +123,7 @@ def eigenvalues(block: Block, two_stage: bool | None = None) -> NDArray[np.float
         return np.array([block[0, 0].real])
     library = _library()
     if library is None:
-        return np.linalg.eigvalsh(block)
+        return np.asarray(np.linalg.eigvalsh(block), dtype=np.float64)
     if two_stage is None:
         kind = "complex" if np.iscomplexobj(block) else "real"
         two_stage = n >= TWO_STAGE_FROM[kind]

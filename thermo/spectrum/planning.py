@@ -91,7 +91,7 @@ def block_bytes(dimension: int, real: bool) -> int:
 def sector_bytes(magnetic: MagneticSector, moves: int, n_sites: int) -> int:
     """Peak memory for all blocks of one M: orbits, links, the half lists, the largest block."""
     orbits = magnetic.orbits * (_ORBIT_BYTES + moves * _LINK_BYTES)
-    halves = 40 * int(magnetic.configurations ** 0.5 + 1) * n_sites
+    halves = 40 * int(magnetic.configurations**0.5 + 1) * n_sites
     blocks = sorted((block_bytes(s.dimension, s.real) for s in magnetic.sectors), reverse=True)
     return orbits + halves + sum(blocks[:1])
 

@@ -10,9 +10,7 @@ from typing import TypeVar
 Result = TypeVar("Result")
 
 
-def run_tasks(
-    tasks: Sequence[Callable[[], Result]], workers: int
-) -> Iterator[tuple[int, Result]]:
+def run_tasks(tasks: Sequence[Callable[[], Result]], workers: int) -> Iterator[tuple[int, Result]]:
     """Yield (index, result) as tasks finish; the first exception is raised here.
 
     The work must release the interpreter to gain from several workers. Threads are daemons

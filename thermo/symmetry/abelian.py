@@ -84,7 +84,8 @@ class AbelianGroup:
             for p in normaliser.members:
                 square = self.index_of(p[p])
                 if square is not None and self.exponents[character, square] == 0:
-                    return p
+                    involution: Permutation = p
+                    return involution
         return None
 
     def stars(self, real_hamiltonian: bool) -> list[list[int]]:
@@ -268,7 +269,9 @@ def choose_abelian(
     types.pop((1,) * group.degree, None)
     by_order = sorted(types.values(), key=_order, reverse=True)
     # Long cycles make few large steps; elements that move few sites commute with many others.
-    few = by_order if len(by_order) <= SEEDS else [*by_order[: SEEDS // 2], *by_order[-SEEDS // 2 :]]
+    few = (
+        by_order if len(by_order) <= SEEDS else [*by_order[: SEEDS // 2], *by_order[-SEEDS // 2 :]]
+    )
     for seed in few:
         candidates.append(_grow([seed], pool))
     built = [_build(generators, pool) for generators in candidates]

@@ -184,9 +184,7 @@ def automorphism_group(colours: NDArray[np.int64]) -> Group:
         for target in map(int, np.flatnonzero(labels == labels[point])):
             if target in orbit or target in refuted:
                 continue
-            found = _extend(
-                colours, _individualise(labels, point), _individualise(labels, target)
-            )
+            found = _extend(colours, _individualise(labels, point), _individualise(labels, target))
             if found is None:
                 # No element reaches this target, so none reaches its orbit.
                 refuted.update(_orbit(target, group.generators, n))
