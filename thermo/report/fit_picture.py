@@ -1,0 +1,141 @@
+"""The picture of a fit: each data set with the fitted curve, and its residuals below."""
+
+from __future__ import annotations
+
+import textwrap
+from typing import Any
+
+import numpy as np
+import xarray as xr
+from matplotlib.axes import Axes
+
+from thermo.errors import UnavailableError
+from thermo.report import style
+from thermo.report.numbers import plain, with_uncertainty
+from thermo.report.quantities import SYMBOLS, axis_label, power_of_thousand
+
+
+def draw_fit(fit: xr.Dataset, chosen: list[str]) -> Any:
+    """A figure of the data sets named in ``chosen``, or of all."""
+    names = [str(name) for name in fit["dataset_name"].values]
+    for name in chosen:
+        if name not in names:
+            raise UnavailableError(
+                f"the fit has no data set {name!r}; choose from {', '.join(names)}"
+            )
+    picked = [n for n, name in enumerate(names) if not chosen or name in chosen]
+    columns = 1 if len(picked) == 1 else 2
+    rows = -(-len(picked) // columns)
+    width = style.SINGLE if columns == 1 else style.DOUBLE
+    figure = style.new_figure(width, 0.35 + rows * 3.0)
+    outer = figure.add_gridspec(rows, columns)
+    for place, index in enumerate(picked):
+        inner = outer[divmod(place, columns)].subgridspec(2, 1, height_ratios=(3, 1), hspace=0)
+        upper = figure.add_subplot(inner[0])
+        lower = figure.add_subplot(inner[1], sharex=upper)
+        _draw_dataset(upper, lower, fit, index, names[index])
+    figure.supxlabel(
+        textwrap.fill(summary(fit), width=70 if columns == 1 else 150),
+        fontsize=6.5, color=style.GREY, x=0.99, ha="right",
+    )  # fmt: skip
+    return figure
+
+
+def summary(fit: xr.Dataset) -> str:
+    """The parameters in concise notation and the reduced chi square, in one line."""
+    parts = []
+    for n, name in enumerate(fit["parameter_name"].values):
+        unit = str(fit["parameter_units"].values[n])
+        text = with_uncertainty(float(fit["value"][n]), float(fit["standard_error"][n]))
+        at_bound = " (at its bound)" if int(fit["at_bound"][n]) else ""
+        fixed = " (fixed)" if int(fit["parameter_role"][n]) == 0 else ""
+        parts.append(f"{name} = {text}{'' if unit == '1' else ' ' + unit}{at_bound}{fixed}")
+    reduced = float(fit["reduced_chi_square"])
+    if np.isfinite(reduced):
+        parts.append(f"χ²/ν = {plain(reduced, 3)}")
+    return ";  ".join(parts) + ("" if int(fit["converged"]) else ";  NOT CONVERGED")
+
+
+def _draw_dataset(upper: Axes, lower: Axes, fit: xr.Dataset, index: int, name: str) -> None:
+    mine = np.flatnonzero(fit["point_dataset"].values == index)
+    column = {
+        key: fit[key].values[mine]
+        for key in ("temperature", "field", "observed", "uncertainty", "predicted", "residual")
+    }
+    over = _abscissa(column)
+    other = "field" if over == "temperature" else "temperature"
+    power = power_of_thousand([column["observed"]])
+    scale = 10.0**power
+    x = column[over]
+    sigma = column["uncertainty"]
+    weighted = bool(np.all(np.isfinite(sigma)) and np.all(sigma > 0))
+    shades = style.Shades(
+        np.unique(column[other]), SYMBOLS[other], str(fit[other].attrs.get("units", "1"))
+    )
+    few = shades.values.size <= style.MAX_LABELLED
+    marker_size = 3.0 if mine.size < 80 else 2.2
+    for n, value in enumerate(shades.values):
+        these = column[other] == value
+        colour = style.BLACK if shades.single else shades.colour(n)
+        upper.errorbar(
+            x[these], column["observed"][these] / scale,
+            sigma[these] / scale if weighted else None,
+            fmt="o", markersize=marker_size, markerfacecolor="none", markeredgewidth=0.7,
+            color=colour, elinewidth=0.6, capsize=0, zorder=2,
+            label=name if shades.single else (f"{name}, {shades.label(n)}" if few else None),
+        )  # fmt: skip
+        line_x, line_y = _line(fit, index, over, other, value, x[these],
+                               column["predicted"][these])  # fmt: skip
+        upper.plot(line_x, line_y / scale, color=style.VERMILION if shades.single else colour,
+                   zorder=3, label="fit" if shades.single else None)  # fmt: skip
+        left = column["residual"][these]
+        lower.plot(x[these], left / sigma[these] if weighted else left / scale, "o",
+                   markersize=marker_size - 0.5, markerfacecolor="none", markeredgewidth=0.7,
+                   color=colour)  # fmt: skip
+    symbol = SYMBOLS.get(str(fit["dataset_quantity"].values[index]), r"\mathrm{value}")
+    unit = str(fit["dataset_units"].values[index])
+    upper.set_ylabel(axis_label(symbol, unit, power))
+    upper.legend(loc="best")
+    upper.tick_params(labelbottom=False)
+    lower.axhline(0, color=style.GREY, linewidth=0.6, zorder=0)
+    if weighted:
+        lower.axhspan(-1, 1, color=style.GREY, alpha=0.15, linewidth=0, zorder=0)
+    lower.set_ylabel(
+        r"resid. ($\sigma$)" if weighted else axis_label(r"\mathrm{resid.}", unit, power)
+    )
+    top = max(1.15 * float(np.abs(lower.dataLim.intervaly).max()), 2.0 if weighted else 0.0)
+    if top > 0:
+        lower.set_ylim(-top, top)
+    lower.set_xlabel(axis_label(SYMBOLS[over], str(fit[over].attrs.get("units", "1"))))
+    low, high = float(x.min()), float(x.max())
+    margin = 0.03 * (high - low) or 1.0
+    if style.spans_decades(x):
+        upper.set_xlim(low / 1.1, high * 1.1)
+        style.log_axis(upper)
+        upper.tick_params(labelbottom=False)
+    else:
+        upper.set_xlim(low - margin, high + margin)
+    if np.all(column["observed"] >= 0):
+        upper.set_ylim(bottom=0)
+    upper.figure.align_ylabels([upper, lower])
+
+
+def _abscissa(column: dict[str, Any]) -> str:
+    """The axis that varies more often along the data set: temperature, or field."""
+    temperatures, fields = (np.unique(column[k]).size for k in ("temperature", "field"))
+    return "field" if fields > temperatures else "temperature"
+
+
+def _line(
+    fit: xr.Dataset, index: int, over: str, other: str, value: float, x: Any, predicted: Any
+) -> tuple[Any, Any]:
+    """The fitted curve: the smooth one where the file holds it, else through the points."""
+    if "curve_predicted" in fit:
+        these = fit["curve_dataset"].values == index
+        these &= np.isclose(fit[f"curve_{other}"].values, value, rtol=1e-9, atol=0)
+        if np.count_nonzero(these) > 1:
+            line_x = fit[f"curve_{over}"].values[these]
+            order = np.argsort(line_x, kind="stable")
+            return line_x[order], fit["curve_predicted"].values[these][order]
+    order = np.argsort(x, kind="stable")
+    return x[order], predicted[order]

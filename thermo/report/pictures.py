@@ -1,0 +1,232 @@
+"""Pictures of curves, levels and fits for a journal's column: PNG (300 dpi), SVG or PDF."""
+
+from __future__ import annotations
+
+import os
+from collections.abc import Sequence
+from typing import Any
+
+import numpy as np
+import xarray as xr
+from matplotlib.axes import Axes
+from matplotlib.collections import LineCollection
+from matplotlib.ticker import MaxNLocator
+
+from thermo.errors import FileFormatError, UnavailableError
+from thermo.report import style
+from thermo.report.fit_picture import draw_fit
+from thermo.report.quantities import (
+    CURVE_QUANTITIES,
+    DEFAULT_PANELS,
+    SYMBOLS,
+    Quantity,
+    axis_label,
+    per_note,
+    power_of_thousand,
+    quantity,
+)
+from thermo.variables import convert_curves
+
+_MOST_LEVELS = 3000  # bars of a column of levels that a page can still tell apart
+_ISOTHERMS = 6
+
+
+def plot(
+    dataset: xr.Dataset,
+    path: str | os.PathLike[str],
+    what: str | Sequence[str] | None = None,
+    units_system: str | None = None,
+    title: str | None = None,
+) -> None:
+    """Draw a curves, levels or fit dataset into a .png, .svg or .pdf file.
+
+    ``what`` chooses the panels: for curves one or several (a list, or names with commas) of
+    specific_heat, specific_heat_over_T, entropy, susceptibility, chi_T, magnetization (over the
+    field), internal_energy, free_energy; for a fit the name of a data set; for levels "levels"
+    or "density". All there is by default. ``units_system`` converts molar curves to "molar-si"
+    or "molar-cgs". Raises FileFormatError, UnavailableError or UnitsError.
+    """
+    style.check_suffix(path)
+    chosen = _names(what)
+    kind = str(dataset.attrs.get("content"))
+    draw = {"curves": _draw_curves, "levels": _draw_levels, "fit": draw_fit}.get(kind)
+    if draw is None:
+        raise FileFormatError("only levels, curves and fit datasets can be drawn")
+    if kind == "curves" and units_system is not None:
+        dataset = convert_curves(dataset, units_system)
+    with style.style():
+        figure = draw(dataset, chosen)
+        if title:
+            figure.suptitle(title, fontsize=9)
+        style.save(figure, path)
+
+
+def _names(what: str | Sequence[str] | None) -> list[str]:
+    if what is None:
+        return []
+    parts = what.split(",") if isinstance(what, str) else what
+    return [part.strip() for part in parts if part.strip()]
+
+
+def _draw_curves(curves: xr.Dataset, chosen: list[str]) -> Any:
+    panels = chosen or [
+        name
+        for name in DEFAULT_PANELS
+        if name in curves or (name == "chi_T" and "susceptibility" in curves)
+    ]
+    several = curves.sizes["field"] > 1
+    if not chosen and several and "magnetization" in curves:
+        panels.append("magnetization")
+    if not panels:
+        panels = [name for name in CURVE_QUANTITIES if name in curves]
+    if not panels:
+        raise UnavailableError("the curves hold no quantity that can be drawn")
+    ready = [quantity(curves, name) for name in panels]
+
+    columns = 1 if len(panels) == 1 else 2
+    rows = -(-len(panels) // columns)
+    width = style.SINGLE if columns == 1 else style.DOUBLE
+    figure = style.new_figure(width, 0.25 + rows * (2.45 if columns == 1 else 2.2))
+    grid = figure.subplots(rows, columns, squeeze=False).ravel()
+    spare = grid[len(panels) :]
+    for axes in spare:
+        axes.set_axis_off()
+    grid = grid[: len(panels)]
+    fields = style.Shades(curves["field"].values, "B", str(curves["field"].attrs["units"]))
+    over_temperature = []
+    for axes, item in zip(grid, ready, strict=True):
+        if item.name == "magnetization" and several:
+            _over_field(axes, curves, item, spare[0] if len(spare) else None)
+        else:
+            _over_temperature(axes, curves, item, fields)
+            over_temperature.append(axes)
+    if over_temperature:
+        fields.explain(figure, list(grid), over_temperature[0])
+    figure.supxlabel(per_note(curves.attrs), fontsize=6.5, color=style.GREY, x=0.99, ha="right")
+    return figure
+
+
+def _over_temperature(axes: Axes, curves: xr.Dataset, item: Quantity, fields: style.Shades) -> None:
+    t = curves["temperature"].values
+    power = power_of_thousand([item.values])
+    y = item.values / 10.0**power
+    marker = "o" if t.size == 1 else ""
+    for b in range(y.shape[1]):
+        colour = fields.colour(b)
+        axes.plot(t, y[:, b], color=colour, label=fields.label(b), marker=marker, markersize=3)
+        if item.error is not None:
+            wide = item.error[:, b] / 10.0**power
+            axes.fill_between(
+                t, y[:, b] - wide, y[:, b] + wide, color=colour, alpha=0.25, linewidth=0
+            )
+    axes.set_ylabel(item.label(power))
+    axes.set_xlabel(axis_label("T", str(curves["temperature"].attrs["units"])))
+    if t.size > 1:
+        axes.set_xlim(t[0], t[-1])
+    if style.spans_decades(t):
+        style.log_axis(axes)
+    elif t.size > 1 and t[0] < 0.1 * t[-1]:
+        axes.set_xlim(0, t[-1])
+    _from_zero(axes, y)
+
+
+def _over_field(axes: Axes, curves: xr.Dataset, item: Quantity, spare: Axes | None) -> None:
+    t, b = curves["temperature"].values, curves["field"].values
+    # A few isotherms spread evenly over the grid's own spacing.
+    picked = np.unique(np.linspace(0, t.size - 1, min(_ISOTHERMS, t.size)).round().astype(int))
+    shades = style.Shades(t[picked], "T", str(curves["temperature"].attrs["units"]), reverse=True)
+    power = power_of_thousand([item.values[picked]])
+    y = item.values / 10.0**power
+    marker = "o" if b.size < 12 else ""
+    for n, row in enumerate(picked):
+        axes.plot(b, y[row], color=shades.colour(n), label=shades.label(n), marker=marker,
+                  markersize=2.5)  # fmt: skip
+    axes.set_xlim(b[0], b[-1])
+    axes.set_xlabel(axis_label("B", str(curves["field"].attrs["units"])))
+    axes.set_ylabel(item.label(power))
+    _from_zero(axes, y[picked])
+    if shades.single:
+        return
+    if spare is None:
+        axes.legend(title="$T$", loc="best")
+    else:  # isotherms fan out over the whole panel; the empty place beside it takes the legend
+        spare.legend(*axes.get_legend_handles_labels(), title="$T$", loc="upper left")
+
+
+def _from_zero(axes: Axes, values: Any) -> None:
+    finite = values[np.isfinite(values)]
+    if finite.size and finite.min() >= 0 and finite.max() > 0:
+        axes.set_ylim(0, 1.08 * float(finite.max()))
+
+
+def _draw_levels(levels: xr.Dataset, chosen: list[str]) -> Any:
+    resolved = str(levels.attrs["resolved"])
+    known = ["levels", "density"]
+    for name in chosen:
+        if name not in known:
+            raise UnavailableError(
+                f"{name!r} cannot be drawn of levels; choose from levels, density"
+            )
+    if resolved not in ("total_spin", "magnetic_number"):
+        if chosen == ["levels"]:
+            raise UnavailableError(
+                "the levels carry neither S nor M to be drawn against; choose density"
+            )
+        chosen = ["density"]
+    panels = chosen or known
+    unit = str(levels.attrs["energy_unit"])
+    energy = levels["energy"].values
+    above = energy - energy.min()
+    power = power_of_thousand([above])
+    above = above / 10.0**power
+    wide = style.SINGLE if len(panels) == 1 else style.DOUBLE
+    figure = style.new_figure(wide, 3.2)
+    grid = figure.subplots(1, len(panels), squeeze=False, sharey=True)[0]
+    for axes, name in zip(grid, panels, strict=True):
+        if name == "levels":
+            _ladder(axes, levels[resolved].values, above, resolved)
+        else:
+            _density(axes, above, levels["weight"].values)
+    grid[0].set_ylabel(axis_label("E - E_0", unit, power))
+    top = float(above.max()) or 1.0
+    grid[0].set_ylim(-0.02 * top, 1.02 * top)
+    states = float(levels["weight"].sum())
+    note = f"{levels.sizes['level']} levels, {states:.10g} states, $E_0$ = "
+    note += f"{energy.min():.8g}".replace("-", "\u2212")
+    note += "" if unit == "1" else f" {unit}"
+    figure.supxlabel(note, fontsize=6.5, color=style.GREY, x=0.99, ha="right")
+    return figure
+
+
+def _ladder(axes: Axes, number: Any, above: Any, resolved: str) -> None:
+    present = np.unique(number[np.isfinite(number)])
+    step = float(np.diff(present).min()) if present.size > 1 else 1.0
+    segments = []
+    for value in present:
+        heights = above[number == value]
+        if heights.size > _MOST_LEVELS:  # bars closer than a pixel are one bar
+            fine = float(above.max()) / _MOST_LEVELS
+            heights = np.unique(np.round(heights / fine)) * fine
+        half = 0.38 * step
+        segments += [[(value - half, e), (value + half, e)] for e in heights]
+    axes.add_collection(LineCollection(segments, colors=style.BLUE, linewidths=0.5))
+    axes.set_xlim(present[0] - 0.6 * step, present[-1] + 0.6 * step)
+    axes.xaxis.set_major_locator(MaxNLocator(integer=step == 1 and present[0] % 1 == 0))
+    if present.size <= 12:
+        axes.set_xticks(present, [f"{v:g}" if v % 1 == 0 else f"{2 * v:.0f}/2" for v in present])
+    axes.tick_params(axis="x", which="minor", bottom=False, top=False)
+    axes.set_xlabel("total spin $S$" if resolved == "total_spin" else "$|M|$")
+
+
+def _density(axes: Axes, above: Any, weight: Any) -> None:
+    bins = int(np.clip(4 * np.sqrt(above.size), 20, 120))
+    top = float(above.max()) or 1.0
+    counts, edges = np.histogram(above, bins=bins, range=(0, top), weights=weight)
+    share = np.clip(counts, 0, None) / weight.sum() * 100
+    axes.stairs(share, edges, orientation="horizontal", fill=True, color=style.BLUE, alpha=0.35)
+    axes.stairs(share, edges, orientation="horizontal", color=style.BLUE, linewidth=0.8)
+    axes.set_xlim(0, 1.08 * float(share.max()))
+    axes.set_xlabel(f"share of all states (%) in each of {bins} intervals")
+
+
+__all__ = ["SYMBOLS", "plot"]

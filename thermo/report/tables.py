@@ -1,0 +1,237 @@
+"""Tables for the terminal: the plan of a spectrum, the result of a fit, the shape of curves.
+
+They go to standard output, without colour or box characters lost when it is not a terminal.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Mapping
+from typing import Any
+
+import numpy as np
+import xarray as xr
+from rich import box
+from rich.console import Console
+from rich.table import Table
+from rich.text import Text
+
+from thermo.report.export import flag_word
+from thermo.report.numbers import duration, grouped, plain, size, with_uncertainty
+from thermo.report.quantities import quantity, unit_of
+
+_PIPE_WIDTH = 100  # columns, when nobody's window sets them
+
+
+def _console(console: Console | None) -> Console:
+    if console is not None:
+        return console
+    found = Console(highlight=False, soft_wrap=False)
+    if not found.is_terminal and found.width == 80:
+        found = Console(highlight=False, width=_PIPE_WIDTH)
+    return found
+
+
+def _sheet(title: str, *columns: str, right: tuple[str, ...] = ()) -> Table:
+    sheet = Table(title=title or None, title_justify="left", box=box.SIMPLE_HEAD, pad_edge=False,
+                  title_style="bold", show_header=any(columns))  # fmt: skip
+    for column in columns:
+        sheet.add_column(column, justify="right" if column in right else "left", overflow="fold")
+    return sheet
+
+
+def print_plan(plan: Any, console: Console | None = None) -> None:
+    """Print what a survey found; ``plan`` is the survey's Plan (anything with its as_dict())."""
+    facts: Mapping[str, Any] = plan.as_dict()
+    sheet = Table(box=None, show_header=False, pad_edge=False, padding=(0, 2, 0, 0))
+    sheet.add_column(style="bold", no_wrap=True)
+    sheet.add_column(overflow="fold")
+    for name, text in plan_rows(facts):
+        sheet.add_row(Text(name), Text(text))
+    out = _console(console)
+    out.print(sheet)
+    for note in facts.get("notes") or ():
+        out.print(Text(f"Note: {note}"))
+
+
+def plan_rows(facts: Mapping[str, Any]) -> list[tuple[str, str]]:
+    """The plan as (name, text) pairs, in the order they are told."""
+    rows = []
+    if facts.get("title"):
+        rows.append(("model", str(facts["title"])))
+    rows.append(("sites, bonds", f"{_count(facts['sites'])} sites, {_count(facts['bonds'])} bonds"))
+    couplings = facts.get("couplings")
+    if isinstance(couplings, Mapping):
+        unit = str(facts.get("energy_unit", "1"))
+        tail = "" if unit == "1" else f" {unit}"
+        rows.append(
+            ("couplings", ", ".join(f"{k} = {v:g}{tail}" for k, v in couplings.items()) or "none")
+        )
+    elif isinstance(couplings, list | tuple):
+        rows.append(("couplings", ", ".join(str(c) for c in couplings) or "none"))
+    elif couplings is not None:
+        rows.append(("couplings", str(couplings)))
+    rows.append(("states", grouped(facts["n_states"])))
+    words = {
+        "total_spin": "total spin S (and M)",
+        "magnetic_number": "magnetic number M",
+        "parity": "parity of M",
+        "none": "nothing",
+    }
+    conserved = str(facts.get("conserved", "none"))
+    rows.append(("conserved", words.get(conserved, conserved)))
+    group = f"{grouped(facts['group_order'])} site permutations" if facts.get("group_order") else ""
+    if facts.get("abelian_order"):
+        group += f"; {grouped(facts['abelian_order'])} used to split blocks"
+        group += ", with spin reversal" if facts.get("spin_reversal") else ""
+    if group:
+        rows.append(("symmetry", group))
+    if facts.get("sectors"):
+        rows.append(("blocks", blocks_text(facts["sectors"])))
+    if facts.get("memory_bytes") is not None:
+        limit = facts.get("memory_limit")
+        allowed = f" of {size(limit)} allowed" if limit else ""
+        rows.append(("memory", size(facts["memory_bytes"]) + allowed))
+    if facts.get("seconds") is not None:
+        rows.append(("time", duration(float(facts["seconds"]))))
+    if facts.get("method"):
+        rows.append(("method", str(facts["method"])))
+    return rows
+
+
+def blocks_text(sectors: Any) -> str:
+    """The blocks in a line: "22, largest 4650 × 4650 real; 12 of them stand for 40"."""
+    blocks = [s if isinstance(s, Mapping) else vars(s) for s in sectors]
+    largest = max(blocks, key=lambda b: (b["dimension"], not b["real"]))
+    n = grouped(largest["dimension"])
+    text = f"{grouped(len(blocks))}, largest {n} × {n} {'real' if largest['real'] else 'complex'}"
+    whole = sum(float(b.get("multiplicity", 1)) for b in blocks)
+    if whole > len(blocks):
+        text += f"; they stand for {grouped(whole)}"
+    return text
+
+
+def _count(value: Any) -> str:
+    return str(value) if isinstance(value, int) else str(len(value))
+
+
+def print_fit(fit: xr.Dataset, console: Console | None = None) -> None:
+    """Print a fit dataset: parameters with standard errors, correlations, χ² per data set."""
+    out = _console(console)
+    out.print(_parameter_sheet(fit))
+    correlations = _correlation_sheet(fit)
+    if correlations is not None:
+        out.print(correlations)
+    right = ("points", "χ²", "χ² per point")
+    sheet = _sheet("Data sets", "name", "quantity", "units", *right, right=right)
+    points = np.bincount(fit["point_dataset"].values, minlength=fit.sizes["dataset"])
+    for n, name in enumerate(fit["dataset_name"].values):
+        chi = float(fit["dataset_chi_square"][n])
+        sheet.add_row(
+            Text(str(name)),
+            Text(str(fit["dataset_quantity"].values[n])),
+            Text(str(fit["dataset_units"].values[n])),
+            str(points[n]),
+            plain(chi, 4),
+            plain(chi / points[n], 3) if points[n] else "",
+        )
+    out.print(sheet)
+    for line in fit_verdict(fit):
+        out.print(Text(line))
+
+
+def fit_verdict(fit: xr.Dataset) -> list[str]:
+    """What to know before believing the numbers: χ²/ν, convergence, bounds."""
+    freedom = int(fit["degrees_of_freedom"])
+    reduced = float(fit["reduced_chi_square"])
+    ratio = f", reduced χ² = {plain(reduced, 4)}" if math.isfinite(reduced) else ""
+    lines = [
+        f"χ² = {plain(float(fit['chi_square']), 5)} with {freedom} degrees of freedom{ratio}; "
+        + ("converged" if int(fit["converged"]) else "NOT converged: do not use these values")
+        + f" after {int(fit['evaluations'])} evaluations."
+    ]
+    stuck = [
+        f"{fit['parameter_name'].values[n]} ({flag_word(fit['at_bound'], n)})"
+        for n in range(fit.sizes["parameter"])
+        if int(fit["at_bound"][n])
+    ]
+    if stuck:
+        lines.append(
+            f"At a bound: {', '.join(stuck)}; the standard errors and correlations then mean "
+            "little, so widen the bound or fix the parameter."
+        )
+    return lines
+
+
+def _parameter_sheet(fit: xr.Dataset) -> Table:
+    sheet = _sheet("Parameters", "name", "value", "units", "start", "bounds", "")
+    for n, name in enumerate(fit["parameter_name"].values):
+        role = flag_word(fit["parameter_role"], n)
+        tie = str(fit["parameter_tie"].values[n])
+        stuck = flag_word(fit["at_bound"], n)
+        remark = {"fixed": "fixed", "tied": f"= {tie}", "free": ""}[role]
+        if stuck != "none":
+            remark = f"at its {stuck} bound"
+        unit = str(fit["parameter_units"].values[n])
+        free = role == "free"
+        sheet.add_row(
+            Text(str(name)),
+            with_uncertainty(float(fit["value"][n]), float(fit["standard_error"][n])),
+            Text("" if unit == "1" else unit),
+            plain(float(fit["start"][n]), 5) if free else "",
+            _bounds(float(fit["lower_bound"][n]), float(fit["upper_bound"][n])) if free else "",
+            Text(remark),
+        )
+    return sheet
+
+
+def _bounds(low: float, high: float) -> str:
+    if math.isinf(low) and math.isinf(high):
+        return "none"
+    if math.isinf(high):
+        return f"≥ {low:g}"
+    if math.isinf(low):
+        return f"≤ {high:g}"
+    return f"{low:g} … {high:g}"
+
+
+def _correlation_sheet(fit: xr.Dataset) -> Table | None:
+    matrix = fit["correlation"].values
+    rows = [n for n in range(len(matrix)) if np.isfinite(matrix[n, n])]
+    if len(rows) < 2:
+        return None
+    names = [str(fit["parameter_name"].values[n]) for n in rows]
+    if len(rows) > 7:  # wider than a page: the strong ones only
+        sheet = _sheet("Strongest correlations", "first", "second", "correlation",
+                       right=("correlation",))  # fmt: skip
+        pairs = [(a, b) for i, a in enumerate(rows) for b in rows[:i]]
+        for a, b in sorted(pairs, key=lambda p: -abs(matrix[p]))[:10]:
+            first, second = (str(fit["parameter_name"].values[k]) for k in (b, a))
+            sheet.add_row(Text(first), Text(second), f"{matrix[a, b]:+.3f}")
+        return sheet
+    sheet = _sheet("Correlations", "", *names[:-1], right=tuple(names))
+    for i, a in enumerate(rows[1:], start=1):
+        cells = [f"{matrix[a, b]:+.3f}" for b in rows[:i]]
+        sheet.add_row(Text(names[i]), *cells)
+    return sheet
+
+
+def print_curves(curves: xr.Dataset, console: Console | None = None) -> None:
+    """Print where C, χ and χT peak and where the entropy ends, for each field."""
+    right = ("field", "largest value", "at temperature", "at the highest")
+    sheet = _sheet("Curves", "quantity", "units", *right, right=right)
+    temperature, field = curves["temperature"].values, curves["field"].values
+    for name in ("specific_heat", "susceptibility", "chi_T", "entropy", "magnetization"):
+        if name not in curves and not (name == "chi_T" and "susceptibility" in curves):
+            continue
+        item = quantity(curves, name)
+        for j, b in enumerate(field):
+            column = item.values[:, j]
+            top = int(np.argmax(column))
+            edge = " (edge)" if top in (0, len(column) - 1) and len(column) > 1 else ""
+            sheet.add_row(
+                name, item.unit, f"{b:g} {unit_of(curves, 'field')}".removesuffix(" 1"),
+                plain(float(column[top]), 6), f"{temperature[top]:.5g}{edge}",
+                plain(float(column[-1]), 6),
+            )  # fmt: skip
+    _console(console).print(sheet)
