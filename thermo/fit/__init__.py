@@ -1,0 +1,43 @@
+"""Fits of a spin model to measured curves."""
+
+from __future__ import annotations
+
+import os
+from collections.abc import Callable, Mapping
+
+from thermo.fit.forward import Forward, Solver
+from thermo.fit.minimise import make_problem, minimise
+from thermo.fit.parameters import CHI0
+from thermo.fit.result import Estimate, FitResult, SetResult, make_result
+from thermo.fit.study import Study, read_study
+
+__all__ = ["Estimate", "FitResult", "SetResult", "Study", "fit", "read_study"]
+
+
+def fit(
+    study: Study | str | os.PathLike[str] | Mapping[str, object],
+    progress: Callable[[float, str], None] | None = None,
+    memory: int | None = None,
+    solver: Solver | None = None,
+) -> FitResult:
+    """Fit a study: a ``Study``, or what ``read_study`` takes.
+
+    ``progress`` is called with the share done (0 to 1, a guess) and a line of text. ``memory``
+    limits the diagonalisation, in bytes. ``solver`` replaces the full diagonalisation by anything
+    with a ``table(couplings) -> LevelTable`` method.
+
+    Cost: one diagonalisation for each new direction of the couplings. Changing only their common
+    scale, g, χ0 or the paramagnetic fraction needs none; k independent couplings take k an
+    iteration, and one alone takes one in all.
+
+    Raises StudyError, DataError, UnitsError, ModelError for the input, UnavailableError where the
+    model cannot give what was measured, MemoryLimitError where a block is too large.
+    """
+    study = study if isinstance(study, Study) else read_study(study)
+    if solver is None:
+        from thermo.spectrum.full import FullSolver
+
+        solver = FullSolver(study.model, memory)
+    forward = Forward(study.model, solver, study.parameters.by_name[CHI0].to_si)
+    problem = make_problem(study, forward, progress)
+    return make_result(study, problem, minimise(problem))

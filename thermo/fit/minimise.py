@@ -1,0 +1,245 @@
+"""Weighted least squares within bounds, and what the minimum says about the parameters."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass, field
+
+import numpy as np
+from numpy.typing import NDArray
+from scipy.optimize import least_squares
+
+from thermo.errors import StudyError
+from thermo.fit.forward import Forward, Points
+from thermo.fit.parameters import Parameters
+from thermo.fit.study import Study
+
+Vector = NDArray[np.float64]
+
+# Relative steps of the couplings' differences: one-sided on the way, two-sided at the end.
+STEP_ON_THE_WAY = 1e-6
+STEP_AT_THE_END = 1e-4
+MAX_EVALUATIONS = 300
+# Relative tolerances of cost, step and gradient: tight, since an evaluation without a solve is
+# cheap and rounding in the levels is about 1e-14.
+TOLERANCE = 1e-12
+# A parameter this near a bound, in standard errors, that is still pushed outward, is at it.
+NEAR_BOUND = 1e-2
+# A relative change of the data below this is the differences' own error, or unmeasurable.
+IDLE = 1e-5
+# Below this, the smallest singular value of the column-normalised Jacobian is only error.
+SINGULAR = 1e-6
+
+
+@dataclass(eq=False)
+class Problem:
+    """Residuals (observed less predicted, over the uncertainty) of a study."""
+
+    parameters: Parameters
+    forward: Forward
+    sets: tuple[Points, ...]
+    observed: Vector
+    sigma: Vector
+    weighted: bool
+    n_evaluations: int = 0
+    progress: Callable[[float, str], None] | None = None
+    _first: bool = field(default=True, repr=False)
+
+    def predict(self, theta: Vector) -> Vector:
+        """All points of all sets in SI, shape (N,)."""
+        self.n_evaluations += 1
+        values = self.parameters.values(theta)
+        return np.concatenate([self.forward.predict(points, values) for points in self.sets])
+
+    def residuals(self, theta: Vector) -> Vector:
+        """(observed − predicted)/σ, shape (N,)."""
+        found = (self.observed - self.predict(theta)) / self.sigma
+        if self.progress is not None:
+            # The number of steps is not known beforehand; this creeps towards the end.
+            done = 1 - 1 / (1 + self.n_evaluations / 10)
+            solves = self.forward.cache.n_solves
+            self.progress(done, f"chi square {float(found @ found):.6g}, {solves} spectra")
+        return found
+
+    def slopes(self, theta: Vector, final: bool = False) -> Vector:
+        """Derivatives of the residuals by the free parameters, (N, n_free)."""
+        values = self.parameters.values(theta)
+        step = STEP_AT_THE_END if final else STEP_ON_THE_WAY
+        jacobian = -self.forward.jacobian(self.sets, values, step, central=final)
+        jacobian /= self.sigma[:, None]
+        if self._first:
+            self._first = False
+            self._refuse_idle(theta, jacobian)
+        return jacobian
+
+    def _refuse_idle(self, theta: Vector, jacobian: Vector) -> None:
+        values = self.parameters.values(theta)
+        largest = float(np.abs(self.forward.couplings(values)).max(initial=0.0))
+        for k, parameter in enumerate(self.parameters.free):
+            if parameter.role == "chi0":
+                continue  # whether it matters was known from the quantities
+            reach = max(abs(float(theta[k])), largest if parameter.role == "coupling" else 1.0)
+            moved = float(np.linalg.norm(jacobian[:, k])) * reach
+            if moved < IDLE * float(np.linalg.norm(self.observed / self.sigma)):
+                raise StudyError(
+                    f"the data do not change with parameters.{parameter.name} at its start "
+                    f"{theta[k]:g}; fix it, or start it elsewhere"
+                )
+
+
+@dataclass(frozen=True, eq=False)
+class Minimum:
+    """Where the minimiser ended. Arrays run over the free parameters.
+
+    ``bound`` is −1, 0 or 1 (at lower, none, at upper). ``covariance`` is NaN in the rows and
+    columns of parameters at a bound, and everywhere if the data do not fix the parameters.
+    """
+
+    theta: Vector
+    residuals: Vector
+    jacobian: Vector
+    covariance: Vector
+    bound: NDArray[np.int64]
+    converged: bool
+    identifiable: bool
+    weak: str
+    message: str
+
+
+def make_problem(
+    study: Study, forward: Forward, progress: Callable[[float, str], None] | None
+) -> Problem:
+    """The residuals of a study; without uncertainties each set is weighted by its mean size."""
+    sigma = [
+        data.uncertainty
+        if data.uncertainty is not None
+        else np.full(data.n_points, np.mean(np.abs(data.value)))
+        for data in study.sets
+    ]
+    sets = tuple(Points(d.quantity, d.temperature, d.field, d.per) for d in study.sets)
+    observed = np.concatenate([data.value for data in study.sets])
+    return Problem(
+        study.parameters,
+        forward,
+        sets,
+        observed,
+        np.concatenate(sigma),
+        study.weighted,
+        progress=progress,
+    )
+
+
+def minimise(problem: Problem) -> Minimum:
+    """Trust-region reflective least squares (Branch, Coleman and Li 1999, as in SciPy).
+
+    Parameters that end at a bound are put on it and the others are fitted again, so the result is
+    a minimum on that bound and not one that still creeps towards it.
+    """
+    lower, upper = problem.parameters.bounds
+    theta, converged, message = _descend(problem, problem.parameters.start, ())
+    bound = np.zeros(len(theta), dtype=np.int64)
+    for _ in range(len(theta)):
+        new = _pushed(problem, theta, bound, lower, upper)
+        if not np.any(new):
+            break
+        bound += new
+        theta = np.where(bound < 0, lower, np.where(bound > 0, upper, theta))
+        theta, converged, message = _descend(problem, theta, tuple(np.flatnonzero(bound)))
+    residuals = problem.residuals(theta)
+    jacobian = problem.slopes(theta, final=True)
+    inside = np.flatnonzero(bound == 0)
+    covariance = np.full((len(theta), len(theta)), np.nan)
+    part, weak = _covariance(jacobian[:, inside])
+    covariance[np.ix_(inside, inside)] = part
+    names = [problem.parameters.free[k].name for k in inside]
+    return Minimum(
+        theta=theta,
+        residuals=residuals,
+        jacobian=jacobian,
+        covariance=covariance,
+        bound=bound,
+        converged=converged,
+        identifiable=weak is None,
+        weak="" if weak is None else _combination(weak, names, theta[inside]),
+        message=message,
+    )
+
+
+def _descend(problem: Problem, start: Vector, held: tuple[int, ...]) -> tuple[Vector, bool, str]:
+    """Minimise over all parameters but those held; theta, whether it converged, and how."""
+    lower, upper = problem.parameters.bounds
+    moving = np.array([k for k in range(len(start)) if k not in held], dtype=np.int64)
+    if not moving.size:
+        return start, True, "every free parameter sits at a bound"
+
+    def full(x: Vector) -> Vector:
+        theta = start.copy()
+        theta[moving] = x
+        return theta
+
+    found = least_squares(
+        lambda x: problem.residuals(full(x)),
+        start[moving],
+        jac=lambda x: problem.slopes(full(x))[:, moving],
+        bounds=(lower[moving], upper[moving]),
+        method="trf",
+        x_scale="jac",
+        ftol=TOLERANCE,
+        xtol=TOLERANCE,
+        gtol=TOLERANCE,
+        max_nfev=MAX_EVALUATIONS,
+    )
+    how = {
+        0: f"stopped after {MAX_EVALUATIONS} evaluations without settling",
+        1: "the gradient vanished",
+        2: "chi square no longer changed",
+        3: "the parameters no longer changed",
+        4: "chi square and the parameters no longer changed",
+    }
+    return full(found.x), found.status > 0, how.get(int(found.status), str(found.message))
+
+
+def _pushed(
+    problem: Problem, theta: Vector, bound: NDArray[np.int64], lower: Vector, upper: Vector
+) -> NDArray[np.int64]:
+    """−1 or 1 for each parameter that has newly run into its lower or upper bound."""
+    new = np.zeros(len(theta), dtype=np.int64)
+    near = np.minimum(theta - lower, upper - theta)
+    if not np.any(np.isfinite(near) & (bound == 0)):
+        return new
+    jacobian = problem.slopes(theta)
+    residuals = problem.residuals(theta)
+    gradient = jacobian.T @ residuals
+    # Error of one parameter with the others held: a lower limit of its standard error.
+    error = 1 / np.maximum(np.linalg.norm(jacobian, axis=0), 1e-300)
+    if not problem.weighted:
+        error *= np.sqrt(residuals @ residuals / max(len(residuals) - len(theta), 1))
+    for k in np.flatnonzero(bound == 0):
+        size = max(abs(theta[k]), 1e-300)
+        if theta[k] - lower[k] <= max(NEAR_BOUND * error[k], 1e-8 * size) and gradient[k] > 0:
+            new[k] = -1
+        if upper[k] - theta[k] <= max(NEAR_BOUND * error[k], 1e-8 * size) and gradient[k] < 0:
+            new[k] = 1
+    return new
+
+
+def _covariance(jacobian: Vector) -> tuple[Vector, Vector | None]:
+    """(JᵀJ)⁻¹ by singular values, and the direction the data do not fix (None: all are fixed)."""
+    n = jacobian.shape[1]
+    if n == 0:
+        return np.empty((0, 0)), None
+    length = np.linalg.norm(jacobian, axis=0)
+    length = np.where(length > 0, length, 1.0)
+    _, singular, rotation = np.linalg.svd(jacobian / length, full_matrices=False)
+    if singular.size < n or singular[-1] <= SINGULAR * singular[0]:
+        return np.full((n, n), np.nan), rotation[-1] / length
+    half = rotation.T / singular / length[:, None]
+    return half @ half.T, None
+
+
+def _combination(direction: Vector, names: list[str], theta: Vector) -> str:
+    """The weak direction in words: the parameters that can move together unnoticed."""
+    size = np.abs(theta)
+    share = np.abs(direction) / np.where(size > 0, size, 1.0)
+    share = share / share.max()
+    return " and ".join(name for name, s in zip(names, share, strict=True) if s > 0.05)

@@ -1,0 +1,233 @@
+"""The parameters of a fit: what is free, fixed or tied, and their values with exact slopes.
+
+A fit has the model's couplings (in the model's energy unit), the common ``g``, ``chi0`` and
+``paramagnetic_fraction``, and auxiliary names that exist only to be used in ties (a ratio, say).
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Iterable, Mapping
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from thermo.errors import StudyError, UnitsError
+from thermo.fit.strict import Section, did_you_mean
+from thermo.fit.ties import Dual, Tie, order_ties, parse_tie
+from thermo.model.spin_model import SpinModel
+from thermo.units import quantity_factor
+
+Vector = NDArray[np.float64]
+
+G, CHI0, FRACTION = "g", "chi0", "paramagnetic_fraction"
+NUISANCE = (G, CHI0, FRACTION)
+
+
+@dataclass(frozen=True)
+class Parameter:
+    """One parameter of a study.
+
+    ``role`` is "coupling", "g", "chi0", "paramagnetic_fraction" or "auxiliary"; ``status`` is
+    "free", "fixed" or "tied". ``start`` is the start or fixed value (NaN where tied), in ``unit``.
+    ``to_si`` takes it to SI per mole of ions (chi0 only; 1 otherwise).
+    """
+
+    name: str
+    role: str
+    status: str
+    unit: str
+    start: float
+    lower: float = -math.inf
+    upper: float = math.inf
+    expression: str = ""
+    to_si: float = 1.0
+
+
+@dataclass(frozen=True, eq=False)
+class Values:
+    """All parameters at one point θ of the free ones, with their slopes.
+
+    ``value[name]`` in the parameter's unit; ``slope[name]`` by the free parameters, (n_free,).
+    """
+
+    value: Mapping[str, float]
+    slope: Mapping[str, Vector]
+
+
+class Parameters:
+    """The parameters of a study in order, and the map from free values to all values."""
+
+    def __init__(self, parameters: Iterable[Parameter], source: str = "the study") -> None:
+        self.all: tuple[Parameter, ...] = tuple(parameters)
+        self.by_name: dict[str, Parameter] = {p.name: p for p in self.all}
+        self.free: tuple[Parameter, ...] = tuple(p for p in self.all if p.status == "free")
+        try:
+            ties = {
+                p.name: parse_tie(p.name, p.expression, self.by_name)
+                for p in self.all
+                if p.status == "tied"
+            }
+            self.ties: tuple[Tie, ...] = order_ties(ties)
+            used = {name for tie in self.ties for name in tie.names}
+            for p in self.all:
+                if p.role == "auxiliary" and p.name not in used:
+                    known = [q.name for q in self.all if q.role != "auxiliary"]
+                    raise StudyError(
+                        f"parameters.{p.name} is neither a coupling of the model nor used in a "
+                        f"tie; {did_you_mean(p.name, known)}"
+                    )
+            self.values(self.start)
+        except StudyError as error:
+            raise StudyError(f"{source}: {error}") from None
+
+    @property
+    def start(self) -> Vector:
+        """Start values of the free parameters, shape (n_free,)."""
+        return np.array([p.start for p in self.free], dtype=np.float64)
+
+    @property
+    def bounds(self) -> tuple[Vector, Vector]:
+        """Lower and upper bounds of the free parameters, each of shape (n_free,)."""
+        lower = np.array([p.lower for p in self.free], dtype=np.float64)
+        return lower, np.array([p.upper for p in self.free], dtype=np.float64)
+
+    def values(self, theta: Vector) -> Values:
+        """Every parameter's value and slope at the free values ``theta``, shape (n_free,)."""
+        n = len(self.free)
+        duals: dict[str, Dual] = {}
+        for k, p in enumerate(self.free):
+            duals[p.name] = Dual(float(theta[k]), np.eye(n)[k])
+        for p in self.all:
+            if p.status == "fixed":
+                duals[p.name] = Dual(p.start, np.zeros(n))
+        for tie in self.ties:
+            duals[tie.parameter] = tie.evaluate(duals)
+        return Values(
+            {p.name: duals[p.name].value for p in self.all},
+            {p.name: duals[p.name].gradient for p in self.all},
+        )
+
+
+def read_parameters(section: Section, model: SpinModel) -> Parameters:
+    """Read the ``[parameters]`` table; what it does not name stays at the model's value."""
+    names = [*model.couplings, *(name for name in NUISANCE if name not in model.couplings)]
+    for name in NUISANCE:
+        if name in model.couplings:
+            raise StudyError(
+                f"{section.source}: the model has a coupling {name!r}, which is the name of a "
+                "fit parameter; rename the coupling in the model file"
+            )
+    names += [name for name in section.content if name not in names]
+    found = []
+    for name in names:
+        if section.has(name):
+            entry = Section(section.content[name], section.at(name), section.source)
+            found.append(_read_one(entry, name, model))
+        else:
+            found.append(_default(name, model))
+    return Parameters(found, section.source)
+
+
+def _default(name: str, model: SpinModel) -> Parameter:
+    return Parameter(
+        name,
+        _role(name, model),
+        "fixed",
+        _unit(name, model),
+        _natural(name, model),
+        to_si=_chi0_factor(None, name, model),
+    )
+
+
+def _read_one(entry: Section, name: str, model: SpinModel) -> Parameter:
+    role, unit = _role(name, model), _unit(name, model)
+    if role == "chi0":
+        unit = entry.text("unit", "the unit of chi0", unit)
+    to_si = _chi0_factor(entry, name, model, unit)
+    statuses = [key for key in ("fixed", "tied") if entry.has(key)]
+    bounds = [key for key in ("start", "lower", "upper") if entry.has(key)]
+    if len(statuses) > 1 or (statuses and bounds):
+        keys = [*statuses, *bounds]
+        raise entry.fail(
+            keys[1], f"does not go with {keys[0]}; give fixed, or tied, or start with its bounds"
+        )
+    if statuses == ["tied"]:
+        expression = entry.text("tied", 'an expression such as "0.5*J1"')
+        entry.close()
+        return Parameter(name, role, "tied", unit, math.nan, expression=expression, to_si=to_si)
+    if statuses == ["fixed"]:
+        value = entry.number("fixed", "its value")
+        entry.close()
+        _check_value(entry, "fixed", value, role)
+        return Parameter(name, role, "fixed", unit, value, to_si=to_si)
+    natural = _natural(name, model)
+    default = None if role == "auxiliary" or math.isnan(natural) else natural
+    start = entry.number("start", "a value to start from", default)
+    low = {"g": 0.0, "paramagnetic_fraction": 0.0}.get(role, -math.inf)
+    high = {"paramagnetic_fraction": 1.0}.get(role, math.inf)
+    lower = entry.number("lower", "a lower bound", low)
+    upper = entry.number("upper", "an upper bound", high)
+    entry.close()
+    if lower < low or upper > high:
+        key, value = ("lower", lower) if lower < low else ("upper", upper)
+        limit = f"{low:g} to {high:g}" if math.isfinite(high) else f"{low:g} upwards"
+        raise entry.fail(key, f"= {value:g} lies outside what {name} can be, {limit}")
+    if lower >= upper:
+        raise entry.fail("lower", f"= {lower:g} is not below upper = {upper:g}; change one of them")
+    if not lower <= start <= upper:
+        raise entry.fail(
+            "start" if "start" in entry.content else "lower",
+            f"puts the start {start:g} outside its bounds, {lower:g} to {upper:g}; "
+            "move the start or the bound",
+        )
+    _check_value(entry, "start", start, role)
+    return Parameter(name, role, "free", unit, start, lower, upper, to_si=to_si)
+
+
+def _check_value(entry: Section, key: str, value: float, role: str) -> None:
+    if role == "g" and value <= 0:
+        raise entry.fail(key, f"= {value:g} is no g factor; give one above zero")
+    if role == "paramagnetic_fraction" and not 0 <= value <= 1:
+        raise entry.fail(key, f"= {value:g} is no fraction; give one from 0 to 1")
+
+
+def _role(name: str, model: SpinModel) -> str:
+    if name in model.couplings:
+        return "coupling"
+    return name if name in NUISANCE else "auxiliary"
+
+
+def _unit(name: str, model: SpinModel) -> str:
+    if name in model.couplings:
+        return model.energy_unit
+    if name == CHI0:
+        return "1" if model.energy_unit == "1" else "emu/mol"
+    return "1"
+
+
+def _natural(name: str, model: SpinModel) -> float:
+    """The value a parameter has if the study says nothing of it."""
+    if name in model.couplings:
+        return float(model.couplings[name])
+    if name == G:
+        g = model.common_g
+        return math.nan if g is None else g
+    return 0.0
+
+
+def _chi0_factor(
+    entry: Section | None, name: str, model: SpinModel, unit: str | None = None
+) -> float:
+    """From chi0's unit and reference to SI per mole of magnetic ions."""
+    if name != CHI0:
+        return 1.0
+    reduced = model.energy_unit == "1"
+    try:
+        factor = quantity_factor("susceptibility", unit or _unit(name, model), reduced=reduced)
+    except UnitsError as error:
+        where = f"{entry.source}: {entry.at('unit')}: " if entry is not None else ""
+        raise UnitsError(f"{where}{error}") from None
+    per = entry.word("per", ("ion", "formula"), "ion") if entry is not None else "ion"
+    return factor / model.ions_per_formula if per == "formula" else factor

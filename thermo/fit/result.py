@@ -1,0 +1,343 @@
+"""What a fit found: values with errors, residuals, and honest words about both."""
+
+from __future__ import annotations
+
+import json
+import math
+from collections.abc import Mapping
+from dataclasses import dataclass, field
+from typing import TYPE_CHECKING
+
+import numpy as np
+from numpy.typing import ArrayLike, NDArray
+
+from thermo.errors import RangeError, StudyError
+from thermo.fit.forward import Forward, Points
+from thermo.fit.measured import QUANTITIES, Measured
+from thermo.fit.minimise import Minimum, Problem
+from thermo.fit.parameters import Values
+from thermo.fit.strict import did_you_mean
+from thermo.fit.study import Study
+from thermo.model.spin_model import SpinModel
+from thermo.units import quantity_factor
+
+if TYPE_CHECKING:
+    import xarray as xr
+
+Vector = NDArray[np.float64]
+
+CURVE_POINTS = 240
+
+
+@dataclass(frozen=True)
+class Estimate:
+    """One parameter after the fit, in ``unit``.
+
+    ``status`` "free", "fixed" or "tied" (then ``expression``); ``at_bound`` −1, 0, 1 for lower,
+    none, upper. ``standard_error`` is NaN for a fixed parameter and wherever it would mean
+    nothing; ``reason`` then says why.
+    """
+
+    name: str
+    role: str
+    status: str
+    unit: str
+    value: float
+    standard_error: float
+    start: float
+    lower: float
+    upper: float
+    at_bound: int
+    expression: str
+    reason: str
+
+
+@dataclass(frozen=True, eq=False)
+class SetResult:
+    """One data set after the fit; arrays of shape (n,) in SI (see ``data``).
+
+    ``uncertainty`` is what weighed the points; where the study states none, it is the scatter
+    found. ``residual`` is observed less fitted, ``chi_square`` the sum of their squares over
+    ``uncertainty`` squared.
+    """
+
+    data: Measured
+    fitted: Vector
+    residual: Vector
+    uncertainty: Vector
+    chi_square: float
+
+
+@dataclass(frozen=True, eq=False)
+class FitResult:
+    """The outcome of a fit.
+
+    ``covariance`` and ``correlation`` run over ``free_names``, in the parameters' units, NaN for
+    those at a bound. ``error_basis`` "stated": errors follow from the stated uncertainties, and
+    ``reduced_chi_square`` tests the model; "scatter": none were stated, errors follow from the
+    residuals' own scatter (errors scaled by the root of the reduced χ²) and
+    ``reduced_chi_square`` is NaN, because it then tests nothing. ``n_solves`` counts
+    diagonalisations of the cluster, ``n_evaluations`` model curves. ``converged`` is about the
+    minimiser only; ``trustworthy`` asks all the questions at once.
+    """
+
+    study: Study
+    parameters: tuple[Estimate, ...]
+    free_names: tuple[str, ...]
+    covariance: Vector
+    correlation: Vector
+    chi_square: float
+    reduced_chi_square: float
+    degrees_of_freedom: int
+    n_points: int
+    n_masked: int
+    error_basis: str
+    converged: bool
+    identifiable: bool
+    message: str
+    cautions: tuple[str, ...]
+    sets: tuple[SetResult, ...]
+    n_solves: int
+    n_evaluations: int
+    forward: Forward = field(repr=False)
+    values: Values = field(repr=False)
+
+    def __getitem__(self, name: str) -> Estimate:
+        """The estimate of a parameter by its name."""
+        for estimate in self.parameters:
+            if estimate.name == name:
+                return estimate
+        raise StudyError(
+            f"the fit has no parameter {name!r}; "
+            + did_you_mean(name, [e.name for e in self.parameters])
+        )
+
+    @property
+    def at_bound(self) -> tuple[str, ...]:
+        """Names of the parameters that sit at a bound."""
+        return tuple(e.name for e in self.parameters if e.at_bound)
+
+    @property
+    def trustworthy(self) -> bool:
+        """Converged, no parameter at a bound, and all of them fixed by the data."""
+        return self.converged and self.identifiable and not self.at_bound
+
+    @property
+    def couplings(self) -> Mapping[str, float]:
+        """The fitted couplings, in the model's energy unit."""
+        return {e.name: e.value for e in self.parameters if e.role == "coupling"}
+
+    @property
+    def model(self) -> SpinModel:
+        """The model with the fitted couplings (its g is still the model file's)."""
+        return self.study.model.with_couplings(self.couplings)
+
+    def predict(
+        self,
+        quantity: str,
+        temperature: ArrayLike,
+        field: ArrayLike = 0.0,
+        per: str = "ion",
+        units: str | None = None,
+    ) -> Vector:
+        """The fitted model's curve, χ0 and impurities included.
+
+        ``temperature`` [K, above zero] and ``field`` [T, from zero] broadcast against each
+        other; the result has their common shape, in ``units`` (default SI) per mole of ``per``
+        ("ion" or "formula"). No solve is needed. Raises RangeError, UnitsError, UnavailableError.
+        """
+        if quantity not in QUANTITIES:
+            raise RangeError(
+                f"quantity {quantity!r} is unknown; {did_you_mean(quantity, tuple(QUANTITIES))}"
+            )
+        if per not in ("ion", "formula"):
+            raise RangeError(f"per = {per!r} is unknown; use 'ion' or 'formula'")
+        try:
+            T, B = np.broadcast_arrays(
+                np.asarray(temperature, dtype=np.float64), np.asarray(field, dtype=np.float64)
+            )
+        except ValueError:
+            raise RangeError(
+                "temperature and field must be numbers whose shapes fit together"
+            ) from None
+        if not np.all(np.isfinite(T)) or np.any(T <= 0):
+            raise RangeError("every temperature must be a finite number above zero")
+        if not np.all(np.isfinite(B)) or np.any(B < 0):
+            raise RangeError("every field must be a finite number from zero upwards")
+        factor = 1.0
+        if units is not None:
+            factor = quantity_factor(QUANTITIES[quantity], units, reduced=self.study.reduced)
+        points = Points(quantity, np.ravel(T), np.ravel(B), per)
+        return self.forward.predict(points, self.values).reshape(T.shape) / factor
+
+    def to_dataset(self) -> xr.Dataset:
+        """The result as a ``fit`` dataset (see thermo.variables), with smooth curves to draw."""
+        from thermo.fit.dataset import fit_dataset
+
+        return fit_dataset(self)
+
+    def attributes(self) -> dict[str, str | int | float]:
+        """What the dataset says of the fit in words and numbers."""
+        model = self.study.model
+        return {
+            "title": self.study.title,
+            "energy_unit": model.energy_unit,
+            "bond_term": model.bond_term,
+            "n_sites": len(model.sites),
+            "ions_per_formula": float(model.ions_per_formula),
+            "model_text": model.text,
+            "model_digest": model.digest,
+            "model_couplings": json.dumps(dict(self.couplings)),
+            "study_text": self.study.text,
+            "method": "full",
+            "error_basis": self.error_basis,
+            "message": self.message,
+            "cautions": "\n".join(self.cautions),
+            "spectra_solved": self.n_solves,
+            "points_masked": self.n_masked,
+        }
+
+
+def make_result(study: Study, problem: Problem, minimum: Minimum) -> FitResult:
+    """Turn a minimum into estimates with errors."""
+    theta, free = minimum.theta, study.parameters.free
+    values = study.parameters.values(theta)
+    chi_square = float(minimum.residuals @ minimum.residuals)
+    n_points, dof = study.n_points, study.n_points - len(free)
+    weighted = study.weighted
+    # Without stated uncertainties the weights are only relative: their scale is the scatter.
+    scale = 1.0 if weighted else math.sqrt(chi_square / dof)
+    covariance = minimum.covariance * scale**2
+    error = np.sqrt(np.diag(covariance))
+    with np.errstate(invalid="ignore", divide="ignore"):
+        correlation = covariance / np.outer(error, error)
+    held = np.flatnonzero(minimum.bound)
+    estimates = []
+    for p in study.parameters.all:
+        k = next((i for i, q in enumerate(free) if q.name == p.name), None)
+        spread, reason = _error(values.slope[p.name], covariance, held, minimum, p.status)
+        value = values.value[p.name]
+        estimates.append(
+            Estimate(
+                name=p.name,
+                role=p.role,
+                status=p.status,
+                unit=p.unit,
+                value=value,
+                standard_error=spread,
+                start=study.parameters.values(study.parameters.start).value[p.name],
+                lower=p.lower,
+                upper=p.upper,
+                at_bound=0 if k is None else int(minimum.bound[k]),
+                expression=p.expression,
+                reason=reason,
+            )
+        )
+    sets, first = [], 0
+    for data in study.sets:
+        rows = slice(first, first + data.n_points)
+        first += data.n_points
+        residual = minimum.residuals[rows] * problem.sigma[rows]
+        # Noise-free points without uncertainties have no scatter to show.
+        share = minimum.residuals[rows] / scale if scale > 0 else np.zeros(data.n_points)
+        sets.append(
+            SetResult(
+                data=data,
+                fitted=data.value - residual,
+                residual=residual,
+                uncertainty=problem.sigma[rows] * scale,
+                chi_square=float(share @ share),
+            )
+        )
+    reduced = chi_square / dof if weighted and dof > 0 else math.nan
+    result = FitResult(
+        study=study,
+        parameters=tuple(estimates),
+        free_names=tuple(p.name for p in free),
+        covariance=covariance,
+        correlation=correlation,
+        chi_square=sum(item.chi_square for item in sets),
+        reduced_chi_square=reduced,
+        degrees_of_freedom=dof,
+        n_points=n_points,
+        n_masked=sum(data.n_masked for data in study.sets),
+        error_basis="stated" if weighted else "scatter",
+        converged=minimum.converged,
+        identifiable=minimum.identifiable,
+        message=minimum.message,
+        cautions=_cautions(study, minimum, estimates, correlation, reduced, scale),
+        sets=tuple(sets),
+        n_solves=problem.forward.cache.n_solves,
+        n_evaluations=problem.n_evaluations,
+        forward=problem.forward,
+        values=values,
+    )
+    return result
+
+
+def _error(
+    slope: Vector, covariance: Vector, held: NDArray[np.int64], minimum: Minimum, status: str
+) -> tuple[float, str]:
+    """Standard error of a parameter with this slope by the free ones, and why there is none."""
+    moved = np.flatnonzero(slope)
+    if status == "fixed":
+        return math.nan, "fixed"
+    if not moved.size:
+        return math.nan, "tied to fixed values"
+    if np.any(np.isin(moved, held)):
+        return math.nan, "at a bound" if status == "free" else "tied to a parameter at a bound"
+    if not minimum.identifiable:
+        return math.nan, f"the data do not fix {minimum.weak}"
+    return float(np.sqrt(slope[moved] @ covariance[np.ix_(moved, moved)] @ slope[moved])), ""
+
+
+def _cautions(
+    study: Study,
+    minimum: Minimum,
+    estimates: list[Estimate],
+    correlation: Vector,
+    reduced: float,
+    scale: float,
+) -> tuple[str, ...]:
+    found = []
+    if not minimum.converged:
+        found.append(f"the fit did not converge: it {minimum.message}")
+    for e in estimates:
+        if e.at_bound:
+            side, bound = ("lower", e.lower) if e.at_bound < 0 else ("upper", e.upper)
+            found.append(
+                f"{e.name} sits at its {side} bound {bound:g}: it has no standard error, and "
+                "those of the others hold only with it fixed there"
+            )
+    if not minimum.identifiable:
+        found.append(
+            f"the data do not fix {minimum.weak} separately: no standard errors; fix one of them"
+        )
+    if not study.weighted:
+        found.append(
+            "no uncertainties were stated: each set was weighted by its mean magnitude, the "
+            f"standard errors come from the residuals' scatter ({100 * scale:.2g} % of that "
+            "magnitude), and chi square says nothing about the model"
+        )
+    elif math.isfinite(reduced):
+        # Five standard deviations of a reduced chi square.
+        spread = 5 * math.sqrt(2 / (study.n_points - len(study.parameters.free)))
+        if reduced > 1 + spread:
+            found.append(
+                f"reduced chi square is {reduced:.3g}: the model does not describe the data within "
+                "their uncertainties, so the standard errors are too small"
+            )
+        elif reduced < 1 - spread:
+            found.append(
+                f"reduced chi square is {reduced:.3g}: the stated uncertainties are larger than "
+                "the scatter of the data, or their errors are not independent"
+            )
+    names = [p.name for p in study.parameters.free]
+    for i in range(len(names)):
+        for j in range(i):
+            if abs(correlation[i, j]) > 0.99:
+                found.append(
+                    f"{names[j]} and {names[i]} are correlated to {correlation[i, j]:+.4f}: the "
+                    "data fix little more than one combination of them"
+                )
+    return tuple(found)

@@ -1,0 +1,161 @@
+"""The study file: which data, which model, which parameters. Read whole and checked at once."""
+
+from __future__ import annotations
+
+import os
+import tomllib
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass
+from pathlib import Path
+
+import numpy as np
+
+from thermo.errors import DataError, StudyError, UnavailableError
+from thermo.fit.measured import MAGNETIC, Measured, read_measured
+from thermo.fit.parameters import CHI0, G, Parameters, read_parameters
+from thermo.fit.strict import Section
+from thermo.model import read_model
+from thermo.model.spin_model import SpinModel
+
+FORMAT = 1
+
+
+@dataclass(frozen=True, eq=False)
+class Study:
+    """What to fit: a model, data sets (already read and in SI units) and parameters."""
+
+    title: str
+    source: str
+    text: str
+    model: SpinModel
+    sets: tuple[Measured, ...]
+    parameters: Parameters
+
+    @property
+    def reduced(self) -> bool:
+        """Whether the model is dimensionless (energy unit "1") and the data with it."""
+        return self.model.energy_unit == "1"
+
+    @property
+    def n_points(self) -> int:
+        """Number of points that enter the fit."""
+        return sum(data.n_points for data in self.sets)
+
+    @property
+    def weighted(self) -> bool:
+        """Whether the data state their uncertainties."""
+        return all(data.uncertainty is not None for data in self.sets)
+
+
+def read_study(source: str | os.PathLike[str] | Mapping[str, object]) -> Study:
+    """Read a study file (TOML), or a mapping of the same shape, with its model and its data.
+
+    Paths in the file are relative to it; those of a mapping, to the working directory; a
+    mapping's ``model`` may be a mapping itself or a SpinModel. Raises StudyError, DataError,
+    UnitsError or ModelError, one sentence that leads with the file and the path to the key, and
+    UnavailableError where the model cannot give what was measured.
+    """
+    text = ""
+    if isinstance(source, Mapping):
+        name, folder, content = "study", Path(), source
+    else:
+        name, folder = os.fspath(source), Path(source).parent
+        text = _load(Path(source))
+        try:
+            content = tomllib.loads(text)
+        except (tomllib.TOMLDecodeError, RecursionError) as error:
+            raise StudyError(f"{name}: this is not valid TOML ({error}); correct it") from None
+    section = Section(content, "", name)
+    version = section.raw("format", f"the version of the study format, {FORMAT}")
+    if version != FORMAT or isinstance(version, bool):
+        raise section.fail("format", f"= {version!r} is not known; this program reads {FORMAT}")
+    title = section.text("title", "a title", Path(name).stem)
+    raw_model = section.raw("model", "the path of the model file, relative to the study")
+    raw_data = section.raw("data", "at least one [[data]] table")
+    raw_parameters = section.raw("parameters", "a [parameters] table")
+    section.close()
+
+    if isinstance(raw_model, SpinModel):
+        model = raw_model
+    elif isinstance(raw_model, Mapping):
+        model = read_model(raw_model)
+    elif isinstance(raw_model, str) and raw_model.strip():
+        model = read_model(folder / raw_model)
+    else:
+        raise section.fail("model", "must be the path of a model file; give one")
+    parameters = read_parameters(Section(raw_parameters, "parameters", name), model)
+    if isinstance(raw_data, Mapping) or not isinstance(raw_data, Sequence) or not raw_data:
+        raise section.fail("data", "must be one or more [[data]] tables; give at least one")
+    sets = tuple(
+        read_measured(Section(item, f"data[{k}]", name), folder, model.energy_unit == "1")
+        for k, item in enumerate(raw_data)
+    )
+    study = Study(title, name, text, model, sets, parameters)
+    _check(study)
+    return study
+
+
+def _load(path: Path) -> str:
+    try:
+        return path.read_text(encoding="utf-8-sig")
+    except FileNotFoundError:
+        raise StudyError(f"{path}: there is no such study file; check the path") from None
+    except UnicodeDecodeError:
+        raise StudyError(f"{path}: this is not a UTF-8 text file; is it a study?") from None
+    except (OSError, ValueError) as error:
+        reason = getattr(error, "strerror", None) or "its name is not valid"
+        raise StudyError(f"{path}: the study cannot be read ({reason})") from None
+
+
+def _check(study: Study) -> None:
+    """What can be known to be wrong before anything is solved."""
+    name, sets, free = study.source, study.sets, study.parameters.free
+    names = [data.name for data in sets]
+    for repeated in (n for n in names if names.count(n) > 1):
+        raise StudyError(f"{name}: two data sets are called {repeated!r}; rename one of them")
+    if not free:
+        raise StudyError(
+            f"{name}: no parameter is free, so there is nothing to fit; "
+            "give at least one a start and bounds instead of a fixed value"
+        )
+    stated = [data.name for data in sets if data.uncertainty is not None]
+    silent = [data.name for data in sets if data.uncertainty is None]
+    if stated and silent:
+        raise StudyError(
+            f"{name}: data set {stated[0]!r} states its uncertainties and {silent[0]!r} does not, "
+            "so they cannot be weighed against each other; give both or neither"
+        )
+    if study.n_points < len(free):
+        raise DataError(
+            f"{name}: {study.n_points} points are in use for {len(free)} free parameters; "
+            "widen the range or fix parameters"
+        )
+    if not study.weighted:
+        for data in sets:
+            if not np.any(data.value):
+                raise DataError(
+                    f"{data.file}: all values are zero, which fixes no scale; "
+                    "state an absolute_uncertainty in every data set"
+                )
+        if study.n_points == len(free):
+            raise DataError(
+                f"{name}: {study.n_points} points without uncertainties leave none to judge the "
+                f"errors of {len(free)} parameters by; give uncertainties or fix a parameter"
+            )
+    magnetic = [data for data in sets if data.quantity in MAGNETIC]
+    in_field = [data for data in sets if np.any(data.field > 0)]
+    if study.model.common_g is None and (magnetic or in_field):
+        first = (magnetic or in_field)[0]
+        raise UnavailableError(
+            f"{name}: data set {first.name!r} needs one g common to all sites and directions, but "
+            "the model's g differs; give the model one g, or fit zero-field specific heat only"
+        )
+    slopes = study.parameters.values(study.parameters.start).slope
+    unfelt = {n for n, felt in ((G, magnetic or in_field), (CHI0, magnetic)) if not felt}
+    unfelt |= {p.name for p in study.parameters.all if p.role == "auxiliary"}
+    for k, parameter in enumerate(free):
+        if not any(slope[k] for n, slope in slopes.items() if n not in unfelt):
+            raise StudyError(
+                f"{name}: parameters.{parameter.name} is free, but nothing in the data depends "
+                "on it; fix it, or add data that do"
+            )
