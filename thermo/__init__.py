@@ -21,6 +21,7 @@ if TYPE_CHECKING:
     from thermo.ensemble import curves
     from thermo.fit import fit, read_study
     from thermo.model import read_model
+    from thermo.model.level_table import read_levels
     from thermo.report import export_csv, plot
     from thermo.spectrum import solve, survey
     from thermo.storage import read_dataset as read
@@ -35,6 +36,7 @@ __all__ = [
     "fit",
     "plot",
     "read",
+    "read_levels",
     "read_model",
     "read_study",
     "solve",
@@ -48,6 +50,7 @@ _HOMES = {
     "fit": ("thermo.fit", "fit"),
     "plot": ("thermo.report", "plot"),
     "read": ("thermo.storage", "read_dataset"),
+    "read_levels": ("thermo.model.level_table", "read_levels"),
     "read_model": ("thermo.model", "read_model"),
     "read_study": ("thermo.fit", "read_study"),
     "solve": ("thermo.spectrum", "solve"),

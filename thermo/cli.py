@@ -9,12 +9,11 @@ from __future__ import annotations
 import contextlib
 import os
 import sys
-import threading
 import time
-from collections.abc import Callable, Sequence
+from collections.abc import Sequence
 from enum import StrEnum
 from pathlib import Path
-from typing import Annotated, Any, TypeVar
+from typing import TYPE_CHECKING, Annotated
 
 import typer
 
@@ -27,9 +26,11 @@ from thermo.arguments import (
     parse_grid,
     parse_size,
 )
-from thermo.errors import PartitaError
+from thermo.errors import PartitaError, SpectrumError
+from thermo.progress import Interrupted, work
 
-Result = TypeVar("Result")
+if TYPE_CHECKING:
+    import xarray as xr
 
 EXIT_CODES = """\b
 Exit codes:
@@ -135,7 +136,7 @@ def solve(
     spins = thermo.read_model(model)
     _tell_notes(spins.notes)
     started = time.monotonic()
-    levels = _work(
+    levels = work(
         lambda report: thermo.solve(spins, method=method.value, memory=limit, progress=report)
     )
     thermo.write(levels, output)
@@ -169,6 +170,9 @@ def curves(
     per: Annotated[Per, typer.Option(help="Per mole of magnetic ions or of formula units.")] = (
         Per.ion
     ),
+    g: Annotated[
+        float | None, typer.Option("--g", metavar="G", help="Replaces the model's own common g.")
+    ] = None,
     output: Annotated[
         Path | None,
         typer.Option(
@@ -184,7 +188,7 @@ def curves(
         check_target(output, (".nc", ".csv"), sources=(levels,))
     import thermo
 
-    spectrum = thermo.read(levels, "levels")
+    spectrum = _read(levels, "levels")
     dimensionless = spectrum.attrs["energy_unit"] == "1"
     system = units or (Units.reduced if dimensionless else Units.si)
     if temperatures is None:
@@ -195,7 +199,7 @@ def curves(
             f"{temperatures[-1]:g}{unit}, from the width of the spectrum; "
             "--temperature sets others"
         )
-    found = thermo.curves(spectrum, temperatures, fields, units=system.value, per=per.value)
+    found = thermo.curves(spectrum, temperatures, fields, units=system.value, per=per.value, g=g)
     if output is None:
         thermo.export_csv(found, sys.stdout)
     elif output.suffix.lower() == ".csv":
@@ -235,7 +239,7 @@ def fit(
 
     problem = thermo.read_study(study)
     _tell_notes(problem.model.notes)
-    found = _work(lambda report: thermo.fit(problem, progress=report, memory=limit))
+    found = work(lambda report: thermo.fit(problem, progress=report, memory=limit))
     result = found.to_dataset()
     print_fit(result)
     _tell_notes(found.cautions)
@@ -278,7 +282,7 @@ def plot(
     import thermo
 
     system = None if units is None else units.value
-    thermo.plot(thermo.read(file), target, what=what, units_system=system)
+    thermo.plot(_read(file), target, what=what, units_system=system)
     _confirm(f"wrote {target}")
 
 
@@ -305,9 +309,22 @@ def export(
 
     system = None if units is None else units.value
     target = sys.stdout if output is None else output
-    thermo.export_csv(thermo.read(file), target, units_system=system, what=what)
+    thermo.export_csv(_read(file), target, units_system=system, what=what)
     if output is not None:
         _confirm(f"wrote {output}")
+
+
+def _read(file: Path, kind: str | None = None) -> xr.Dataset:
+    """Read any file of ours; levels are held against their model as well."""
+    import thermo
+
+    dataset = thermo.read(file, kind)
+    if dataset.attrs["content"] != "levels":
+        return dataset
+    try:
+        return thermo.read_levels(file)
+    except SpectrumError as fault:
+        raise SpectrumError(f"{file}: {fault}") from None
 
 
 def _set_threads(threads: int | None) -> None:
@@ -338,76 +355,6 @@ def _confirm(sentence: str) -> None:
     """Tell someone who watches what was done; a script needs only the exit code."""
     if sys.stderr.isatty():
         _say(sentence)
-
-
-class _Bar:
-    """A progress bar on a terminal, shown only once the work has taken two seconds."""
-
-    patience = 2.0
-
-    def __init__(self) -> None:
-        self.started = time.monotonic()
-        self.done = 0.0
-        self.text = "preparing"
-        self.bar: Any = None
-        self.task: Any = None
-
-    def report(self, done: float, text: str) -> None:
-        self.done, self.text = done, text
-
-    def refresh(self) -> None:
-        if self.bar is None:
-            if not sys.stderr.isatty() or time.monotonic() - self.started < self.patience:
-                return
-            from rich.console import Console
-            from rich.progress import BarColumn, Progress, TaskProgressColumn, TextColumn
-            from rich.progress import TimeElapsedColumn as Elapsed
-
-            columns = (
-                BarColumn(30),
-                TaskProgressColumn(),
-                Elapsed(),
-                TextColumn("{task.description}"),
-            )
-            self.bar = Progress(*columns, console=Console(stderr=True), transient=True)
-            self.task = self.bar.add_task("", total=1.0)
-            self.bar.start()
-        self.bar.update(self.task, completed=self.done, description=self.text)
-
-    def close(self) -> None:
-        if self.bar is not None:
-            self.bar.stop()
-
-
-class _Interrupted(BaseException):
-    """Ctrl-C while the worker thread still computes: the process must not wait for it."""
-
-
-def _work(task: Callable[[Callable[[float, str], None]], Result]) -> Result:
-    """Run a long task in its own thread, so that Ctrl-C and the bar need not wait for LAPACK."""
-    bar = _Bar()
-    result: list[Result] = []
-    faults: list[BaseException] = []
-
-    def body() -> None:
-        try:
-            result.append(task(bar.report))
-        except BaseException as fault:
-            faults.append(fault)
-
-    worker = threading.Thread(target=body, daemon=True)
-    try:
-        worker.start()
-        while worker.is_alive():
-            worker.join(0.1)
-            bar.refresh()
-    except KeyboardInterrupt:
-        raise _Interrupted from None
-    finally:
-        bar.close()
-    if faults:
-        raise faults[0]
-    return result[0]
 
 
 # ---------------------------------------------------------------- faults to sentences
@@ -485,7 +432,7 @@ def main() -> None:
         warnings.simplefilter("ignore")
     try:
         code = run(sys.argv[1:])
-    except _Interrupted as fault:
+    except Interrupted as fault:
         # A thread deep in compiled code cannot be stopped: leave without waiting for it.
         code = _interrupted(fault)
         sys.stdout.flush()
