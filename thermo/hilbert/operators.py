@@ -91,11 +91,16 @@ def move_tables(
             else:
                 moves.append((i, j, step_i, step_j, flat))
 
+    # Most pairs of a cluster are alike; each kind is worked out once.
+    known: dict[tuple[bytes, int, int], dict[tuple[int, int], NDArray[np.complex128]]] = {}
     for (i, j), a in sorted(pair.items()):
-        operator = np.einsum("pxy,xac,ybd->pabcd", a, spins[i], spins[j])
-        scale = np.abs(a).max()
-        operator = np.where(np.abs(operator) > 1e-15 * scale, operator, 0)
-        collect(i, j, _steps(operator, int(encoding.dimension[i]), int(encoding.dimension[j])))
+        di, dj = int(encoding.dimension[i]), int(encoding.dimension[j])
+        key = (a.tobytes(), di, dj)
+        if key not in known:
+            operator = np.einsum("pxy,xac,ybd->pabcd", a, spins[i], spins[j])
+            operator = np.where(np.abs(operator) > 1e-15 * np.abs(a).max(), operator, 0)
+            known[key] = _steps(operator, di, dj)
+        collect(i, j, known[key])
     for i, d in sorted(ion.items()):
         operator = np.einsum("pxy,xab,ybc->pac", d, spins[i], spins[i])[:, :, None, :, None]
         operator = np.where(np.abs(operator) > 1e-15 * np.abs(d).max(), operator, 0)
