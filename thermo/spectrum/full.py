@@ -198,7 +198,8 @@ class FullSolver:
             if resolved == "total_spin":
                 shifted = values + shift * casimir
                 spin = _spin_by_window(shifted, shift, low, high, sector.twice_m)
-                values = shifted - shift * spin * (spin + 2) / 4
+                # Rounding of the shift cannot carry a level beyond the rigorous bounds.
+                values = np.clip(shifted - shift * spin * (spin + 2) / 4, low, high)
                 count *= spin + 1
             elif resolved == "magnetic_number":
                 m[:] = abs(sector.twice_m)
