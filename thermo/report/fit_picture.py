@@ -33,9 +33,9 @@ def draw_fit(fit: xr.Dataset, chosen: list[str]) -> Any:
         inner = outer[divmod(place, columns)].subgridspec(2, 1, height_ratios=(3, 1), hspace=0)
         upper = figure.add_subplot(inner[0])
         lower = figure.add_subplot(inner[1], sharex=upper)
-        _draw_dataset(upper, lower, fit, index, names[index])
+        _draw_dataset(upper, lower, fit, index, names[index].replace("$", r"\$"))
     figure.supxlabel(
-        textwrap.fill(summary(fit), width=70 if columns == 1 else 150),
+        textwrap.fill(summary(fit).replace("$", r"\$"), width=70 if columns == 1 else 150),
         fontsize=6.5, color=style.GREY, x=0.99, ha="right",
     )  # fmt: skip
     return figure
@@ -100,9 +100,8 @@ def _draw_dataset(upper: Axes, lower: Axes, fit: xr.Dataset, index: int, name: s
     lower.axhline(0, color=style.GREY, linewidth=0.6, zorder=0)
     if weighted:
         lower.axhspan(-1, 1, color=style.GREY, alpha=0.15, linewidth=0, zorder=0)
-    lower.set_ylabel(
-        r"resid. ($\sigma$)" if weighted else axis_label(r"\mathrm{resid.}", unit, power)
-    )
+    # Without uncertainties the residuals are in the unit and scale of the panel above.
+    lower.set_ylabel(r"resid. ($\sigma$)" if weighted else "resid.")
     top = max(1.15 * float(np.abs(lower.dataLim.intervaly).max()), 2.0 if weighted else 0.0)
     if top > 0:
         lower.set_ylim(-top, top)
