@@ -5,7 +5,7 @@ from __future__ import annotations
 import os
 from collections.abc import Callable, Mapping
 
-from thermo.fit.forward import Forward, Solver
+from thermo.fit.forward import Forward, Points, Solver, check_available
 from thermo.fit.minimise import make_problem, minimise
 from thermo.fit.parameters import CHI0
 from thermo.fit.result import Estimate, FitResult, SetResult, make_result
@@ -37,7 +37,11 @@ def fit(
     if solver is None:
         from thermo.spectrum.full import FullSolver
 
-        solver = FullSolver(study.model, memory)
+        full = FullSolver(study.model, memory)
+        for data in study.sets:  # before hours are spent on a spectrum that cannot serve
+            points = Points(data.quantity, data.temperature, data.field, data.per)
+            check_available(points, full.plan.resolved)
+        solver = full
     forward = Forward(study.model, solver, study.parameters.by_name[CHI0].to_si)
     problem = make_problem(study, forward, progress)
     return make_result(study, problem, minimise(problem))

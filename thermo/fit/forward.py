@@ -60,13 +60,16 @@ class SpectrumCache:
         self.solver = solver
         self.names = tuple(names)
         self.n_solves = 0
-        self.on_solve: Callable[[int], None] | None = None
         self._known: list[_Known] = []
 
     def levels(self, couplings: Vector) -> tuple[LevelTable, float]:
         """The table for the couplings' direction, and the scale λ its energies are to be
         multiplied by (largest |coupling|; 1 where all vanish)."""
-        scale = float(np.abs(couplings).max(initial=0.0)) or 1.0
+        scale = float(np.abs(couplings).max(initial=0.0))
+        if scale == 0:
+            # Without couplings all energies vanish: any table serves, with its energies at zero.
+            some = self._known[0].table if self._known else self._solve(couplings)
+            return replace(some, energy=np.zeros_like(some.energy)), 1.0
         direction = couplings / scale
         for k, known in enumerate(self._known):
             if np.abs(known.direction - direction).max(initial=0.0) <= SAME_DIRECTION:
@@ -77,14 +80,15 @@ class SpectrumCache:
                 flipped = _upside_down(known.table)
                 self._keep(_Known(direction, flipped))
                 return flipped, scale
-        table = self.solver.table(
-            {name: float(c) for name, c in zip(self.names, direction, strict=True)}
-        )
-        self.n_solves += 1
-        if self.on_solve is not None:
-            self.on_solve(self.n_solves)
+        table = self._solve(direction)
         self._keep(_Known(direction, table))
         return table, scale
+
+    def _solve(self, couplings: Vector) -> LevelTable:
+        self.n_solves += 1
+        return self.solver.table(
+            {name: float(c) for name, c in zip(self.names, couplings, strict=True)}
+        )
 
     def _keep(self, known: _Known) -> None:
         self._known.insert(0, known)
@@ -248,16 +252,7 @@ class Forward:
         self, points: Points, table: LevelTable, scale: float, g: float
     ) -> tuple[Vector, Vector]:
         """The quantity if all ions were in clusters, and if all were free; each (n,)."""
-        if points.quantity in MAGNETIC and table.resolved == "none":
-            raise UnavailableError(
-                f"{points.quantity} needs a conserved moment along the field, and this model does "
-                "not conserve M; fit zero-field specific heat only"
-            )
-        if np.any(points.field > 0) and table.resolved == "none":
-            raise UnavailableError(
-                f"{points.quantity} in a field needs a conserved moment, and this model does not "
-                "conserve M; fit zero-field specific heat only"
-            )
+        check_available(points, table.resolved)
         temperature = points.temperature / self.kelvin
         zeeman = g * self.tesla * points.field
         cluster = _cluster_moments(table, temperature / scale, zeeman / scale)
@@ -285,6 +280,19 @@ class Forward:
             self.curie * g**2 * variance / T,
         )
         return per * (chi * T if points.quantity == "chi_T" else chi)
+
+
+def check_available(points: Points, resolved: str) -> None:
+    """Refuse what levels without magnetic numbers cannot give (``resolved`` of a LevelTable)."""
+    if resolved in ("total_spin", "magnetic_number"):
+        return
+    in_field = bool(np.any(points.field > 0))
+    if points.quantity in MAGNETIC or in_field:
+        where = " in a field" if in_field and points.quantity not in MAGNETIC else ""
+        raise UnavailableError(
+            f"{points.quantity}{where} needs a magnetic moment that is conserved along the field, "
+            "and this model does not conserve M; fit zero-field specific heat only"
+        )
 
 
 def _upside_down(table: LevelTable) -> LevelTable:

@@ -1,0 +1,71 @@
+"""The demo: its tables are what its script makes, and its fit finds what went into them.
+
+The data are invented; nothing here checks the physics, only that the parts fit together.
+"""
+
+from __future__ import annotations
+
+import importlib.util
+from pathlib import Path
+
+import numpy as np
+import pytest
+
+from thermo.fit import fit
+
+DEMO = Path(__file__).parents[1] / "data_demo"
+
+
+@pytest.fixture(scope="module")
+def script():
+    spec = importlib.util.spec_from_file_location("make_data", DEMO / "make_data.py")
+    module = importlib.util.module_from_spec(spec)
+    spec.loader.exec_module(module)
+    return module
+
+
+def read(folder: Path, name: str) -> np.ndarray:
+    return np.loadtxt(folder / name, delimiter=",", skiprows=3)
+
+
+def test_the_tables_are_those_of_the_script_and_say_they_are_invented(
+    script, tmp_path, monkeypatch
+):
+    monkeypatch.setattr(script, "FOLDER", tmp_path)
+    script.main()
+    for name in ("susceptibility.csv", "specific_heat.csv"):
+        # Six digits are written, so the last may round either way on another machine.
+        np.testing.assert_allclose(read(DEMO, name), read(tmp_path, name), rtol=2e-5)
+        assert "invented" in (DEMO / name).read_text()
+    for name in ("model.toml", "study.toml", "make_data.py"):
+        assert "invented" in (DEMO / name).read_text()
+
+
+def test_the_smaller_cluster_serves_at_these_temperatures(script):
+    grids = script.grids()
+    errors = [read(DEMO, name)[:, 2] for name in ("susceptibility.csv", "specific_heat.csv")]
+    for small, large, error in zip(
+        script.exact(6, *grids), script.exact(8, *grids), errors, strict=True
+    ):
+        assert np.abs((small - large) / error).max() < 1
+
+
+@pytest.mark.parametrize("start", [{}, {"J_rung": 400.0, "J_leg": 10.0}])
+def test_the_fit_finds_what_went_in(script, tmp_path, start):
+    text = (DEMO / "study.toml").read_text()
+    for name, value in start.items():
+        old = {"J_rung": "start = 100.0", "J_leg": "start = 60.0"}[name]
+        assert old in text
+        text = text.replace(old, f"start = {value}")
+    text = text.replace('file = "', f'file = "{DEMO}/').replace(
+        '"model.toml"', f'"{DEMO}/model.toml"'
+    )
+    (tmp_path / "study.toml").write_text(text)
+    result = fit(tmp_path / "study.toml")
+    assert result.trustworthy
+    assert result.cautions == ()
+    assert 0.8 < result.reduced_chi_square < 1.25
+    for name, true in script.TRUE.items():
+        assert abs(result[name].value - true) < 3 * result[name].standard_error, name
+    # Two couplings: one solve for a step and one for its slope.
+    assert result.n_solves <= 2 * result.n_evaluations + 2
