@@ -223,6 +223,8 @@ def levels(tmp_path_factory: pytest.TempPathFactory) -> Path:
         (["-t", "2,inf"], "inf"),
         (["-b", "1,0"], "rising order"),
         (["-b", "strong"], "'strong'"),
+        (["--g", "nan"], "nan"),
+        (["--g", "0"], "--g 0"),
     ],
 )
 def test_bad_grid(partita: Command, levels: Path, arguments: list[str], word: str) -> None:

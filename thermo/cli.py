@@ -8,7 +8,9 @@ from __future__ import annotations
 
 import contextlib
 import os
+import shutil
 import sys
+import textwrap
 import time
 from collections.abc import Sequence
 from enum import StrEnum
@@ -26,7 +28,7 @@ from thermo.arguments import (
     parse_grid,
     parse_size,
 )
-from thermo.errors import PartitaError, SpectrumError
+from thermo.errors import PartitaError, RangeError, SpectrumError
 from thermo.progress import Interrupted, work
 
 if TYPE_CHECKING:
@@ -183,6 +185,8 @@ def curves(
     """Turn levels into curves over temperature and field."""
     temperatures = None if temperature is None else parse_grid(temperature, "temperature")
     fields = parse_grid(field, "field")
+    if g is not None and not 0 < g < float("inf"):
+        raise RangeError(f"--g {g:g} is no g factor; give a finite number above zero")
     check_source(levels)
     if output is not None:
         check_target(output, (".nc", ".csv"), sources=(levels,))
@@ -200,6 +204,8 @@ def curves(
             "--temperature sets others"
         )
     found = thermo.curves(spectrum, temperatures, fields, units=system.value, per=per.value, g=g)
+    if "unavailable" in found.attrs:
+        _note(f"no susceptibility and magnetization: {found.attrs['unavailable']}")
     if output is None:
         thermo.export_csv(found, sys.stdout)
     elif output.suffix.lower() == ".csv":
@@ -207,7 +213,7 @@ def curves(
     else:
         thermo.write(found, output)
     if output is not None:
-        _confirm(f"wrote {output}: {len(temperatures)} temperatures, {len(fields)} fields")
+        _confirm(f"wrote {output}: {len(temperatures)} temperatures × {len(fields)} fields")
 
 
 @app.command()
@@ -338,8 +344,12 @@ def _set_threads(threads: int | None) -> None:
 
 
 def _say(sentence: str) -> None:
-    # One sentence, one line, whatever a library put into its message.
-    print("partita: " + " ".join(sentence.split()), file=sys.stderr, flush=True)
+    # One sentence, whatever a library put into its message: one line, wrapped only for eyes.
+    line = "partita: " + " ".join(sentence.split())
+    if sys.stderr.isatty():
+        width = shutil.get_terminal_size().columns
+        line = textwrap.fill(line, width, subsequent_indent="  ", break_on_hyphens=False)
+    print(line, file=sys.stderr, flush=True)
 
 
 def _note(sentence: str) -> None:
