@@ -41,6 +41,19 @@ def test_the_tables_are_those_of_the_script_and_say_they_are_invented(
         assert "invented" in (DEMO / name).read_text()
 
 
+def test_a_false_minimum_is_not_passed_over_in_silence(tmp_path):
+    """From a leg coupling of the wrong sign the fit ends in another valley, and says so."""
+    text = (DEMO / "study.toml").read_text().replace("start = 60.0", "start = -100.0")
+    text = text.replace("start = 100.0", "start = 450.0")
+    text = text.replace('file = "', f'file = "{DEMO}/')
+    text = text.replace('"model.toml"', f'"{DEMO}/model.toml"')
+    (tmp_path / "study.toml").write_text(text)
+    result = fit(tmp_path / "study.toml")
+    assert result["J_leg"].value < 0
+    assert not result.trustworthy
+    assert any("start" in caution for caution in result.cautions)
+
+
 def test_the_smaller_cluster_serves_at_these_temperatures(script):
     grids = script.grids()
     errors = [read(DEMO, name)[:, 2] for name in ("susceptibility.csv", "specific_heat.csv")]
@@ -50,16 +63,15 @@ def test_the_smaller_cluster_serves_at_these_temperatures(script):
         assert np.abs((small - large) / error).max() < 1
 
 
-@pytest.mark.parametrize("start", [{}, {"J_rung": 400.0, "J_leg": 10.0}])
+@pytest.mark.parametrize("start", [{}, {"J_rung": 200.0, "J_leg": 0.0}])
 def test_the_fit_finds_what_went_in(script, tmp_path, start):
     text = (DEMO / "study.toml").read_text()
     for name, value in start.items():
         old = {"J_rung": "start = 100.0", "J_leg": "start = 60.0"}[name]
         assert old in text
         text = text.replace(old, f"start = {value}")
-    text = text.replace('file = "', f'file = "{DEMO}/').replace(
-        '"model.toml"', f'"{DEMO}/model.toml"'
-    )
+    text = text.replace('file = "', f'file = "{DEMO}/')
+    text = text.replace('"model.toml"', f'"{DEMO}/model.toml"')
     (tmp_path / "study.toml").write_text(text)
     result = fit(tmp_path / "study.toml")
     assert result.trustworthy

@@ -119,7 +119,7 @@ class FitResult:
 
     @property
     def trustworthy(self) -> bool:
-        """Converged, no parameter at a bound, and all of them fixed by the data."""
+        """Converged, no parameter at a bound, and all fixed by the data; not that the model is right."""
         return self.converged and self.identifiable and not self.at_bound
 
     @property
@@ -324,8 +324,9 @@ def _cautions(
         spread = 5 * math.sqrt(2 / (study.n_points - len(study.parameters.free)))
         if reduced > 1 + spread:
             found.append(
-                f"reduced chi square is {reduced:.3g}: the model does not describe the data within "
-                "their uncertainties, so the standard errors are too small"
+                f"reduced chi square is {reduced:.3g}: this minimum does not describe the data "
+                "within their uncertainties and the standard errors are too small; try other "
+                "starts, the other signs among them, or another model"
             )
         elif reduced < 1 - spread:
             found.append(
