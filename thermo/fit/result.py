@@ -119,7 +119,7 @@ class FitResult:
 
     @property
     def trustworthy(self) -> bool:
-        """Converged, no parameter at a bound, and all fixed by the data; not that the model is right."""
+        """Converged, no bound hit, all fixed by the data; not that the model is right."""
         return self.converged and self.identifiable and not self.at_bound
 
     @property
