@@ -382,9 +382,11 @@ def test_full_standard_output(partita: Command, levels: Path) -> None:
 
 
 def test_a_reader_that_stops_early_is_no_fault(levels: Path) -> None:
-    line = f"'{command_path()}' curves '{levels}' -t 1:300:9999 | head -n 1"
+    line = (
+        f"'{command_path()}' curves '{levels}' -t 1:300:9999 | head -n 1; exit ${{PIPESTATUS[0]}}"
+    )
     done = subprocess.run(["bash", "-c", line], capture_output=True, text=True)
-    assert done.stderr == ""
+    assert (done.returncode, done.stderr) == (0, "")
     assert len(done.stdout.splitlines()) == 1
 
 

@@ -388,8 +388,9 @@ def run(arguments: Sequence[str]) -> int:
             "that conserves more"
         )
         return _leave(fault, 5)
-    except BrokenPipeError:
-        # Whoever read the output has had enough (partita export … | head): not a fault.
+    except (BrokenPipeError, SystemExit):
+        # Whoever read the output has had enough (partita export … | head): not a fault. Typer
+        # turns it into SystemExit, which nothing else here raises.
         _drop_stdout()
         return 0
     except OSError as fault:
