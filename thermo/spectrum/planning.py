@@ -26,7 +26,8 @@ _PATIENCE_SECONDS = 4 * 3600.0
 _LINK_BYTES = 6
 # Representative, its stabiliser, its slots and weights in the real basis.
 _ORBIT_BYTES = 100
-_BASE_BYTES = 60 * 2**20
+# The interpreter with every library loaded.
+_BASE_BYTES = 230 * 2**20
 
 
 @dataclass(frozen=True)

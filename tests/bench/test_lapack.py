@@ -1,0 +1,59 @@
+"""The two-stage path against numpy where it is used, and where the crossovers lie."""
+
+from __future__ import annotations
+
+from functools import partial
+
+import numpy as np
+import pytest
+
+from tests.bench.measure import best
+from thermo.spectrum import lapack
+from thermo.spectrum.full import blas_threads, thread_count
+
+pytestmark = [pytest.mark.bench, pytest.mark.timeout(3600)]
+
+
+def block(n: int, complex_block: bool) -> np.ndarray:
+    rng = np.random.default_rng(n)
+    a = rng.standard_normal((n, n))
+    if complex_block:
+        a = a + 1j * rng.standard_normal((n, n))
+    return np.asfortranarray(a + a.conj().T)
+
+
+def in_place(a: np.ndarray, two_stage: bool) -> np.ndarray:
+    """Eigenvalues of a copy, whose time counts too."""
+    return lapack.eigenvalues(a.copy(order="F"), two_stage)
+
+
+@pytest.mark.parametrize(("kind", "factors"), [("real", (1, 1.5)), ("complex", (1, 1.5))])
+def test_two_stage_beats_numpy_where_it_is_used(kind: str, factors: tuple[float, ...]) -> None:
+    assert lapack.two_stage_works()
+    for factor in factors:
+        n = round(lapack.TWO_STAGE_FROM[kind] * factor)
+        a = block(n, kind == "complex")
+        with blas_threads(thread_count()):
+            numpy_time, ours = np.inf, np.inf
+            for _ in range(2):  # taken in turns, as the machine's speed drifts
+                numpy_time = min(numpy_time, best(partial(np.linalg.eigvalsh, a), 1))
+                ours = min(ours, best(partial(in_place, a, True), 1))
+        print(f"\n{kind} {n}: numpy {numpy_time:.2f} s, two-stage {ours:.2f} s, "
+              f"ratio {numpy_time / ours:.2f}")  # fmt: skip
+        assert numpy_time / ours >= 1.4
+
+
+def test_crossover_table() -> None:
+    print("\n   n  kind     numpy    one-stage  two-stage (s)")
+    for n in (500, 1000, 1500, 2000, 3000, 4000, 5000):
+        for kind in ("real", "complex"):
+            if kind == "complex" and n > 3000:
+                continue
+            a = block(n, kind == "complex")
+            with blas_threads(thread_count()):
+                times = [
+                    best(partial(np.linalg.eigvalsh, a), 2),
+                    best(partial(in_place, a, False), 2),
+                    best(partial(in_place, a, True), 2),
+                ]
+            print(f"{n:5d}  {kind:8s}" + "".join(f"{t:10.3f}" for t in times))
