@@ -169,7 +169,7 @@ SHAPES = {
 }  # fmt: skip
 
 SPINS = [0.5, 1.0, 1.5, 2.0, 2.5]
-LARGEST = 600  # states; the dense twin takes a fraction of a second there
+LARGEST = 500  # states; the dense twin takes a tenth of a second there
 
 
 def values():
