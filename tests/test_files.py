@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import os
 import subprocess
+import tempfile
 import warnings
 from collections.abc import Iterator
 from pathlib import Path
@@ -388,17 +389,19 @@ def test_full_device() -> None:
 
 
 @pytest.fixture(params=["4k", "64k", "128k"])
-def tiny_disk(tmp_path: Path, request: pytest.FixtureRequest) -> Iterator[Path]:
-    place = tmp_path / "tiny"
-    place.mkdir()
+def tiny_disk(request: pytest.FixtureRequest) -> Iterator[Path]:
+    # Outside pytest's own folders: another run may clear those while this is mounted.
+    place = Path(tempfile.mkdtemp(prefix="tiny-disk-"))
     size = request.param
     made = subprocess.run(
         ["mount", "-t", "tmpfs", "-o", f"size={size}", "tmpfs", str(place)], capture_output=True
     )
     if made.returncode:
+        place.rmdir()
         pytest.skip("mounting a small disk needs root")
     yield place
     subprocess.run(["umount", "--lazy", str(place)], check=True)
+    place.rmdir()
 
 
 def test_full_disk_leaves_nothing_behind(tiny_disk: Path) -> None:

@@ -13,11 +13,15 @@ from thermo.model.lattices import LATTICES
 
 def lattice(name, size, couplings=None, **more):
     couplings = couplings or {"nearest": "J1"}
-    return read_model({
-        "format": 1, "energy_unit": "1", "bond_term": "+J S.S",
-        "couplings": {"J1": 1.0, "J2": 0.5, "J3": 0.25},
-        "lattice": {"name": name, "size": size, "spin": 0.5, "couplings": couplings} | more,
-    })
+    return read_model(
+        {
+            "format": 1,
+            "energy_unit": "1",
+            "bond_term": "+J S.S",
+            "couplings": {"J1": 1.0, "J2": 0.5, "J3": 0.25},
+            "lattice": {"name": name, "size": size, "spin": 0.5, "couplings": couplings} | more,
+        }
+    )
 
 
 def degrees(model, coupling="J1"):
@@ -39,16 +43,19 @@ def told(model):
 
 
 # Coordination numbers: facts of elementary geometry.
-@pytest.mark.parametrize(("name", "size", "roles", "expected"), [
-    ("chain", [5], ("nearest", "next"), (2, 2)),
-    ("chain", [10], ("strong", "weak", "next"), (1, 1, 2)),
-    ("ladder", [5], ("leg", "rung", "diagonal"), (2, 1, 2)),
-    ("square", [5, 3], ("nearest", "diagonal"), (4, 4)),
-    ("triangular", [5, 5], ("nearest", "next"), (6, 6)),
-    ("honeycomb", [5, 5], ("nearest", "next"), (3, 6)),
-    ("kagome", [4, 4], ("nearest", "next"), (4, 4)),
-    ("cubic", [3, 3, 3], ("nearest", "next"), (6, 12)),
-])
+@pytest.mark.parametrize(
+    ("name", "size", "roles", "expected"),
+    [
+        ("chain", [5], ("nearest", "next"), (2, 2)),
+        ("chain", [10], ("strong", "weak", "next"), (1, 1, 2)),
+        ("ladder", [5], ("leg", "rung", "diagonal"), (2, 1, 2)),
+        ("square", [5, 3], ("nearest", "diagonal"), (4, 4)),
+        ("triangular", [5, 5], ("nearest", "next"), (6, 6)),
+        ("honeycomb", [5, 5], ("nearest", "next"), (3, 6)),
+        ("kagome", [4, 4], ("nearest", "next"), (4, 4)),
+        ("cubic", [3, 3, 3], ("nearest", "next"), (6, 12)),
+    ],
+)
 def test_coordination_numbers(name, size, roles, expected):
     couplings = {role: f"J{k + 1}" for k, role in enumerate(roles)}
     model = lattice(name, size, couplings)
@@ -66,9 +73,7 @@ def test_bonds_of_a_role_are_all_pairs_at_one_distance(entry):
         return min((a, b, offset), (b, a, back))
 
     for role, bonds in entry.roles.items():
-        listed = [
-            key(entry.basis.index(a), entry.basis.index(b), offset) for a, b, offset in bonds
-        ]
+        listed = [key(entry.basis.index(a), entry.basis.index(b), offset) for a, b, offset in bonds]
         assert len(set(listed)) == len(listed), role
         lengths = {
             round(float(np.linalg.norm(np.array(o) @ vectors + positions[b] - positions[a])), 9)
@@ -87,10 +92,18 @@ def test_bonds_of_a_role_are_all_pairs_at_one_distance(entry):
         assert near == set(listed), role
 
 
-@pytest.mark.parametrize(("size", "cells"), [
-    ([4, 4], 16), ([[3, 1], [-1, 3]], 10), ([[3, 3], [-3, 3]], 18), ([[4, 2], [-2, 4]], 20),
-    ([[1, 3], [3, -1]], 10), ([[-4, 0], [0, -3]], 12), ([[103, 1], [10, 0]], 10),
-])
+@pytest.mark.parametrize(
+    ("size", "cells"),
+    [
+        ([4, 4], 16),
+        ([[3, 1], [-1, 3]], 10),
+        ([[3, 3], [-3, 3]], 18),
+        ([[4, 2], [-2, 4]], 20),
+        ([[1, 3], [3, -1]], 10),
+        ([[-4, 0], [0, -3]], 12),
+        ([[103, 1], [10, 0]], 10),
+    ],
+)
 def test_superlattices_of_the_square(size, cells):
     model = lattice("square", size)
     assert len(model.sites) == cells
@@ -110,8 +123,9 @@ def test_the_4x4_square_has_32_different_bonds():
 def test_tilted_square_is_the_cell_expected_by_hand():
     """The 10-site square [[3,1],[-1,3]] is Z/10 with steps 1 and 3 (x + 3y or its mirror)."""
     model = lattice("square", [[3, 1], [-1, 3]])
-    y_step = next(p for p in model.translations if p[model_index(model, (0, 0))]
-                  == model_index(model, (0, 1)))
+    y_step = next(
+        p for p in model.translations if p[model_index(model, (0, 0))] == model_index(model, (0, 1))
+    )
     x_step = next(p for p in model.translations if p is not y_step)
     here, x_images = 0, []
     for _ in range(10):
@@ -130,12 +144,17 @@ def model_index(model, cell, name="A"):
     return [s.name for s in model.sites].index(f"{name}[{','.join(map(str, cell))}]")
 
 
-@pytest.mark.parametrize(("name", "size", "boundary", "bonds"), [
-    ("chain", [6], "open", 5), ("square", [3, 4], "open", 2 * 4 + 3 * 3),
-    ("square", [3, 4], ["periodic", "open"], 3 * 4 + 3 * 3),
-    ("square", [3, 4], ["open", "periodic"], 2 * 4 + 3 * 4),
-    ("cubic", [2, 2, 2], "open", 12), ("kagome", [2, 2], "open", 4 * 3 + 2 + 2 + 1),
-])
+@pytest.mark.parametrize(
+    ("name", "size", "boundary", "bonds"),
+    [
+        ("chain", [6], "open", 5),
+        ("square", [3, 4], "open", 2 * 4 + 3 * 3),
+        ("square", [3, 4], ["periodic", "open"], 3 * 4 + 3 * 3),
+        ("square", [3, 4], ["open", "periodic"], 2 * 4 + 3 * 4),
+        ("cubic", [2, 2, 2], "open", 12),
+        ("kagome", [2, 2], "open", 4 * 3 + 2 + 2 + 1),
+    ],
+)
 def test_open_boundaries(name, size, boundary, bonds):
     model = lattice(name, size, boundary=boundary)
     assert len(model.bonds) == bonds
@@ -160,11 +179,18 @@ def assert_symmetry(model):
         assert moved == bonds
 
 
-@pytest.mark.parametrize(("name", "size", "boundary", "count"), [
-    ("chain", [6], "periodic", 1), ("chain", [6], "open", 0), ("square", [4, 4], "periodic", 2),
-    ("square", [4, 4], ["open", "periodic"], 1), ("kagome", [3, 2], "periodic", 2),
-    ("cubic", [3, 2, 2], "periodic", 3), ("square", [[3, 1], [-1, 3]], "periodic", 2),
-])
+@pytest.mark.parametrize(
+    ("name", "size", "boundary", "count"),
+    [
+        ("chain", [6], "periodic", 1),
+        ("chain", [6], "open", 0),
+        ("square", [4, 4], "periodic", 2),
+        ("square", [4, 4], ["open", "periodic"], 1),
+        ("kagome", [3, 2], "periodic", 2),
+        ("cubic", [3, 2, 2], "periodic", 3),
+        ("square", [[3, 1], [-1, 3]], "periodic", 2),
+    ],
+)
 def test_translations_are_symmetries(name, size, boundary, count):
     model = lattice(name, size, boundary=boundary)
     assert len(model.translations) == count
@@ -215,12 +241,24 @@ def test_several_couplings_in_one_role_and_their_direction():
 
 
 def test_spins_and_g_of_the_basis():
-    model = lattice("ladder", [2], {"rung": "J1"}, boundary="open", spin=[0.5, "3/2"],
-                    g={"A": 2.1, "B": [2, 2, 2.2]})
+    model = lattice(
+        "ladder",
+        [2],
+        {"rung": "J1"},
+        boundary="open",
+        spin=[0.5, "3/2"],
+        g={"A": 2.1, "B": [2, 2, 2.2]},
+    )
     assert list(model.spins) == [0.5, 1.5, 0.5, 1.5]
     assert model.sites[1].g[2, 2] == 2.2
-    named = lattice("ladder", [2], {"rung": "J1"}, boundary="open", spin={"A": 0.5, "B": 1.5},
-                    g={"A": 2.1, "B": [2, 2, 2.2]})
+    named = lattice(
+        "ladder",
+        [2],
+        {"rung": "J1"},
+        boundary="open",
+        spin={"A": 0.5, "B": 1.5},
+        g={"A": 2.1, "B": [2, 2, 2.2]},
+    )
     assert named.digest == model.digest
 
 
@@ -231,10 +269,18 @@ def test_ion_terms_on_all_sites():
 
 def test_cell_of_any_dimension():
     for dimension in (1, 2, 3):
-        model = read_model({
-            "format": 1, "energy_unit": "K", "bond_term": "+J S.S", "couplings": {"J": 1.0},
-            "cell": {"repeat": [3] * dimension, "site": [{"spin": 0.5}],
-                     "bond": [{"sites": [0, 0], "offset": [1] * dimension, "coupling": "J"}]},
-        })
+        model = read_model(
+            {
+                "format": 1,
+                "energy_unit": "K",
+                "bond_term": "+J S.S",
+                "couplings": {"J": 1.0},
+                "cell": {
+                    "repeat": [3] * dimension,
+                    "site": [{"spin": 0.5}],
+                    "bond": [{"sites": [0, 0], "offset": [1] * dimension, "coupling": "J"}],
+                },
+            }
+        )
         assert len(model.sites) == len(model.bonds) == 3**dimension
         assert degrees(model, "J") == {2}

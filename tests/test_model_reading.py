@@ -20,14 +20,24 @@ ions_per_formula = 2
 J_leg = 70.0
 J_rung = 140.0
 """
-LISTED = LADDER + "".join(
-    f'[[site]]\nname = "{name}{k}"\nspin = 0.5\ng = 2.1\n' for k in range(3) for name in "AB"
-) + "".join(
-    f'[[bond]]\nsites = ["{a}{k}", "{b}{(k + step) % 3}"]\ncoupling = "{c}"\n'
-    for k in range(3)
-    for a, b, step, c in (("A", "A", 1, "J_leg"), ("B", "B", 1, "J_leg"), ("A", "B", 0, "J_rung"))
+LISTED = (
+    LADDER
+    + "".join(
+        f'[[site]]\nname = "{name}{k}"\nspin = 0.5\ng = 2.1\n' for k in range(3) for name in "AB"
+    )
+    + "".join(
+        f'[[bond]]\nsites = ["{a}{k}", "{b}{(k + step) % 3}"]\ncoupling = "{c}"\n'
+        for k in range(3)
+        for a, b, step, c in (
+            ("A", "A", 1, "J_leg"),
+            ("B", "B", 1, "J_leg"),
+            ("A", "B", 0, "J_rung"),
+        )
+    )
 )
-CELL = LADDER + """
+CELL = (
+    LADDER
+    + """
 [cell]
 repeat = [3]
 boundary = "periodic"
@@ -51,7 +61,10 @@ coupling = "J_leg"
 sites = ["A", "B"]
 coupling = "J_rung"
 """
-NAMED = LADDER + """
+)
+NAMED = (
+    LADDER
+    + """
 [lattice]
 name = "ladder"
 size = [3]
@@ -60,6 +73,7 @@ spin = 0.5
 g = [[2.1, 0, 0], [0, 2.1, 0], [0, 0, 2.1]]
 couplings = { leg = "J_leg", rung = "J_rung" }
 """
+)
 
 
 @pytest.mark.parametrize("text", [LISTED, CELL, NAMED], ids=["listed", "cell", "named"])
@@ -83,28 +97,41 @@ def test_the_three_ways_give_one_cluster(text, tmp_path):
 def simple():
     """A dimer as a mapping, spoilt in one place by each test of a fault."""
     return {
-        "format": 1, "energy_unit": "K", "bond_term": "+J S.S",
+        "format": 1,
+        "energy_unit": "K",
+        "bond_term": "+J S.S",
         "couplings": {"J_leg": 70.0, "J_rung": 140.0},
         "site": [{"name": "a", "spin": 0.5}, {"name": "b", "spin": 1, "g": 2.1}],
-        "bond": [{"sites": ["a", "b"], "coupling": "J_leg"},
-                 {"sites": [0, 1], "coupling": "J_rung", "form": "xy"}],
+        "bond": [
+            {"sites": ["a", "b"], "coupling": "J_leg"},
+            {"sites": [0, 1], "coupling": "J_rung", "form": "xy"},
+        ],
         "ion": [{"sites": ["b"], "coupling": "J_leg", "form": "axial"}],
     }
 
 
 def celled():
     return {
-        "format": 1, "energy_unit": "1", "bond_term": "+J S.S", "couplings": {"J": 1.0},
-        "cell": {"repeat": [2, 3], "boundary": "periodic", "site": [{"name": "A", "spin": 0.5}],
-                 "bond": [{"sites": ["A", "A"], "offset": [0, 1], "coupling": "J"}]},
+        "format": 1,
+        "energy_unit": "1",
+        "bond_term": "+J S.S",
+        "couplings": {"J": 1.0},
+        "cell": {
+            "repeat": [2, 3],
+            "boundary": "periodic",
+            "site": [{"name": "A", "spin": 0.5}],
+            "bond": [{"sites": ["A", "A"], "offset": [0, 1], "coupling": "J"}],
+        },
     }
 
 
 def latticed():
     return {
-        "format": 1, "energy_unit": "1", "bond_term": "+J S.S", "couplings": {"J": 1.0},
-        "lattice": {"name": "square", "size": [3, 3], "spin": 0.5,
-                    "couplings": {"nearest": "J"}},
+        "format": 1,
+        "energy_unit": "1",
+        "bond_term": "+J S.S",
+        "couplings": {"J": 1.0},
+        "lattice": {"name": "square", "size": [3, 3], "spin": 0.5, "couplings": {"nearest": "J"}},
     }
 
 
@@ -148,8 +175,12 @@ def test_notes_on_what_has_no_effect():
     source = simple()
     source["couplings"]["J_far"] = 1.0
     source["ion"][0]["sites"] = ["a", "b"]
-    source["bond"][1] = {"sites": [0, 1], "coupling": "J_rung", "form": "antisymmetric",
-                         "vector": [0, 0, 0]}
+    source["bond"][1] = {
+        "sites": [0, 1],
+        "coupling": "J_rung",
+        "form": "antisymmetric",
+        "vector": [0, 0, 0],
+    }
     model = read_model(source)
     notes = "\n".join(model.notes)
     assert "couplings.J_far: no bond" in notes
@@ -195,9 +226,13 @@ FAULTS = [
     (simple, "title", 3, r"^title: 3 is not a name or text"),
     (simple, "ions_per_formula", 0, r"^ions_per_formula: 0 is not positive"),
     (simple, "ions_per_formula", NAN, r"^ions_per_formula: nan"),
-    (simple, "bond.0.coupling", "J_lge",
-     r"^bond\[0\]\.coupling: 'J_lge' is not in \[couplings\] \(it has J_leg, J_rung\); "
-     r"did you mean 'J_leg'\?$"),
+    (
+        simple,
+        "bond.0.coupling",
+        "J_lge",
+        r"^bond\[0\]\.coupling: 'J_lge' is not in \[couplings\] \(it has J_leg, J_rung\); "
+        r"did you mean 'J_leg'\?$",
+    ),
     (simple, "bond.0.coupling", "X", r"^bond\[0\]\.coupling: .*correct the name or add it"),
     (simple, "bond.0.coupling", MISSING, r"^bond\[0\]\.coupling: missing"),
     (simple, "bond.0.coupling", 3.0, r"^bond\[0\]\.coupling: 3\.0 is not a name"),
@@ -214,8 +249,12 @@ FAULTS = [
     (simple, "bond.0.vector", [0, 0, 1], r"^bond\[0\]\.vector: has no meaning with the form"),
     (simple, "bond.0.offset", [1], r"^bond\[0\]\.offset: unknown key"),
     (simple, "bond.0.matrix", [[1, 0], [0, 1]], r"^bond\[0\]\.matrix: is not a 3x3 matrix"),
-    (simple, "bond.0.matrix", [[1, 0, 0], [0, NAN, 0], [0, 0, 1]],
-     r"^bond\[0\]\.matrix\[1\]\[1\]: nan"),
+    (
+        simple,
+        "bond.0.matrix",
+        [[1, 0, 0], [0, NAN, 0], [0, 0, 1]],
+        r"^bond\[0\]\.matrix\[1\]\[1\]: nan",
+    ),
     (simple, "bond.1.matrix", [[1, 0, 0]] * 3, r"^bond\[1\]\.form: stands beside a matrix"),
     (simple, "bond", {"sites": [0, 1]}, r"^bond: .* is not a list; give one \[\[bond\]\]"),
     (simple, "bond.0", 5, r"^bond\[0\]: 5 is not a table"),
@@ -234,8 +273,12 @@ FAULTS = [
     (simple, "site.0.spin", 1e20, r"^site: .*62-bit limit"),
     (simple, "site.0.spin", 1e300, r"^site\[0\]\.spin: 1e\+300 is too large"),
     (simple, "couplings.J_leg", 10**400, r"^couplings\.J_leg: the number has hundreds of digits"),
-    (simple, "site.0.g", [[2, 0.1, 0], [0, 2, 0], [0, 0, 2]],
-     r"^site\[0\]\.g: the matrix is not symmetric \(entry \[0\]\[1\] is 0\.1, \[1\]\[0\] is 0\)"),
+    (
+        simple,
+        "site.0.g",
+        [[2, 0.1, 0], [0, 2, 0], [0, 0, 2]],
+        r"^site\[0\]\.g: the matrix is not symmetric \(entry \[0\]\[1\] is 0\.1, \[1\]\[0\] is 0\)",
+    ),
     (simple, "site.0.g", 0, r"^site\[0\]\.g: g is zero"),
     (simple, "site.0.g", NAN, r"^site\[0\]\.g: nan"),
     (simple, "site.0.g", [2, 2], r"^site\[0\]\.g: has 2 entries"),
@@ -247,8 +290,12 @@ FAULTS = [
     (simple, "ion.0.coupling", "D", r"^ion\[0\]\.coupling: 'D' is not in"),
     (simple, "ion.0.sites", [], r"^ion\[0\]\.sites: names no site"),
     (simple, "ion.0.sites", ["b", 1], r"^ion\[0\]\.sites\[1\]: site 'b' is named twice"),
-    (simple, "ion.0", {"sites": [1], "coupling": "J_leg", "matrix": [[0, 1, 0]] + [[0] * 3] * 2},
-     r"^ion\[0\]\.matrix: the matrix is not symmetric"),
+    (
+        simple,
+        "ion.0",
+        {"sites": [1], "coupling": "J_leg", "matrix": [[0, 1, 0]] + [[0] * 3] * 2},
+        r"^ion\[0\]\.matrix: the matrix is not symmetric",
+    ),
     (simple, "lattice", {}, r"^lattice: stands beside site, but .* one way"),
     (celled, "bond", [], r"^bond: stands beside cell, .*cell\.bond"),
     (celled, "cell.repeat", MISSING, r"^cell\.repeat: missing"),
@@ -262,8 +309,12 @@ FAULTS = [
     (celled, "cell.repeat", [2], r"^cell\.bond\[0\]\.offset: has 2 entries"),
     (celled, "cell.boundary", "closed", r"^cell\.boundary: 'closed' is not known"),
     (celled, "cell.boundary", ["open"], r"^cell\.boundary: has 1 entries"),
-    (celled, "cell.bond.0.offset", [0, 0],
-     r"^cell\.bond\[0\]\.sites: joins .* to itself; .*offset"),
+    (
+        celled,
+        "cell.bond.0.offset",
+        [0, 0],
+        r"^cell\.bond\[0\]\.sites: joins .* to itself; .*offset",
+    ),
     (celled, "cell.bond.0.offset", [0, 0.5], r"^cell\.bond\[0\]\.offset\[1\]: 0\.5 is not a whole"),
     (celled, "cell.site", [], r"^cell\.site: the cluster is empty"),
     (latticed, "lattice.name", "squre", r"^lattice\.name: .*did you mean 'square'"),
@@ -275,16 +326,27 @@ FAULTS = [
     (latticed, "lattice.g", {"B": 2.0}, r"^lattice\.g\.B: unknown key"),
     (latticed, "lattice.couplings", MISSING, r"^lattice\.couplings: missing"),
     (latticed, "lattice.couplings", "J", r"^lattice\.couplings: 'J' is not a table"),
-    (latticed, "lattice.couplings.diagnal", "J",
-     r"^lattice\.couplings\.diagnal: .*no such role; did you mean 'diagonal'"),
+    (
+        latticed,
+        "lattice.couplings.diagnal",
+        "J",
+        r"^lattice\.couplings\.diagnal: .*no such role; did you mean 'diagonal'",
+    ),
     (latticed, "lattice.couplings.nearest", "K", r"^lattice\.couplings\.nearest: 'K' is not in"),
     (latticed, "lattice.couplings.nearest", 1.0, r"^lattice\.couplings\.nearest: 1\.0 is not a c"),
     (latticed, "lattice.couplings.nearest", [], r"^lattice\.couplings\.nearest: names no coupling"),
-    (latticed, "lattice.couplings.nearest", ["J", {"coupling": "J", "form": "x"}],
-     r"^lattice\.couplings\.nearest\[1\]\.form: 'x' is not known"),
-    (latticed, "lattice", {"name": "chain", "size": [4], "spin": 1,
-                           "couplings": {"nearest": "J", "weak": "J"}},
-     r"^lattice\.couplings: the roles nearest, weak do not go together"),
+    (
+        latticed,
+        "lattice.couplings.nearest",
+        ["J", {"coupling": "J", "form": "x"}],
+        r"^lattice\.couplings\.nearest\[1\]\.form: 'x' is not known",
+    ),
+    (
+        latticed,
+        "lattice",
+        {"name": "chain", "size": [4], "spin": 1, "couplings": {"nearest": "J", "weak": "J"}},
+        r"^lattice\.couplings: the roles nearest, weak do not go together",
+    ),
 ]
 
 
@@ -301,8 +363,11 @@ def spoil(source, where, value):
     return source
 
 
-@pytest.mark.parametrize(("make", "where", "value", "says"), FAULTS,
-                         ids=[f"{m.__name__}-{w}-{k}" for k, (m, w, _, _) in enumerate(FAULTS)])
+@pytest.mark.parametrize(
+    ("make", "where", "value", "says"),
+    FAULTS,
+    ids=[f"{m.__name__}-{w}-{k}" for k, (m, w, _, _) in enumerate(FAULTS)],
+)
 def test_each_fault_is_one_sentence(make, where, value, says):
     with pytest.raises(ModelError) as caught:
         read_model(spoil(make(), where, value))
@@ -316,20 +381,23 @@ def assert_sentence(message):
     assert "; " in message, "it should say what to do"
 
 
-@pytest.mark.parametrize(("content", "says"), [
-    (LADDER.replace("format = 1", "format 1"), r"not valid TOML: .*line 2, column"),
-    ('{"format": 1,', "not valid JSON: .*line 1 column"),
-    ('{"format": 1, "format": 1}', "'format' is given twice"),
-    (LADDER.replace("70.0", "nan"), r"couplings\.J_leg: nan is not a finite"),
-    (LADDER.replace("70.0", "1e999"), r"couplings\.J_leg: inf is not a finite"),
-    (LADDER.replace("70.0", "2024-01-01"), r"couplings\.J_leg: .* is not a number"),
-    (LADDER.replace("70.0", "70,0"), "not valid TOML: .*line 8"),
-    ("a = " + "[" * 5000, "not valid TOML"),
-    ("a = " + "1" * 5000, "not valid TOML"),
-    (b"CDF\x01\x00\x00\xff\xfe", "is not a text in UTF-8"),
-    ("format = 1\0", "is not a text in UTF-8"),
-    ("", "format: missing"),
-])
+@pytest.mark.parametrize(
+    ("content", "says"),
+    [
+        (LADDER.replace("format = 1", "format 1"), r"not valid TOML: .*line 2, column"),
+        ('{"format": 1,', "not valid JSON: .*line 1 column"),
+        ('{"format": 1, "format": 1}', "'format' is given twice"),
+        (LADDER.replace("70.0", "nan"), r"couplings\.J_leg: nan is not a finite"),
+        (LADDER.replace("70.0", "1e999"), r"couplings\.J_leg: inf is not a finite"),
+        (LADDER.replace("70.0", "2024-01-01"), r"couplings\.J_leg: .* is not a number"),
+        (LADDER.replace("70.0", "70,0"), "not valid TOML: .*line 8"),
+        ("a = " + "[" * 5000, "not valid TOML"),
+        ("a = " + "1" * 5000, "not valid TOML"),
+        (b"CDF\x01\x00\x00\xff\xfe", "is not a text in UTF-8"),
+        ("format = 1\0", "is not a text in UTF-8"),
+        ("", "format: missing"),
+    ],
+)
 def test_unreadable_files(content, says, tmp_path):
     path = tmp_path / "model.toml"
     path.write_bytes(content if isinstance(content, bytes) else content.encode())
@@ -340,8 +408,13 @@ def test_unreadable_files(content, says, tmp_path):
 
 
 def test_missing_files_and_foreign_arguments(tmp_path):
-    for source, says in ((tmp_path / "none.toml", "No such file"), (tmp_path, "is a directory"),
-                         (7, "is not a model"), ("a\0b", "cannot be read"), (None, "is not a")):
+    for source, says in (
+        (tmp_path / "none.toml", "No such file"),
+        (tmp_path, "is a directory"),
+        (7, "is not a model"),
+        ("a\0b", "cannot be read"),
+        (None, "is not a"),
+    ):
         with pytest.raises(ModelError, match=says) as caught:
             read_model(source)
         assert_sentence(str(caught.value))

@@ -86,7 +86,9 @@ def clusters(draw):
     return base(
         couplings={"a": draw(number), "b": draw(number)},
         bond_term=draw(st.sampled_from(["+J S.S", "-J S.S", "+2J S.S", "-2J S.S"])),
-        site=[{"spin": s} for s in spins], bond=bonds, ion=ions,
+        site=[{"spin": s} for s in spins],
+        bond=bonds,
+        ion=ions,
     )
 
 
@@ -101,8 +103,11 @@ def test_forms_are_the_textbook_operators():
     s, t = spin_matrices(1.0), spin_matrices(0.5)
     product = [[np.kron(s[a], t[b]) for b in range(3)] for a in range(3)]
     x, y, z = 0.3, -0.7, 1.1
-    cross = (x * (product[1][2] - product[2][1]) + y * (product[2][0] - product[0][2])
-             + z * (product[0][1] - product[1][0]))
+    cross = (
+        x * (product[1][2] - product[2][1])
+        + y * (product[2][0] - product[0][2])
+        + z * (product[0][1] - product[1][0])
+    )
     expected = {
         "isotropic": product[0][0] + product[1][1] + product[2][2],
         "xy": product[0][0] + product[1][1],
@@ -122,28 +127,48 @@ def test_ion_forms_keep_their_sign_whatever_the_bond_term():
     sx, sy, sz = spin_matrices(1.5)
     expected = {"axial": sz @ sz - 1.5 * 2.5 / 3 * np.eye(4), "rhombic": sx @ sx - sy @ sy}
     for form, operator in expected.items():
-        model = read_model(base(couplings={"D": 2.0}, bond_term="-2J S.S", site=[{"spin": 1.5}],
-                                ion=[{"sites": [0], "coupling": "D", "form": form}]))
+        model = read_model(
+            base(
+                couplings={"D": 2.0},
+                bond_term="-2J S.S",
+                site=[{"spin": 1.5}],
+                ion=[{"sites": [0], "coupling": "D", "form": form}],
+            )
+        )
         assert np.allclose(dense(model), 2 * operator)
 
 
 def test_ion_on_spin_half_is_its_constant():
     matrix = [[1, 2, 0], [2, 3, 0], [0, 0, -1]]
-    model = read_model(base(couplings={"D": 2.0}, site=[{"spin": 0.5}],
-                            ion=[{"sites": [0], "coupling": "D", "matrix": matrix}]))
+    model = read_model(
+        base(
+            couplings={"D": 2.0},
+            site=[{"spin": 0.5}],
+            ion=[{"sites": [0], "coupling": "D", "matrix": matrix}],
+        )
+    )
     assert np.allclose(dense(model), 2 * 3 / 4 * np.eye(2))
     check(model)
 
 
 def test_total_matrices_sum_both_directions_and_drop_zeros():
     skew = {"coupling": "b", "form": "antisymmetric", "vector": [0, 0, 1]}
-    model = read_model(base(
-        couplings={"a": 2.0, "b": 3.0, "off": 0.0}, site=[{"spin": 1}] * 3,
-        bond=[{"sites": [1, 0], "coupling": "a"}, {"sites": [1, 0]} | skew,
-              {"sites": [0, 1]} | skew, {"sites": [0, 2], "coupling": "off"}],
-        ion=[{"sites": [2], "coupling": "a", "form": "axial"},
-             {"sites": [1], "coupling": "off", "form": "axial"}],
-    ))
+    model = read_model(
+        base(
+            couplings={"a": 2.0, "b": 3.0, "off": 0.0},
+            site=[{"spin": 1}] * 3,
+            bond=[
+                {"sites": [1, 0], "coupling": "a"},
+                {"sites": [1, 0]} | skew,
+                {"sites": [0, 1]} | skew,
+                {"sites": [0, 2], "coupling": "off"},
+            ],
+            ion=[
+                {"sites": [2], "coupling": "a", "form": "axial"},
+                {"sites": [1], "coupling": "off", "form": "axial"},
+            ],
+        )
+    )
     pairs, singles = total_matrices(model)
     assert list(pairs) == [(0, 1)]
     assert np.allclose(pairs[0, 1], 2 * np.eye(3))
@@ -152,8 +177,17 @@ def test_total_matrices_sum_both_directions_and_drop_zeros():
 
 
 def test_translated_cell_with_own_image_has_the_right_traces():
-    model = read_model(base(couplings={"J": 1.3}, cell={
-        "repeat": [1, 3], "site": [{"spin": 1}],
-        "bond": [{"sites": [0, 0], "offset": [1, 0], "coupling": "J", "form": "ising"},
-                 {"sites": [0, 0], "offset": [0, 1], "coupling": "J"}]}))
+    model = read_model(
+        base(
+            couplings={"J": 1.3},
+            cell={
+                "repeat": [1, 3],
+                "site": [{"spin": 1}],
+                "bond": [
+                    {"sites": [0, 0], "offset": [1, 0], "coupling": "J", "form": "ising"},
+                    {"sites": [0, 0], "offset": [0, 1], "coupling": "J"},
+                ],
+            },
+        )
+    )
     check(model)

@@ -21,10 +21,10 @@ if TYPE_CHECKING:
     from thermo.ensemble import curves
     from thermo.fit import fit, read_study
     from thermo.model import read_model
+    from thermo.model.level_table import read_checked as read
     from thermo.model.level_table import read_levels
     from thermo.report import export_csv, plot
     from thermo.spectrum import solve, survey
-    from thermo.storage import read_dataset as read
     from thermo.storage import write_dataset as write
 
 __version__ = "0.1.0"
@@ -49,7 +49,7 @@ _HOMES = {
     "export_csv": ("thermo.report", "export_csv"),
     "fit": ("thermo.fit", "fit"),
     "plot": ("thermo.report", "plot"),
-    "read": ("thermo.storage", "read_dataset"),
+    "read": ("thermo.model.level_table", "read_checked"),
     "read_levels": ("thermo.model.level_table", "read_levels"),
     "read_model": ("thermo.model", "read_model"),
     "read_study": ("thermo.fit", "read_study"),

@@ -28,7 +28,7 @@ from thermo.arguments import (
     parse_grid,
     parse_size,
 )
-from thermo.errors import PartitaError, RangeError, SpectrumError
+from thermo.errors import PartitaError, RangeError
 from thermo.progress import Interrupted, work
 
 if TYPE_CHECKING:
@@ -324,13 +324,7 @@ def _read(file: Path, kind: str | None = None) -> xr.Dataset:
     """Read any file of ours; levels are held against their model as well."""
     import thermo
 
-    dataset = thermo.read(file, kind)
-    if dataset.attrs["content"] != "levels":
-        return dataset
-    try:
-        return thermo.read_levels(file)
-    except SpectrumError as fault:
-        raise SpectrumError(f"{file}: {fault}") from None
+    return thermo.read(file, kind)
 
 
 def _set_threads(threads: int | None) -> None:

@@ -147,9 +147,8 @@ def cluster_curves(table: LevelTable, temperature: Array, field: Array) -> Clust
         entropy[:, b] = log_z + u / temperature
         spread = (p * (variance + (relative - u[:, None]) ** 2)).sum(axis=1)
         heat[:, b] = spread / temperature**2
-        m = (p * groups.m).sum(axis=1)
-        if h == 0:
-            m[:] = 0.0  # exact by symmetry
+        # Without a field ±M cancel exactly; rounding must not say otherwise.
+        m = (p * groups.m).sum(axis=1) if h != 0 else np.zeros(len(temperature))
         moment[:, b] = m
         moment_variance[:, b] = (p * (groups.m - m[:, None]) ** 2).sum(axis=1)
     known = table.resolved in ("total_spin", "magnetic_number")

@@ -114,6 +114,8 @@ def curves(
         if name not in known:
             raise RangeError(f"variable {name!r} is unknown; choose from {', '.join(known)}")
     reason = moment_unavailable(model, table.resolved)
+    if g is not None and not (np.isfinite(g) and g != 0):
+        raise RangeError(f"g = {g} is not a finite number other than zero; give one, such as 2.0")
     moment_g = g if g is not None else model.common_g
     if reason is not None:
         asked = [v for v in MAGNETIC if variables is not None and v in wanted]

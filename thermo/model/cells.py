@@ -64,9 +64,7 @@ class Superlattice:
         winding = tuple(
             sum(x[k] * self.adjugate[k][m] for k in range(d)) // self.det for m in range(d)
         )
-        inside = tuple(
-            x[m] - sum(winding[k] * self.rows[k][m] for k in range(d)) for m in range(d)
-        )
+        inside = tuple(x[m] - sum(winding[k] * self.rows[k][m] for k in range(d)) for m in range(d))
         return inside, winding
 
     def cells(self) -> list[Vector]:
@@ -104,8 +102,7 @@ def adjugate(rows: Sequence[Vector]) -> tuple[Vector, ...]:
     """The exact adjugate: det(L) L⁻¹."""
     d = len(rows)
     return tuple(
-        tuple((-1) ** (k + m) * determinant(_minor(rows, m, k)) for m in range(d))
-        for k in range(d)
+        tuple((-1) ** (k + m) * determinant(_minor(rows, m, k)) for m in range(d)) for k in range(d)
     )
 
 
@@ -167,9 +164,12 @@ def check_size(cell: Cell, n_cells: int) -> None:
     """ModelError when the configurations of n_cells cells do not fit into 62 bits."""
     bits = n_cells * sum(round(2 * spin).bit_length() for spin in cell.spins)
     if bits > MAX_BITS:
-        raise fault(cell.path, f"the cluster of {n_cells * len(cell.names)} sites needs {bits} "
-                    f"bits for one configuration, beyond the 62-bit limit (a spin 1/2 takes one, "
-                    "a spin 1 two); make it smaller")
+        raise fault(
+            cell.path,
+            f"the cluster of {n_cells * len(cell.names)} sites needs {bits} "
+            f"bits for one configuration, beyond the 62-bit limit (a spin 1/2 takes one, "
+            "a spin 1 two); make it smaller",
+        )
 
 
 def effective_ion(site: int, spin: float, coupling: str, d: Matrix) -> list[Ion]:
@@ -227,8 +227,10 @@ def repeated_terms(cell: Cell) -> list[str]:
         entries.append((ion.path, (ion.site, ion.coupling, *(ion.matrix + 0.0).ravel())))
     for path, key in entries:
         if key in seen:
-            notes.append(f"{path}: repeats {seen[key]} (same sites, coupling and form); the two "
-                         "add, so delete one if it was meant once.")
+            notes.append(
+                f"{path}: repeats {seen[key]} (same sites, coupling and form); the two "
+                "add, so delete one if it was meant once."
+            )
         seen.setdefault(key, path)
     return list(dict.fromkeys(notes))
 

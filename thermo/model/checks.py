@@ -41,8 +41,12 @@ class Table:
 
     def __init__(self, value: object, path: str, allowed: Sequence[str]) -> None:
         if not isinstance(value, dict):
-            raise fault(path, f"{show(value)} is not a table; give one with keys of {allowed[0]!r}"
-                        " and so on" if allowed else f"{show(value)} is not a table; give one")
+            raise fault(
+                path,
+                f"{show(value)} is not a table; give one with keys of {allowed[0]!r} and so on"
+                if allowed
+                else f"{show(value)} is not a table; give one",
+            )
         self.path = path
         self.values: dict[str, Any] = value
         for key in value:
@@ -138,7 +142,10 @@ def symmetric_matrix(value: object, path: str, why: str) -> Matrix:
     for a, b in ((0, 1), (0, 2), (1, 2)):
         # A relative 1e-9 lets values through that were computed elsewhere and rounded.
         if abs(given[a, b] - given[b, a]) > 1e-9 * scale:
-            raise fault(path, f"the matrix is not symmetric (entry [{a}][{b}] is {given[a, b]:g}, "
-                        f"[{b}][{a}] is {given[b, a]:g}); {why}")
+            raise fault(
+                path,
+                f"the matrix is not symmetric (entry [{a}][{b}] is {given[a, b]:g}, "
+                f"[{b}][{a}] is {given[b, a]:g}); {why}",
+            )
     result: Matrix = (given + given.T) / 2
     return result

@@ -137,9 +137,7 @@ LATTICES: tuple[Lattice, ...] = (
         basis=("A",),
         roles={
             "nearest": _same((1, 0, 0), (0, 1, 0), (0, 0, 1)),
-            "next": _same(
-                (1, 1, 0), (1, -1, 0), (1, 0, 1), (1, 0, -1), (0, 1, 1), (0, 1, -1)
-            ),
+            "next": _same((1, 1, 0), (1, -1, 0), (1, 0, 1), (1, 0, -1), (0, 1, 1), (0, 1, -1)),
         },
         vectors=((1.0, 0.0, 0.0), (0.0, 1.0, 0.0), (0.0, 0.0, 1.0)),
         positions=((0.0, 0.0, 0.0),),
@@ -160,11 +158,13 @@ def read_lattice(value: object, couplings: Mapping[str, float], factor: float) -
     need = "the number of sites" if lattice.size_counts_sites else "the number of cells"
     superlattice = read_superlattice(
         table.need("size", f"{need} along each direction, such as {[4] * lattice.dimension}"),
-        "lattice.size", len(lattice.basis) if lattice.size_counts_sites else 1,
+        "lattice.size",
+        len(lattice.basis) if lattice.size_counts_sites else 1,
         lattice.dimension,
     )
-    periodic = read_boundary(table.get("boundary", "periodic"), "lattice.boundary",
-                             len(superlattice))
+    periodic = read_boundary(
+        table.get("boundary", "periodic"), "lattice.boundary", len(superlattice)
+    )
     bonds = []
     roles = Table(given, "lattice.couplings", list(lattice.roles))
     for role in roles.values:
@@ -189,23 +189,30 @@ def choose(name: str, given: object) -> Lattice:
     """The entry of this name whose roles fit; the error names what each offers."""
     entries = [entry for entry in LATTICES if entry.name == name]
     if not isinstance(given, dict):
-        raise fault("lattice.couplings", f"{show(given)} is not a table; write it as "
-                    f"{{ {next(iter(entries[0].roles))} = \"J\" }}")
+        raise fault(
+            "lattice.couplings",
+            f'{show(given)} is not a table; write it as {{ {next(iter(entries[0].roles))} = "J" }}',
+        )
     for entry in entries:
         if set(given) <= set(entry.roles):
             return entry
     known = list(dict.fromkeys(role for entry in entries for role in entry.roles))
     for role in given:
         if role not in known:
-            raise fault(f"lattice.couplings.{role}",
-                        f"the {name} lattice has no such role; {near(role, known)}")
+            raise fault(
+                f"lattice.couplings.{role}",
+                f"the {name} lattice has no such role; {near(role, known)}",
+            )
     offers = " or ".join(", ".join(entry.roles) for entry in entries)
-    raise fault("lattice.couplings", f"the roles {', '.join(given)} do not go together on a "
-                f"{name}; choose among {offers}")
+    raise fault(
+        "lattice.couplings",
+        f"the roles {', '.join(given)} do not go together on a {name}; choose among {offers}",
+    )
 
 
-def read_role(lattice: Lattice, role: str, roles: Table, couplings: Mapping[str, float],
-              factor: float) -> list[BondTerm]:
+def read_role(
+    lattice: Lattice, role: str, roles: Table, couplings: Mapping[str, float], factor: float
+) -> list[BondTerm]:
     """The bonds of one role: a coupling's name, a table with its form, or a list of these."""
     given = roles.get(role)
     path = roles.at(role)
@@ -218,12 +225,19 @@ def read_role(lattice: Lattice, role: str, roles: Table, couplings: Mapping[str,
     for where, entry in entries:
         plain = isinstance(entry, str)
         if not plain and not isinstance(entry, dict):
-            raise fault(where, f"{show(entry)} is not a coupling; give its name in quotes, or a "
-                        "table such as {coupling = 'J', form = 'ising'}")
-        term = Table({"coupling": entry} if plain else entry, where,
-                     ("coupling", "form", "vector", "matrix"))
-        coupling = known_coupling(term.need("coupling", "the name of one in [couplings]"),
-                                  where if plain else term.at("coupling"), couplings)
+            raise fault(
+                where,
+                f"{show(entry)} is not a coupling; give its name in quotes, or a "
+                "table such as {coupling = 'J', form = 'ising'}",
+            )
+        term = Table(
+            {"coupling": entry} if plain else entry, where, ("coupling", "form", "vector", "matrix")
+        )
+        coupling = known_coupling(
+            term.need("coupling", "the name of one in [couplings]"),
+            where if plain else term.at("coupling"),
+            couplings,
+        )
         a = bond_matrix(term, factor)
         bonds += [
             BondTerm(lattice.basis.index(m), lattice.basis.index(n), offset, coupling, a, where)
@@ -238,12 +252,16 @@ def read_basis_spins(table: Table, lattice: Lattice) -> tuple[float, ...]:
     count = len(lattice.basis)
     if isinstance(given, dict):
         named = Table(given, "lattice.spin", lattice.basis)
-        return tuple(read_spin(named.need(s, f"the spin of site {s!r}"), named.at(s))
-                     for s in lattice.basis)
+        return tuple(
+            read_spin(named.need(s, f"the spin of site {s!r}"), named.at(s)) for s in lattice.basis
+        )
     if isinstance(given, list):
         if len(given) != count:
-            raise fault("lattice.spin", f"has {len(given)} entries; this {lattice.name} has "
-                        f"{count} site(s) in its cell, so give one number or {count}")
+            raise fault(
+                "lattice.spin",
+                f"has {len(given)} entries; this {lattice.name} has "
+                f"{count} site(s) in its cell, so give one number or {count}",
+            )
         return tuple(read_spin(s, f"lattice.spin[{k}]") for k, s in enumerate(given))
     return (read_spin(given, "lattice.spin"),) * count
 

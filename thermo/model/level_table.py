@@ -117,14 +117,25 @@ def read_levels(path: str | os.PathLike[str]) -> xr.Dataset:
     Raises FileFormatError for a foreign or damaged file, SpectrumError for levels that do not
     belong to the model they claim.
     """
+    return read_checked(path, kind="levels")
+
+
+def read_checked(path: str | os.PathLike[str], kind: str | None = None) -> xr.Dataset:
+    """Read a Partita file of any kind, or of the stated one; levels must pass ``read_levels``'
+    checks. Raises FileFormatError or SpectrumError, one sentence that leads with the file."""
     from thermo.storage import read_dataset
 
-    levels = read_dataset(path, kind="levels")
-    model = model_from_dataset(levels)
-    if model.digest != levels.attrs["model_digest"]:
-        raise FileFormatError(
-            f"{os.fspath(path)}: the model's text and its digest disagree, so the file was "
-            "changed after it was written; solve the model again"
-        )
-    check_levels(table_from_dataset(levels), model)
-    return levels
+    dataset = read_dataset(path, kind=kind)
+    if dataset.attrs["content"] != "levels":
+        return dataset
+    try:
+        model = model_from_dataset(dataset)
+        if model.digest != dataset.attrs["model_digest"]:
+            raise FileFormatError(
+                "the model's text and its digest disagree, so the file was changed after it was "
+                "written; solve the model again"
+            )
+        check_levels(table_from_dataset(dataset), model)
+    except PartitaError as fault:
+        raise type(fault)(f"{os.fspath(path)}: {fault}") from None
+    return dataset

@@ -72,8 +72,19 @@ from thermo.model.terms import (
 )
 
 ENERGY_UNITS = ("K", "meV", "cm-1", "1")
-KEYS = ("format", "title", "energy_unit", "bond_term", "ions_per_formula", "couplings",
-        "site", "bond", "ion", "cell", "lattice")
+KEYS = (
+    "format",
+    "title",
+    "energy_unit",
+    "bond_term",
+    "ions_per_formula",
+    "couplings",
+    "site",
+    "bond",
+    "ion",
+    "cell",
+    "lattice",
+)
 MAX_BYTES = 8_000_000  # far beyond any model; keeps a wrong file from being read to its end
 
 
@@ -116,18 +127,23 @@ def read_text(path: str) -> str:
         if Path(path).is_dir():
             raise ModelError(f"{path} is a directory; give the model file in it") from None
         reason = getattr(error, "strerror", None) or str(error)
-        raise ModelError(f"the model file {path!r} cannot be read ({reason}); "
-                         "check the path") from None
+        raise ModelError(
+            f"the model file {path!r} cannot be read ({reason}); check the path"
+        ) from None
     if len(raw) > MAX_BYTES:
-        raise ModelError(f"{path} is larger than {MAX_BYTES // 1_000_000} MB, so it is no model "
-                         "file; give the TOML file")
+        raise ModelError(
+            f"{path} is larger than {MAX_BYTES // 1_000_000} MB, so it is no model "
+            "file; give the TOML file"
+        )
     try:
         text = raw.decode("utf-8-sig")
     except UnicodeDecodeError:
         text = "\0"
     if "\0" in text:
-        raise ModelError(f"{path} is not a text in UTF-8, so it is no model file; give the TOML "
-                         "file, saved as UTF-8")
+        raise ModelError(
+            f"{path} is not a text in UTF-8, so it is no model file; give the TOML "
+            "file, saved as UTF-8"
+        )
     return text
 
 
@@ -172,8 +188,9 @@ def plain(value: Any, path: str = "") -> Any:
         raise fault(path, "the number has hundreds of digits; give a smaller one")
     if isinstance(value, str | int | float):
         return value
-    raise fault(path, f"{show(value)} has no place in a model; give numbers, strings, lists and "
-                "mappings")
+    raise fault(
+        path, f"{show(value)} has no place in a model; give numbers, strings, lists and mappings"
+    )
 
 
 def build(data: dict[str, Any], text: str, source: str) -> SpinModel:
@@ -183,31 +200,51 @@ def build(data: dict[str, Any], text: str, source: str) -> SpinModel:
     if version != 1:
         raise fault("format", f"{version} is not a format this version reads; write format = 1")
     title = string(table.get("title", "untitled"), "title")
-    unit = word(table.need("energy_unit", "one of 'K', 'meV', 'cm-1' or '1' (dimensionless)"),
-                "energy_unit", ENERGY_UNITS)
-    offer = ("the term one bond adds to H, one of " + ", ".join(map(repr, BOND_TERMS))
-             + ", since authors differ in the sign and factor of J")
+    unit = word(
+        table.need("energy_unit", "one of 'K', 'meV', 'cm-1' or '1' (dimensionless)"),
+        "energy_unit",
+        ENERGY_UNITS,
+    )
+    offer = (
+        "the term one bond adds to H, one of "
+        + ", ".join(map(repr, BOND_TERMS))
+        + ", since authors differ in the sign and factor of J"
+    )
     bond_term = table.need("bond_term", offer)
     if not isinstance(bond_term, str) or bond_term not in BOND_TERMS:
         # No guess at the nearest spelling: it would be a guess at the sign.
         raise fault("bond_term", f"{show(bond_term)} is not known; give {offer}")
     per_formula = number(table.get("ions_per_formula", 1), "ions_per_formula")
     if per_formula <= 0:
-        raise fault("ions_per_formula", f"{per_formula:g} is not positive; give the number of "
-                    "magnetic ions in one formula unit")
+        raise fault(
+            "ions_per_formula",
+            f"{per_formula:g} is not positive; give the number of "
+            "magnetic ions in one formula unit",
+        )
     couplings = read_couplings(
         table.need("couplings", "a table [couplings] with a line 'name = value' for each"),
         "couplings",
     )
     cluster = expand(cell := read_cluster(table, couplings, BOND_TERMS[bond_term]))
     used = {bond.coupling for bond in cell.bonds} | {ion.coupling for ion in cell.ions}
-    notes = [f"couplings.{name}: no bond or ion term uses it, so its value has no effect."
-             for name in couplings if name not in used]
+    notes = [
+        f"couplings.{name}: no bond or ion term uses it, so its value has no effect."
+        for name in couplings
+        if name not in used
+    ]
     return SpinModel(
-        title=title, energy_unit=unit, bond_term=bond_term, couplings=couplings,
-        sites=cluster.sites, bonds=cluster.bonds, ions=cluster.ions, text=text,
-        translations=cluster.translations, notes=(*cluster.notes, *notes),
-        ions_per_formula=per_formula, source=source,
+        title=title,
+        energy_unit=unit,
+        bond_term=bond_term,
+        couplings=couplings,
+        sites=cluster.sites,
+        bonds=cluster.bonds,
+        ions=cluster.ions,
+        text=text,
+        translations=cluster.translations,
+        notes=(*cluster.notes, *notes),
+        ions_per_formula=per_formula,
+        source=source,
     )
 
 
@@ -215,16 +252,21 @@ def read_cluster(table: Table, couplings: Mapping[str, float], factor: float) ->
     """The cell of whichever of the three ways the file uses, and no more than one."""
     ways = [key for key in ("site", "cell", "lattice") if table.has(key)]
     if len(ways) > 1:
-        raise fault(ways[1], f"stands beside {ways[0]}, but a file states its cluster in one way; "
-                    f"remove one of the two")
+        raise fault(
+            ways[1],
+            f"stands beside {ways[0]}, but a file states its cluster in one way; "
+            f"remove one of the two",
+        )
     if not ways:
-        raise ModelError("the file states no cluster; give [[site]] and [[bond]], or [cell], or "
-                         "[lattice]")
+        raise ModelError(
+            "the file states no cluster; give [[site]] and [[bond]], or [cell], or [lattice]"
+        )
     for key in ("bond", "ion"):
         if table.has(key) and ways[0] != "site":
             inside = "cell." + key if ways[0] == "cell" else "lattice.couplings or lattice.ions"
-            raise fault(key, f"stands beside {ways[0]}, where it belongs under {inside}; "
-                        "move it there")
+            raise fault(
+                key, f"stands beside {ways[0]}, where it belongs under {inside}; move it there"
+            )
     if ways[0] == "lattice":
         return read_lattice(table.get("lattice"), couplings, factor)
     if ways[0] == "site":
@@ -238,8 +280,14 @@ def read_cluster(table: Table, couplings: Mapping[str, float], factor: float) ->
     return read_cell(cell, "cell.", rows, periodic, couplings, factor)
 
 
-def read_cell(table: Table, prefix: str, rows: tuple[tuple[int, ...], ...],
-              periodic: tuple[bool, ...], couplings: Mapping[str, float], factor: float) -> Cell:
+def read_cell(
+    table: Table,
+    prefix: str,
+    rows: tuple[tuple[int, ...], ...],
+    periodic: tuple[bool, ...],
+    couplings: Mapping[str, float],
+    factor: float,
+) -> Cell:
     """The sites, bonds and ion terms listed one by one, of a cell or of the whole cluster."""
     names: list[str] = []
     spins, tensors = [], []
@@ -248,8 +296,11 @@ def read_cell(table: Table, prefix: str, rows: tuple[tuple[int, ...], ...],
         site = Table(entry, f"{where}[{k}]", ("name", "spin", "g"))
         name = string(site.get("name", str(k)), site.at("name"))
         if name in names:
-            raise fault(site.at("name"), f"{show(name)} is the name of {where}"
-                        f"[{names.index(name)}] already; give each site its own")
+            raise fault(
+                site.at("name"),
+                f"{show(name)} is the name of {where}"
+                f"[{names.index(name)}] already; give each site its own",
+            )
         names.append(name)
         spins.append(read_spin(site.need("spin", "the spin, such as 0.5"), site.at("spin")))
         tensors.append(read_g(site.get("g", DEFAULT_G), site.at("g")))
@@ -257,6 +308,13 @@ def read_cell(table: Table, prefix: str, rows: tuple[tuple[int, ...], ...],
         raise fault(where, f"the cluster is empty; give at least one [[{where}]]")
     bonds = read_bonds(table.get("bond", []), prefix + "bond", names, couplings, factor, len(rows))
     ions = read_ions(table.get("ion", []), prefix + "ion", names, couplings)
-    return Cell(tuple(names), tuple(spins), tuple(tensors), tuple(bonds), tuple(ions), rows,
-                periodic, prefix + ("repeat" if rows else "site"))
-
+    return Cell(
+        tuple(names),
+        tuple(spins),
+        tuple(tensors),
+        tuple(bonds),
+        tuple(ions),
+        rows,
+        periodic,
+        prefix + ("repeat" if rows else "site"),
+    )

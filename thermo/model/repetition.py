@@ -26,8 +26,11 @@ def read_superlattice(
         rows = []
         for k, row in enumerate(entries):
             if not isinstance(row, list) or len(row) != len(entries):
-                raise fault(f"{path}[{k}]", f"{show(row)} is not a row of a square matrix; give "
-                            f"{len(entries)} whole number(s) in brackets")
+                raise fault(
+                    f"{path}[{k}]",
+                    f"{show(row)} is not a row of a square matrix; give "
+                    f"{len(entries)} whole number(s) in brackets",
+                )
             rows.append(tuple(whole(x, f"{path}[{k}][{m}]") for m, x in enumerate(row)))
         if determinant(rows) == 0:
             raise fault(path, "its rows are not independent, so it bounds no cluster; change one")
@@ -36,13 +39,16 @@ def read_superlattice(
         for k, length in enumerate(lengths):
             if length < 1:
                 raise fault(f"{path}[{k}]", f"{length} is not a positive number; give 1 or more")
-        rows = [tuple(n if k == m else 0 for m in range(len(lengths)))
-                for k, n in enumerate(lengths)]
+        rows = [
+            tuple(n if k == m else 0 for m in range(len(lengths))) for k, n in enumerate(lengths)
+        ]
     for k, row in enumerate(rows):
         for x in row:
             if x % unit:
-                raise fault(f"{path}[{k}]", f"{x} sites do not fill cells of {unit}; "
-                            f"give a multiple of {unit}")
+                raise fault(
+                    f"{path}[{k}]",
+                    f"{x} sites do not fill cells of {unit}; give a multiple of {unit}",
+                )
     return tuple(tuple(x // unit for x in row) for row in rows)
 
 
@@ -50,9 +56,10 @@ def read_boundary(value: object, path: str, dimension: int) -> tuple[bool, ...]:
     """Whether each row of L is periodic, from one word or one word for each."""
     if isinstance(value, list):
         if len(value) != dimension:
-            raise fault(path, f"has {len(value)} entries; give one word, or {dimension} words, "
-                        "one for each direction")
-        return tuple(
-            word(x, f"{path}[{k}]", BOUNDARIES) == "periodic" for k, x in enumerate(value)
-        )
+            raise fault(
+                path,
+                f"has {len(value)} entries; give one word, or {dimension} words, "
+                "one for each direction",
+            )
+        return tuple(word(x, f"{path}[{k}]", BOUNDARIES) == "periodic" for k, x in enumerate(value))
     return (word(value, path, BOUNDARIES) == "periodic",) * dimension

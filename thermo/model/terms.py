@@ -58,8 +58,11 @@ def read_couplings(value: object, path: str) -> dict[str, float]:
         raise fault(path, f"{show(value)} is not a table; give one line 'name = value' for each")
     for name in value:
         if not (isinstance(name, str) and name.isidentifier()) or keyword.iskeyword(name):
-            raise fault(path, f"{show(name)} cannot name a coupling; use letters, digits and _, "
-                        "a letter first, and no reserved word such as 'lambda'")
+            raise fault(
+                path,
+                f"{show(name)} cannot name a coupling; use letters, digits and _, "
+                "a letter first, and no reserved word such as 'lambda'",
+            )
     return {name: number(entry, f"{path}.{name}") for name, entry in value.items()}
 
 
@@ -86,8 +89,11 @@ def read_g(value: object, path: str) -> Matrix:
         elif len(value) == 3:
             tensor = np.diag(vector(value, path))
         else:
-            raise fault(path, f"has {len(value)} entries; give a number, three principal values "
-                        "or a symmetric 3x3 matrix")
+            raise fault(
+                path,
+                f"has {len(value)} entries; give a number, three principal values "
+                "or a symmetric 3x3 matrix",
+            )
     else:
         tensor = number(value, path) * np.eye(3)
     if not tensor.any():
@@ -120,8 +126,11 @@ def site_index(value: object, path: str, names: Sequence[str]) -> int:
     if isinstance(value, bool) or not isinstance(value, int):
         raise fault(path, f"{show(value)} is not a site; give its name, or its index from 0")
     if not 0 <= value < len(names):
-        raise fault(path, f"site index {show(value)} is out of range; with {len(names)} sites it "
-                    f"runs from 0 to {len(names) - 1}")
+        raise fault(
+            path,
+            f"site index {show(value)} is out of range; with {len(names)} sites it "
+            f"runs from 0 to {len(names) - 1}",
+        )
     return value
 
 
@@ -133,17 +142,22 @@ def bond_matrix(table: Table, factor: float) -> Matrix:
     if table.has("matrix"):
         for other in ("form", "vector"):
             if table.has(other):
-                raise fault(table.at(other), "stands beside a matrix, which says it all; "
-                            "give one or the other")
+                raise fault(
+                    table.at(other),
+                    "stands beside a matrix, which says it all; give one or the other",
+                )
         return factor * matrix(table.get("matrix"), table.at("matrix")) + 0.0
     form = word(table.get("form", "isotropic"), table.at("form"), BOND_FORMS)
     if form == "antisymmetric":
-        x, y, z = vector(table.need("vector", "the vector [x, y, z] of d·(Si x Sj)"),
-                         table.at("vector"))
+        x, y, z = vector(
+            table.need("vector", "the vector [x, y, z] of d·(Si x Sj)"), table.at("vector")
+        )
         return factor * np.array([[0.0, z, -y], [-z, 0.0, x], [y, -x, 0.0]]) + 0.0
     if table.has("vector"):
-        raise fault(table.at("vector"), f"has no meaning with the form {form!r}; leave it out or "
-                    "write form = 'antisymmetric'")
+        raise fault(
+            table.at("vector"),
+            f"has no meaning with the form {form!r}; leave it out or write form = 'antisymmetric'",
+        )
     diagonal = {"isotropic": (1.0, 1.0, 1.0), "xy": (1.0, 1.0, 0.0), "ising": (0.0, 0.0, 1.0)}
     return factor * np.diag(diagonal[form]) + 0.0
 
@@ -152,37 +166,60 @@ def ion_matrix(table: Table) -> Matrix:
     """D of Sᵀ D S from the keys form and matrix, shape (3, 3); bond_term plays no part."""
     if table.has("matrix"):
         if table.has("form"):
-            raise fault(table.at("form"), "stands beside a matrix, which says it all; "
-                        "give one or the other")
-        return symmetric_matrix(table.get("matrix"), table.at("matrix"),
-                                "the matrix of an ion term must be: make the two entries equal")
-    form = word(table.need("form", f"one of {', '.join(map(repr, ION_FORMS))}, or a matrix"),
-                table.at("form"), ION_FORMS)
+            raise fault(
+                table.at("form"), "stands beside a matrix, which says it all; give one or the other"
+            )
+        return symmetric_matrix(
+            table.get("matrix"),
+            table.at("matrix"),
+            "the matrix of an ion term must be: make the two entries equal",
+        )
+    form = word(
+        table.need("form", f"one of {', '.join(map(repr, ION_FORMS))}, or a matrix"),
+        table.at("form"),
+        ION_FORMS,
+    )
     if form == "axial":
         return np.diag([-1.0, -1.0, 2.0]) / 3
     return np.diag([1.0, -1.0, 0.0])
 
 
-def read_bonds(value: object, path: str, names: Sequence[str], couplings: Mapping[str, float],
-               factor: float, dimension: int) -> list[BondTerm]:
+def read_bonds(
+    value: object,
+    path: str,
+    names: Sequence[str],
+    couplings: Mapping[str, float],
+    factor: float,
+    dimension: int,
+) -> list[BondTerm]:
     """All [[bond]] or [[cell.bond]] entries; ``offset`` is a key only where dimension > 0."""
     keys = ["sites", "coupling", "form", "vector", "matrix"] + ["offset"] * (dimension > 0)
     bonds = []
     for k, entry in enumerate(listing(value, path, f"one [[{path}]] for each bond")):
         table = Table(entry, f"{path}[{k}]", keys)
-        sites = listing(table.need("sites", "the names of its two sites"), table.at("sites"),
-                        "the names of two sites")
+        sites = listing(
+            table.need("sites", "the names of its two sites"),
+            table.at("sites"),
+            "the names of two sites",
+        )
         if len(sites) != 2:
-            raise fault(table.at("sites"), f"names {len(sites)} site(s), but a bond joins "
-                        "two; give two names")
+            raise fault(
+                table.at("sites"),
+                f"names {len(sites)} site(s), but a bond joins two; give two names",
+            )
         a, b = (site_index(s, f"{table.at('sites')}[{m}]", names) for m, s in enumerate(sites))
         offset = read_offset(table, dimension)
         if a == b and not any(offset):
             far = " or give the offset of the cell it leads to" if dimension else ""
-            raise fault(table.at("sites"), f"joins site {names[a]!r} to itself; "
-                        f"name two different sites{far}")
-        coupling = known_coupling(table.need("coupling", "the name of one in [couplings]"),
-                                  table.at("coupling"), couplings)
+            raise fault(
+                table.at("sites"),
+                f"joins site {names[a]!r} to itself; name two different sites{far}",
+            )
+        coupling = known_coupling(
+            table.need("coupling", "the name of one in [couplings]"),
+            table.at("coupling"),
+            couplings,
+        )
         bonds.append(BondTerm(a, b, offset, coupling, bond_matrix(table, factor), table.path))
     return bonds
 
@@ -192,8 +229,11 @@ def read_offset(table: Table, dimension: int) -> tuple[int, ...]:
     path = table.at("offset")
     offset = listing(table.get("offset", [0] * dimension), path, "whole numbers of cells")
     if len(offset) != dimension:
-        raise fault(path, f"has {len(offset)} entries; the cell repeats in {dimension} "
-                    "direction(s), so give as many")
+        raise fault(
+            path,
+            f"has {len(offset)} entries; the cell repeats in {dimension} "
+            "direction(s), so give as many",
+        )
     numbers = [number(x, f"{path}[{k}]") for k, x in enumerate(offset)]
     for k, x in enumerate(numbers):
         if not x.is_integer():
@@ -201,29 +241,37 @@ def read_offset(table: Table, dimension: int) -> tuple[int, ...]:
     return tuple(int(x) for x in numbers)
 
 
-def read_ions(value: object, path: str, names: Sequence[str],
-              couplings: Mapping[str, float]) -> list[IonTerm]:
+def read_ions(
+    value: object, path: str, names: Sequence[str], couplings: Mapping[str, float]
+) -> list[IonTerm]:
     """All [[ion]] or [[cell.ion]] entries, one term for each site named."""
     ions = []
     for k, entry in enumerate(listing(value, path, f"one [[{path}]] for each term")):
         table = Table(entry, f"{path}[{k}]", ["sites", "coupling", "form", "matrix"])
-        sites = listing(table.need("sites", "the names of its sites"), table.at("sites"),
-                        "the names of its sites")
+        sites = listing(
+            table.need("sites", "the names of its sites"),
+            table.at("sites"),
+            "the names of its sites",
+        )
         if not sites:
             raise fault(table.at("sites"), "names no site; give at least one")
         indices = [site_index(s, f"{table.at('sites')}[{m}]", names) for m, s in enumerate(sites)]
         for m, index in enumerate(indices):
             if index in indices[:m]:
-                raise fault(f"{table.at('sites')}[{m}]",
-                            f"site {names[index]!r} is named twice; name it once")
+                raise fault(
+                    f"{table.at('sites')}[{m}]",
+                    f"site {names[index]!r} is named twice; name it once",
+                )
         ions += read_ion_term(table, indices, couplings)
     return ions
 
 
-def read_ion_term(table: Table, indices: Sequence[int],
-                  couplings: Mapping[str, float]) -> list[IonTerm]:
+def read_ion_term(
+    table: Table, indices: Sequence[int], couplings: Mapping[str, float]
+) -> list[IonTerm]:
     """The same ion term on each of the sites."""
-    coupling = known_coupling(table.need("coupling", "the name of one in [couplings]"),
-                              table.at("coupling"), couplings)
+    coupling = known_coupling(
+        table.need("coupling", "the name of one in [couplings]"), table.at("coupling"), couplings
+    )
     d = ion_matrix(table)
     return [IonTerm(index, coupling, d, table.path) for index in indices]

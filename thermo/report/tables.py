@@ -54,12 +54,18 @@ def print_plan(plan: Any, console: Console | None = None) -> None:
         out.print(Text(f"Note: {note}"))
 
 
+def _many(count: int, noun: str) -> str:
+    return f"{_count(count)} {noun}{'' if count == 1 else 's'}"
+
+
 def plan_rows(facts: Mapping[str, Any]) -> list[tuple[str, str]]:
     """The plan as (name, text) pairs, in the order they are told."""
     rows = []
     if facts.get("title"):
         rows.append(("model", str(facts["title"])))
-    rows.append(("sites, bonds", f"{_count(facts['sites'])} sites, {_count(facts['bonds'])} bonds"))
+    rows.append(
+        ("sites, bonds", f"{_many(facts['sites'], 'site')}, {_many(facts['bonds'], 'bond')}")
+    )
     couplings = facts.get("couplings")
     if isinstance(couplings, Mapping):
         unit = str(facts.get("energy_unit", "1"))

@@ -115,8 +115,8 @@ def refuse_if_too_large(plan: SymmetryPlan, limit: int) -> None:
     raise MemoryLimitError(
         f"the largest block has {largest.dimension:,} states ({kind}), so the full spectrum "
         f"needs {size_text(needed)} where the limit is {size_text(limit)}; take a smaller "
-        "cluster, keep more symmetry (equal couplings, isotropic or axial terms), or raise "
-        "memory= if the machine has more"
+        "cluster, keep more symmetry (equal couplings, isotropic or axial terms), or raise the "
+        "memory limit if the machine has more"
     )
 
 
