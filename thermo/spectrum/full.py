@@ -28,9 +28,8 @@ from thermo.symmetry.sectors import MagneticSector, Sector, plan_symmetry
 if TYPE_CHECKING:
     import xarray as xr
 
-# Blocks below this dimension are solved side by side, one thread each; larger ones one after
-# the other with all threads (tests/bench/test_lapack.py).
-SIDE_BY_SIDE_BELOW = 1000
+# From this dimension on a block is worth all threads when no other keeps them busy.
+ALONE_FROM = 1000
 # Λ in units of the width of the energy bounds; above ½ the windows of different S are apart.
 SHIFT = 0.6
 
@@ -153,11 +152,10 @@ class FullSolver:
         structure: _Structure,
         tables: tuple[NDArray[np.complex128], NDArray[np.float64]],
     ) -> Iterator[tuple[Sector, NDArray[np.float64]]]:
-        ordered = sorted(magnetic.sectors, key=lambda s: (-s.dimension, not s.real))
-        large = [s for s in ordered if s.dimension >= SIDE_BY_SIDE_BELOW]
-        small = [s for s in ordered if s.dimension < SIDE_BY_SIDE_BELOW]
+        ordered = sorted(magnetic.sectors, key=lambda s: -planning.block_cost(s.dimension, s.real))
         width = thread_count()
-        for group, workers, blas in ((large, 1, width), (small, width, 1)):
+        alone, together = self._schedule(ordered, structure, width)
+        for group, workers, blas in ((alone, 1, width), (together, width, 1)):
             if not group:
                 continue
             tasks = [
@@ -166,6 +164,21 @@ class FullSolver:
             with blas_threads(blas):
                 for index, energies in run_tasks(tasks, workers):
                     yield group[index], energies
+
+    def _schedule(
+        self, ordered: list[Sector], structure: _Structure, width: int
+    ) -> tuple[list[Sector], list[Sector]]:
+        """Which blocks to solve alone with all threads, and which side by side with one each.
+
+        Side by side is faster at every size, as no thread waits for another, but it holds
+        ``width`` blocks in memory, and a large block left over at the end would run on one
+        thread: the surplus goes first, alone.
+        """
+        free = self._limit - planning.BASE_BYTES - structure.nbytes
+        fitting = [s for s in ordered if width * planning.block_bytes(s.dimension, s.real) <= free]
+        surplus = sum(s.dimension >= ALONE_FROM for s in fitting) % width
+        together = fitting[surplus:]
+        return [s for s in ordered if s not in together], together
 
     def _solve_block(
         self,

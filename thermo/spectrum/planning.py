@@ -27,7 +27,7 @@ _LINK_BYTES = 6
 # Representative, its stabiliser, its slots and weights in the real basis.
 _ORBIT_BYTES = 100
 # The interpreter with every library loaded.
-_BASE_BYTES = 230 * 2**20
+BASE_BYTES = 230 * 2**20
 
 
 @dataclass(frozen=True)
@@ -102,7 +102,7 @@ def memory_needed(plan: SymmetryPlan) -> int:
     moves = move_count(plan)
     peak = max(sector_bytes(m, moves, plan.terms.n_sites) for m in plan.magnetic)
     levels = 64 * sum(s.dimension for s in plan.sectors)
-    return peak + levels + _BASE_BYTES
+    return peak + levels + BASE_BYTES
 
 
 def refuse_if_too_large(plan: SymmetryPlan, limit: int) -> None:
