@@ -21,6 +21,8 @@ if TYPE_CHECKING:
 
 CALORIC = ("internal_energy", "free_energy", "entropy", "specific_heat")
 MAGNETIC = ("susceptibility", "magnetization")
+# Temperatures and fields beyond these would under- or overflow when squared.
+SMALLEST, LARGEST = 1e-60, 1e60
 
 Array = NDArray[np.float64]
 
@@ -48,10 +50,11 @@ def axis_values(values: ArrayLike, what: str, positive: bool) -> Array:
         raise RangeError(f"{what} holds something that is not a number; give numbers") from None
     if axis.ndim != 1 or not len(axis):
         raise RangeError(f"{what} must be one number or a list of them; it has shape {axis.shape}")
-    bad = ~np.isfinite(axis) | (positive & (axis <= 0))
+    bad = ~np.isfinite(axis) | (np.abs(axis) > LARGEST) | (positive & (axis < SMALLEST))
     if np.any(bad):
         k = int(np.flatnonzero(bad)[0])
-        need = "a finite number above zero" if positive else "a finite number"
+        need = f"a number from {SMALLEST:g}" if positive else f"a number from {-LARGEST:g}"
+        need += f" to {LARGEST:g}"
         raise RangeError(f"{what}[{k}] is {axis[k]:g}; it must be {need}")
     if np.any(np.diff(axis) <= 0):
         k = int(np.flatnonzero(np.diff(axis) <= 0)[0])

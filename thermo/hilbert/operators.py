@@ -76,9 +76,12 @@ def _steps(
 
 
 def move_tables(
-    encoding: Encoding, pair: Mapping[tuple[int, int], Tensors], ion: Mapping[int, Tensors]
+    encoding: Encoding,
+    pair: Mapping[tuple[int, int], Tensors],
+    ion: Mapping[int, Tensors],
+    n_channels: int,
 ) -> MoveTables:
-    """Tables of Σ S_iᵀ A_ij S_j + Σ S_iᵀ D_i S_i; tensors have shape (P, 3, 3)."""
+    """Tables of Σ S_iᵀ A_ij S_j + Σ S_iᵀ D_i S_i; tensors have shape (n_channels, 3, 3)."""
     moves: list[tuple[int, int, int, int, NDArray[np.complex128]]] = []
     diagonal: list[tuple[int, int, Tensors]] = []
     spins = [spin_matrices(int(d) - 1) for d in encoding.dimension]
@@ -113,7 +116,6 @@ def move_tables(
         sizes = [t.shape[1] for t in tables]
         return np.concatenate([[0], np.cumsum(sizes)]).astype(np.int64)[: len(tables)]
 
-    n_channels = len(next(iter([*pair.values(), *ion.values()]), np.zeros((1, 3, 3))))
     amplitudes = [m[4] for m in moves]
     diagonals = [d[2] for d in diagonal]
     empty = np.zeros((n_channels, 0))

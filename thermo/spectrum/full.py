@@ -81,7 +81,8 @@ class FullSolver:
                     old = pair.get((i, j), np.zeros((n_channels, 3, 3)))
                     pair[i, j] = np.concatenate([old, 2 * np.eye(3)[None]])
             ion = {k: np.concatenate([d, np.zeros((1, 3, 3))]) for k, d in ion.items()}
-        self._moves = operators.move_tables(self._encoding, pair, ion)
+            n_channels += 1
+        self._moves = operators.move_tables(self._encoding, pair, ion, n_channels)
         self._structures: dict[int, _Structure] = {}
 
     def _values(self, model: SpinModel) -> NDArray[np.float64]:
