@@ -130,7 +130,7 @@ def test_sixty_spins_are_surveyed_but_not_solved(partita: Command, tmp_path: Pat
     assert partita("survey", "ring.toml").returncode == 0
     started = time.monotonic()
     done = partita("solve", "ring.toml", "--memory", "2 GiB", "-o", "levels.nc")
-    refused(done, 5, "985,538,189,951,356", "2.0 GiB", "smaller cluster")
+    refused(done, 5, "985 538 189 951 356", "2.0 GiB", "smaller cluster")
     assert time.monotonic() - started < 20
     assert not (tmp_path / "levels.nc").exists()
 
@@ -234,7 +234,7 @@ def test_bad_grid(partita: Command, levels: Path, arguments: list[str], word: st
 @pytest.mark.parametrize("size", ["four GiB", "4 GiBi", "0", "-1 GB", "nan", "inf MB", ""])
 def test_bad_memory(partita: Command, tmp_path: Path, size: str) -> None:
     (tmp_path / "model.toml").write_text(MODEL)
-    refused(partita("survey", "model.toml", "--memory", size), 3, "--memory")
+    refused(partita("survey", "model.toml", "--memory", size), 3, "memory limit")
 
 
 @pytest.mark.parametrize(

@@ -20,7 +20,7 @@ import thermo
 from tests.conftest import Command, command_path
 from tests.test_bad_input import CHI, MODEL, RING, STUDY
 from thermo import cli, errors
-from thermo.arguments import parse_grid, parse_size
+from thermo.arguments import parse_grid
 
 ROOT = Path(__file__).resolve().parent.parent
 DEMO = ROOT / "data_demo"
@@ -336,18 +336,3 @@ def test_grid(text: str, values: list[float]) -> None:
 
 def test_fields_may_be_negative() -> None:
     assert parse_grid("-5:5:3", "field") == pytest.approx([-5, 0, 5])
-
-
-@pytest.mark.parametrize(
-    ("text", "size"),
-    [
-        ("4 GiB", 4 * 1024**3),
-        ("500MB", 500 * 10**6),
-        ("1.5 gib", 3 * 1024**3 // 2),
-        ("2G", 2 * 1024**3),
-        ("1e6", 10**6),
-        ("8 Gi", 8 * 1024**3),
-    ],
-)
-def test_size(text: str, size: int) -> None:
-    assert parse_size(text) == size

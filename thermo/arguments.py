@@ -16,26 +16,6 @@ if TYPE_CHECKING:
 
 PICTURES = (".png", ".svg", ".pdf")
 LARGEST_GRID = 1_000_000
-_SIZES = {"": 1, "b": 1}
-for _power, _letter in enumerate("kmgt", start=1):
-    _SIZES[_letter + "b"] = 1000**_power
-    _SIZES[_letter + "ib"] = _SIZES[_letter + "i"] = _SIZES[_letter] = 1024**_power
-
-
-def parse_size(text: str | None) -> int | None:
-    """Bytes meant by "4 GiB", "500MB" or a plain number."""
-    if text is None:
-        return None
-    number = text.strip().rstrip("BbIiKkMmGgTt")
-    unit = text.strip()[len(number) :].lower()
-    try:
-        value = float(number) * _SIZES[unit]
-        size = int(value)
-    except (ValueError, KeyError, OverflowError):
-        size = 0
-    if size <= 0:
-        raise RangeError(f'--memory {text!r} is not a size; write it like "4 GiB" or "500 MB"')
-    return size
 
 
 def parse_grid(text: str, what: str) -> NDArray[Any]:

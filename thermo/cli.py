@@ -26,9 +26,8 @@ from thermo.arguments import (
     check_target,
     default_temperatures,
     parse_grid,
-    parse_size,
 )
-from thermo.errors import PartitaError, RangeError
+from thermo.errors import FileFormatError, PartitaError, RangeError
 from thermo.progress import Interrupted, work
 
 if TYPE_CHECKING:
@@ -110,12 +109,11 @@ def survey(
     memory: Memory = None,
 ) -> None:
     """Show what a model conserves, its blocks, and the work ahead."""
-    limit = parse_size(memory)
     check_source(model)
     import thermo
     from thermo.report import print_plan
 
-    print_plan(thermo.survey(thermo.read_model(model), memory=limit))
+    print_plan(thermo.survey(thermo.read_model(model), memory=memory))
 
 
 @app.command()
@@ -129,7 +127,6 @@ def solve(
     threads: Threads = None,
 ) -> None:
     """Find all levels of a model and write them to a file."""
-    limit = parse_size(memory)
     check_source(model)
     check_target(output, (".nc",), sources=(model,))
     _set_threads(threads)
@@ -139,7 +136,7 @@ def solve(
     _tell_notes(spins.notes)
     started = time.monotonic()
     levels = work(
-        lambda report: thermo.solve(spins, method=method.value, memory=limit, progress=report)
+        lambda report: thermo.solve(spins, method=method.value, memory=memory, progress=report)
     )
     thermo.write(levels, output)
     _confirm(
@@ -204,6 +201,8 @@ def curves(
             "--temperature sets others"
         )
     found = thermo.curves(spectrum, temperatures, fields, units=system.value, per=per.value, g=g)
+    if found.attrs.get("field_direction") == "z":
+        _note("the model is anisotropic: fields, susceptibility and magnetization are along z")
     if "unavailable" in found.attrs:
         _note(f"no susceptibility and magnetization: {found.attrs['unavailable']}")
     if output is None:
@@ -233,7 +232,6 @@ def fit(
     threads: Threads = None,
 ) -> None:
     """Fit exchange constants to measured curves and print the result."""
-    limit = parse_size(memory)
     check_source(study)
     if output is not None:
         check_target(output, (".nc",), sources=(study,))
@@ -245,7 +243,7 @@ def fit(
 
     problem = thermo.read_study(study)
     _tell_notes(problem.model.notes)
-    found = work(lambda report: thermo.fit(problem, progress=report, memory=limit))
+    found = work(lambda report: thermo.fit(problem, progress=report, memory=memory))
     result = found.to_dataset()
     print_fit(result)
     _tell_notes(found.cautions)
@@ -323,6 +321,14 @@ def export(
 def _read(file: Path, kind: str | None = None) -> xr.Dataset:
     """Read any file of ours; levels are held against their model as well."""
     import thermo
+
+    advice = {
+        ".toml": "is a text file; solve a model first and give its levels (.nc)",
+        ".json": "is a text file; solve a model first and give its levels (.nc)",
+        ".csv": "is a table for other programs and cannot be read back; give the .nc file",
+    }.get(file.suffix.lower())
+    if advice is not None:
+        raise FileFormatError(f"{file} {advice}")
 
     return thermo.read(file, kind)
 

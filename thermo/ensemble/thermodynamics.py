@@ -94,8 +94,9 @@ def curves(
 
     Returns a dataset with dimensions temperature, field: internal_energy, free_energy, entropy,
     specific_heat, and where defined susceptibility (∂M/∂B at constant T, so the usual χ at
-    B = 0) and magnetization. Accuracy is that of the levels, about 10⁻¹² relative. Cost: one
-    exponential per level and temperature.
+    B = 0) and magnetization; where the model is not isotropic these are along z, and the
+    attribute ``field_direction`` says "z" instead of "any". Accuracy is that of the
+    levels, about 10⁻¹² relative. Cost: one exponential per level and temperature.
     """
     from thermo.variables import build_curves
 
@@ -136,6 +137,9 @@ def curves(
     attrs["g"] = float(moment_g) if moment_g is not None else "not common to all sites"
     if reason is not None:
         attrs["unavailable"] = reason
+    else:
+        # Without full rotational symmetry the levels fix the moment along z only.
+        attrs["field_direction"] = "any" if table.resolved == "total_spin" else "z"
     return build_curves(t, b, {k: values[k] for k in known if k in wanted}, units, attrs)
 
 

@@ -17,7 +17,7 @@ __all__ = ["Estimate", "FitResult", "SetResult", "Study", "fit", "read_study"]
 def fit(
     study: Study | str | os.PathLike[str] | Mapping[str, object],
     progress: Callable[[float, str], None] | None = None,
-    memory: int | None = None,
+    memory: int | float | str | None = None,
     solver: Solver | None = None,
 ) -> FitResult:
     """Fit a study: a ``Study``, or what ``read_study`` takes.

@@ -14,7 +14,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 from numpy.typing import NDArray
 
-from thermo.errors import ModelError, RangeError, SpectrumError, UnavailableError
+from thermo.errors import RangeError, SpectrumError, UnavailableError
 from thermo.hilbert import blocks, encoding, operators
 from thermo.hilbert.orbits import Links, Orbits, find_images, find_links, find_orbits
 from thermo.model.level_table import LevelTable, check_levels
@@ -391,8 +391,7 @@ def solve(
     free. ``progress(fraction, text)`` is called as blocks finish. Raises MemoryLimitError
     before allocating a block that does not fit, SpectrumError if the self-check fails.
     """
-    if not isinstance(model, SpinModel):
-        raise ModelError("solve takes a model from read_model; pass the file through it first")
+    planning.check_model(model, "solve")
     if method == "sampled":
         raise UnavailableError(
             "sampled spectra are not part of this version; use method='full' on a smaller cluster"

@@ -11,12 +11,17 @@ from thermo.errors import RangeError
 GIB = 2**30
 # Left to the system and the program itself.
 MARGIN = GIB // 2
-_UNITS = {"": 1, "B": 1, "KB": 10**3, "MB": 10**6, "GB": 10**9, "TB": 10**12}
-_UNITS |= {"KIB": 2**10, "MIB": 2**20, "GIB": 2**30, "TIB": 2**40}
+_UNITS = {"B": 1}
+for _power, _letter in enumerate("KMGT", start=1):
+    _UNITS[f"{_letter}B"] = 1000**_power
+    _UNITS |= dict.fromkeys((_letter, f"{_letter}I", f"{_letter}IB"), 1024**_power)
 
 
 def memory_limit(memory: int | float | str | None) -> int:
-    """The limit in bytes: a number of bytes, a text like "4 GiB", or None for what is free."""
+    """The limit in bytes: a number of bytes, a text like "4 GiB", or None for what is free.
+
+    A text needs its unit: "4" could be meant in bytes or in GiB.
+    """
     if memory is None:
         free = int(psutil.virtual_memory().available)
         return max(free - max(MARGIN, free // 10), free // 4)

@@ -9,7 +9,7 @@ from typing import Any
 
 import numpy as np
 
-from thermo.errors import MemoryLimitError
+from thermo.errors import MemoryLimitError, ModelError
 from thermo.model.spin_model import SpinModel
 from thermo.spectrum.memory import memory_limit, size_text
 from thermo.symmetry.sectors import MagneticSector, SymmetryPlan, plan_symmetry
@@ -41,14 +41,15 @@ class SectorPlan:
     real: bool
 
 
-@dataclass(frozen=True)
+@dataclass(frozen=True, repr=False)
 class Plan:
     """What solving a model would involve; see ``survey``.
 
+    ``method`` is "full", or "none" where a full solution exceeds memory or patience.
     ``conserved`` is "total_spin", "magnetic_number", "parity" or "none"; ``group_order``
     counts the site permutations that leave H unchanged and ``abelian_order`` those used to
     split it; ``memory_bytes`` is the peak of a full solution, ``seconds`` its time on this
-    machine, ``method`` what would be chosen. ``largest`` is the largest block's dimension.
+    machine. ``largest`` is the largest block's dimension.
     """
 
     title: str
@@ -68,6 +69,15 @@ class Plan:
     seconds: float
     method: str
     notes: tuple[str, ...]
+
+    def __str__(self) -> str:
+        """One line; the whole table is the command ``partita survey`` or ``as_dict``."""
+        return (
+            f"Plan({self.title!r}: {self.sites} sites, {len(self.sectors)} blocks, largest "
+            f"{_grouped(self.largest)}, {size_text(self.memory_bytes)}, method {self.method})"
+        )
+
+    __repr__ = __str__
 
     def as_dict(self) -> dict[str, Any]:
         """The plan as plain data."""
@@ -110,14 +120,25 @@ def refuse_if_too_large(plan: SymmetryPlan, limit: int) -> None:
     needed = memory_needed(plan)
     if needed <= limit:
         return
+    if needed < 2 * BASE_BYTES:
+        raise MemoryLimitError(
+            f"the program itself needs about {size_text(BASE_BYTES)} and this model "
+            f"{size_text(needed - BASE_BYTES)} more, where the limit is {size_text(limit)}; raise "
+            "the memory limit"
+        )
     largest = max(plan.sectors, key=lambda s: block_bytes(s.dimension, s.real))
-    kind = "real" if largest.real else "complex"
+    size = f"{_grouped(largest.dimension)} states ({'real' if largest.real else 'complex'})"
     raise MemoryLimitError(
-        f"the largest block has {largest.dimension:,} states ({kind}), so the full spectrum "
+        f"the largest block has {size}, so the full spectrum "
         f"needs {size_text(needed)} where the limit is {size_text(limit)}; take a smaller "
         "cluster, keep more symmetry (equal couplings, isotropic or axial terms), or raise the "
         "memory limit if the machine has more"
     )
+
+
+def _grouped(count: int) -> str:
+    """A count with its thousands apart, in powers of ten beyond all use."""
+    return f"{count:,}".replace(",", " ") if count < 10**15 else f"{count:.1e}"
 
 
 @functools.cache
@@ -150,6 +171,14 @@ def time_needed(plan: SymmetryPlan) -> float:
     return _START_SECONDS + _speed_factor() * (blocks + _LINK_SECONDS * (links + scan))
 
 
+def check_model(model: object, caller: str) -> None:
+    """Refuse anything but a SpinModel, with the way to get one."""
+    if not isinstance(model, SpinModel):
+        raise ModelError(
+            f"{caller} takes a model, not {type(model).__name__}; make one with read_model(path)"
+        )
+
+
 def survey(model: SpinModel, memory: int | float | str | None = None) -> Plan:
     """What solving a model would involve, without solving it.
 
@@ -158,6 +187,7 @@ def survey(model: SpinModel, memory: int | float | str | None = None) -> Plan:
     estimated; nothing large is allocated. The time is a forecast for an idle machine, good to
     about a factor of two.
     """
+    check_model(model, "survey")
     limit = memory_limit(memory)
     symmetry = plan_symmetry(model)
     needed = memory_needed(symmetry)
@@ -165,11 +195,11 @@ def survey(model: SpinModel, memory: int | float | str | None = None) -> Plan:
     notes = list(model.notes)
     method = "full"
     if needed > limit or seconds > _PATIENCE_SECONDS:
-        method = "sampled"
+        method = "none"
         reason = "memory" if needed > limit else "time"
         notes.append(
-            f"the full spectrum exceeds the {reason} at hand, and sampling is not part of this "
-            "version yet; a smaller cluster or more symmetry is the way out"
+            f"the full spectrum exceeds the {reason} at hand, and sampled spectra are not part of "
+            "this version; a smaller cluster or more symmetry is the way out"
         )
     return Plan(
         title=model.title,
