@@ -4,42 +4,9 @@ from __future__ import annotations
 
 import math
 
-_SUPERSCRIPTS = str.maketrans("-0123456789", "⁻⁰¹²³⁴⁵⁶⁷⁸⁹")
+from thermo.numbers import plain, with_uncertainty
 
-
-def with_uncertainty(value: float, error: float, digits: int = 2) -> str:
-    """A value and its standard error in concise notation (GUM 7.2.2): 70.12(35), 1.20(3)×10⁻⁴.
-
-    ``digits`` significant digits of the error are kept and the value is rounded alike. Without
-    a usable error (zero, NaN, infinite) the value alone, to six digits.
-    """
-    if not math.isfinite(value):
-        return str(value)
-    if not math.isfinite(error) or error <= 0:
-        return plain(value)
-    # Rounding the error first: 0.0996 becomes 0.10, which has its first digit one place higher.
-    rounded = float(f"{error:.{digits - 1}e}")
-    place = math.floor(math.log10(rounded)) - digits + 1
-    top = math.floor(math.log10(max(abs(value), rounded)))
-    power = top if top < -3 or top > 5 else 0
-    decimals = max(power - place, 0)
-    scale = 10.0**power
-    shown = round(value, -place) / scale
-    last = rounded / scale
-    inside = f"{last:.{decimals}f}"
-    if decimals and last < 1:
-        inside = str(round(rounded / 10.0**place))
-    text = f"{shown:.{decimals}f}({inside})"
-    return text + (f"×10{str(power).translate(_SUPERSCRIPTS)}" if power else "")
-
-
-def plain(value: float, digits: int = 6) -> str:
-    """A number to ``digits`` significant digits, with ×10ⁿ where an exponent is needed."""
-    text = f"{value:.{digits}g}"
-    if "e" not in text:
-        return text
-    mantissa, power = text.split("e")
-    return f"{mantissa}×10{str(int(power)).translate(_SUPERSCRIPTS)}"
+__all__ = ["duration", "grouped", "plain", "size", "with_uncertainty"]
 
 
 def grouped(count: float) -> str:
