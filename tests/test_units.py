@@ -89,7 +89,7 @@ def test_dimensionless_energy_stays_dimensionless() -> None:
         ("chi_T", "cm3 K/mol", 4e-6 * math.pi),
         ("specific_heat", "mJ/(mol K)", 1e-3),
         ("specific_heat", "R", 8.31446261815324),
-        ("C/T", "mJ/(mol K2)", 1e-3),
+        ("specific_heat_over_T", "mJ/(mol K2)", 1e-3),
         ("magnetization", "muB", 5.58493940253),
         ("magnetization", "emu/mol", 1e-3),
         ("temperature", "mK", 1e-3),
@@ -100,6 +100,47 @@ def test_dimensionless_energy_stays_dimensionless() -> None:
 )
 def test_measured_units_to_si(quantity: str, unit: str, factor: float) -> None:
     assert units.quantity_factor(quantity, unit) == pytest.approx(factor, rel=1e-11)
+
+
+SPELLINGS = {
+    ("susceptibility", "cm3/mol"): ["cm3 mol-1", "mol-1 cm3", "cm³/mol", "cm^3 mol^-1"],
+    ("susceptibility", "emu/mol"): ["emu mol-1", "emu mol**-1", "emu·mol⁻¹"],
+    ("susceptibility", "m3/mol"): ["m3 mol-1", "m^3/mol"],
+    ("susceptibility", "emu/(mol Oe)"): ["emu/mol/Oe", "emu/mol Oe", "emu mol-1 Oe-1"],
+    ("chi_T", "cm3 K/mol"): ["cm3 K mol-1", "cm3 mol-1 K", "K cm³/mol", "(cm3/mol) K"],
+    ("chi_T", "emu K/mol"): ["emu K mol-1", "emu·K·mol−1"],
+    ("specific_heat", "J/(mol K)"): [
+        "J mol-1 K-1", "J K-1 mol-1", "J/mol/K", "J/mol K", "J/(K*mol)", "J K⁻¹ mol⁻¹",
+    ],
+    ("specific_heat_over_T", "mJ/(mol K2)"): ["mJ mol-1 K-2", "mJ/mol K^2", "mJ/mol/K/K"],
+    ("magnetization", "A m2/mol"): ["A m2 mol-1", "A m^2 mol^-1"],
+    ("magnetization", "J/(mol T)"): ["J T-1 mol-1"],
+    ("magnetization", "muB"): ["μB", "µB", "mu_B", "μ_B"],
+}  # fmt: skip
+
+
+@pytest.mark.parametrize(
+    ("quantity", "name", "spelling"),
+    [(*key, spelling) for key, spellings in SPELLINGS.items() for spelling in spellings],
+)
+def test_a_unit_however_it_is_spelt(quantity: str, name: str, spelling: str) -> None:
+    assert units.unit_name(quantity, spelling) == name
+    assert units.quantity_factor(quantity, spelling) == units.quantity_factor(quantity, name)
+
+
+@pytest.mark.parametrize("unit", ["cm3/mol K", "cm3 K/(mol", "cm3 K mol-1)", "cm3 K", "()",
+                                  "", "mol/(cm3 K)", "cm3 K mol-999999999999", "1e3"])  # fmt: skip
+def test_what_is_no_unit_of_chi_T(unit: str) -> None:
+    with pytest.raises(UnitsError, match="does not fit chi_T; use one of"):
+        units.quantity_factor("chi_T", unit)
+
+
+def test_units_of_one_quantity_are_all_told_apart() -> None:
+    for quantity in units.QUANTITIES:
+        for unit in units.quantity_units(quantity):
+            assert units.unit_name(quantity, unit) == unit
+            parsed = units._parse(unit)
+            assert sum(units._parse(u) == parsed for u in units.quantity_units(quantity)) == 1
 
 
 @pytest.mark.parametrize(

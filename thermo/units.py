@@ -11,6 +11,7 @@ it; the measured μ0 differs by 1.3·10⁻¹⁰, far below anything that matters
 from __future__ import annotations
 
 import math
+import re
 from collections.abc import Mapping
 from types import MappingProxyType
 from typing import Literal
@@ -77,17 +78,20 @@ _FACTORS: Mapping[str, Mapping[str, float]] = MappingProxyType(
             "m3/mol": 1.0,
             "emu/mol": CHI_SI_PER_EMU,
             "cm3/mol": CHI_SI_PER_EMU,
+            "emu/(mol Oe)": CHI_SI_PER_EMU,
         },
         "chi_T": {
             "m3 K/mol": 1.0,
             "emu K/mol": CHI_SI_PER_EMU,
             "cm3 K/mol": CHI_SI_PER_EMU,
+            "emu K/(mol Oe)": CHI_SI_PER_EMU,
         },
         "specific_heat": {"J/(mol K)": 1.0, "mJ/(mol K)": 1e-3, "R": GAS_CONSTANT},
-        "C/T": {"J/(mol K2)": 1.0, "mJ/(mol K2)": 1e-3},
+        "specific_heat_over_T": {"J/(mol K2)": 1.0, "mJ/(mol K2)": 1e-3},
         "entropy": {"J/(mol K)": 1.0, "mJ/(mol K)": 1e-3, "R": GAS_CONSTANT},
         "magnetization": {
             "A m2/mol": 1.0,
+            "J/(mol T)": 1.0,
             "emu/mol": MOMENT_SI_PER_EMU,
             "muB": MOLAR_BOHR_MAGNETON,
         },
@@ -133,7 +137,7 @@ def convert_energy(value: float, from_unit: str, to_unit: str) -> float:
 
 
 def quantity_units(quantity: str) -> tuple[str, ...]:
-    """The unit spellings accepted for a measured quantity, its SI unit first."""
+    """The units of a measured quantity, its SI unit first; other spellings of them will do."""
     return tuple(_factors(quantity))
 
 
@@ -141,24 +145,73 @@ def quantity_factor(quantity: str, unit: str, reduced: bool | None = None) -> fl
     """Factor from ``unit`` to the SI unit of a measured quantity.
 
     SI units: susceptibility m3/mol, chi_T m3 K/mol, specific_heat and entropy J/(mol K),
-    C/T J/(mol K2), magnetization A m2/mol, temperature K, field T. "muB" and "R" are per ion
-    (or formula unit) and per mole of the same. Fields in Oe and G are taken as B, 1 Oe -> 10⁻⁴ T.
+    specific_heat_over_T J/(mol K2), magnetization A m2/mol, temperature K, field T. "muB" and "R"
+    are per ion (or formula unit) and per mole of the same. Fields in Oe and G are taken as B,
+    1 Oe -> 10⁻⁴ T; a susceptibility in emu/(mol Oe) is one in emu/mol.
     ``reduced=True`` accepts only "1" (factor 1), ``False`` everything but it, ``None`` both.
     Raises UnitsError where the unit does not fit the quantity.
     """
+    name = unit_name(quantity, unit, reduced)
+    return 1.0 if name == "1" else _factors(quantity)[name]
+
+
+def unit_name(quantity: str, unit: str, reduced: bool | None = None) -> str:
+    """``unit`` as ``quantity_units`` spells it: "J mol^-1 K^-1" is "J/(mol K)".
+
+    The order of factors, and how exponents, products and quotients are written, do not matter.
+    All that follows a "/" is below the line: "J/mol K" is J/(mol K), while "cm3/mol K", which
+    some mean as cm3 K/mol, fits nothing. ``reduced`` and errors as for ``quantity_factor``.
+    """
     factors = _factors(quantity)
     if unit == "1" and reduced is not False:
-        return 1.0
+        return unit
     if reduced:
         raise UnitsError(
             f'unit {unit!r} of {quantity} does not fit a dimensionless model; use "1", '
             "or state the model's energies in K, meV or cm-1"
         )
-    if unit not in factors:
-        known = ", ".join(f'"{name}"' for name in factors)
-        extra = '; "1" belongs to dimensionless models' if unit == "1" else ""
-        raise UnitsError(f"unit {unit!r} does not fit {quantity}{extra}; use one of {known}")
-    return factors[unit]
+    if unit in factors:
+        return unit
+    parsed = _parse(unit)
+    for name in factors:
+        if parsed and parsed == _parse(name):
+            return name
+    known = ", ".join(f'"{name}"' for name in factors)
+    extra = '; "1" belongs to dimensionless models' if unit == "1" else ""
+    raise UnitsError(f"unit {unit!r} does not fit {quantity}{extra}; use one of {known}")
+
+
+# Written another way: powers and minus signs, dots between factors, and the Bohr magneton.
+_SPELLING = str.maketrans("⁻⁰¹²³⁴⁵⁶⁷⁸⁹−–·⋅×*µ", "-0123456789--    μ")
+_BOHR = {"muB", "mu_B", "μB", "μ_B", "uB", "u_B", "mub"}
+_TOKEN = re.compile(r"\s*(?:([/()])|([^\W\d]+)(?:\s*\^\s*)?(-?\d{1,3})?)")
+
+
+def _parse(unit: str) -> dict[str, int] | None:
+    """Base names with their powers, {"J": 1, "mol": -1, "K": -1}; None if it is no unit."""
+    text = str(unit).replace("**", "^").translate(_SPELLING).strip()
+    powers: dict[str, int] = {}
+    outer: list[int] = []  # the side of the line on which each open bracket stands
+    start, side, at = 1, 1, 0
+    while at < len(text):
+        found = _TOKEN.match(text, at)
+        if found is None:
+            return None
+        at = found.end()
+        mark, name, power = found.groups()
+        if mark == "/":
+            side = -start
+        elif mark == "(":
+            outer += [start, side]
+            start = side
+        elif mark == ")":
+            if not outer:
+                return None
+            side, start = outer.pop(), outer.pop()
+        else:
+            name = "muB" if name in _BOHR else name
+            powers[name] = powers.get(name, 0) + side * int(power or 1)
+    return None if outer else {name: power for name, power in powers.items() if power}
 
 
 def check_units_system(units_system: str) -> str:
