@@ -14,18 +14,12 @@ from numpy.typing import NDArray
 
 from thermo.errors import DataError, UnitsError
 from thermo.fit.strict import Section, did_you_mean
-from thermo.units import quantity_factor
+from thermo.units import quantity_factor, unit_name
 
 Vector = NDArray[np.float64]
 
-#: Quantities a data set may hold, and the name under which thermo.units knows each.
-QUANTITIES: Mapping[str, str] = {
-    "susceptibility": "susceptibility",
-    "chi_T": "chi_T",
-    "specific_heat": "specific_heat",
-    "specific_heat_over_T": "C/T",
-    "magnetization": "magnetization",
-}
+#: Quantities a data set may hold, by their names in thermo.units.
+QUANTITIES = ("susceptibility", "chi_T", "specific_heat", "specific_heat_over_T", "magnetization")
 #: Quantities that need a conserved moment and one common g.
 MAGNETIC = ("susceptibility", "chi_T", "magnetization")
 DELIMITERS: Mapping[str, str] = {",": ",", ";": ";", "tab": "\t", "space": " "}
@@ -39,6 +33,7 @@ class Measured:
     ``temperature`` [K], ``field`` [T], ``value`` and ``uncertainty`` [SI unit of the quantity,
     per mole of ``per``] have shape (n,), as has ``line``, the line of each point in the file.
     ``uncertainty`` is None where the study states none. ``to_si`` takes the file's unit to SI.
+    ``direction`` of the field in the model's axes is "z", or "" where the study states none.
     """
 
     name: str
@@ -53,11 +48,17 @@ class Measured:
     line: NDArray[np.int64]
     n_masked: int
     to_si: float
+    direction: str = ""
 
     @property
     def n_points(self) -> int:
         """Number of points that enter the fit."""
         return len(self.value)
+
+    @property
+    def feels_direction(self) -> bool:
+        """Whether the field's direction matters to what was measured."""
+        return self.quantity in MAGNETIC or bool(np.any(self.field > 0))
 
 
 @dataclass(frozen=True)
@@ -79,14 +80,15 @@ def read_measured(section: Section, folder: Path, reduced: bool) -> Measured:
     """
     name = section.text("name", "a name for this data set")
     file = section.text("file", "the path of the data file, relative to the study")
-    quantity = section.word("quantity", tuple(QUANTITIES))
+    quantity = section.word("quantity", QUANTITIES)
     units = section.text("units", "the unit of the values")
     per = section.word("per", ("ion", "formula"), "ion")
+    direction = section.word("direction", ("z",)) if section.has("direction") else ""
     delimiter = section.word("delimiter", tuple(DELIMITERS), ",")
     header = section.flag("header", True)
     temperature_unit = section.text("temperature_unit", "K or mK", "1" if reduced else "K")
     field_unit = section.text("field_unit", "T, mT, Oe or kOe", "1" if reduced else "T")
-    to_si = _factor(section, "units", QUANTITIES[quantity], units, reduced)
+    to_si = _factor(section, "units", quantity, units, reduced)
     to_kelvin = _factor(section, "temperature_unit", "temperature", temperature_unit, reduced)
     to_tesla = _factor(section, "field_unit", "field", field_unit, reduced)
     columns = Section(
@@ -173,7 +175,7 @@ def read_measured(section: Section, folder: Path, reduced: bool) -> Measured:
         name=name,
         file=rows.path,
         quantity=quantity,
-        units=units,
+        units=unit_name(quantity, units, reduced),
         per=per,
         temperature=temperature[keep],
         field=field[keep],
@@ -182,6 +184,7 @@ def read_measured(section: Section, folder: Path, reduced: bool) -> Measured:
         line=line[keep],
         n_masked=int(n - keep.sum()),
         to_si=to_si,
+        direction=direction,
     )
 
 
@@ -274,15 +277,10 @@ def _numbers(rows: _Rows, where: str | int, role: str) -> Vector:
     if isinstance(where, str):
         names = rows.header or []
         if where not in names:
-            hint = did_you_mean(where, names)
-            only = (
-                f" (there is a single column; is the delimiter really {rows.delimiter!r}?)"
-                if len(names) == 1
-                else ""
-            )
+            shown = ", ".join(repr(name) for name in names[:8]) + ", ..." * (len(names) > 8)
             raise DataError(
-                f"{rows.path}: there is no column {where!r} for the {role} among "
-                f"{', '.join(repr(name) for name in names)}{only}; {hint}"
+                f"{rows.path}: there is no column {where!r} for the {role} among {shown}; "
+                + _header_hint(where, names, rows.delimiter)
             )
         index = names.index(where)
     else:
@@ -301,6 +299,23 @@ def _numbers(rows: _Rows, where: str | int, role: str) -> Vector:
     )
 
 
+def _header_hint(where: str, names: Sequence[str], delimiter: str) -> str:
+    """What may be wrong with a header that lacks a column."""
+    if all(_is_float(name) for name in names):
+        return (
+            "its first row holds numbers, so set header = false and give columns by number "
+            f"(a line that begins with {COMMENT!r} is a comment, not a header)"
+        )
+    if len(names) == 1 or delimiter == " ":  # split by the wrong character, if it holds another
+        for word, mark in DELIMITERS.items():
+            if mark not in (delimiter, " ") and any(mark in name for name in names):
+                holds = "tabs" if word == "tab" else repr(word)
+                return f'the header holds {holds}: set delimiter = "{word}"'
+        if delimiter != " " and len(names[0].split()) > 1:
+            return 'the header is a single column; if spaces part it, set delimiter = "space"'
+    return did_you_mean(where, names)
+
+
 def _number(cell: str, path: str, line: int, column: str) -> float:
     where = f"{path}, line {line}, column {column!r}"
     try:
@@ -314,7 +329,7 @@ def _number(cell: str, path: str, line: int, column: str) -> float:
     if not cell:
         raise DataError(f"{where}: the cell is empty; fill it or take the row out")
     if not readable:
-        hint = "give a number"
+        hint = f"correct or remove line {line}"
         if cell.count(",") == 1 and _is_float(cell.replace(",", ".")):
             hint = f"this looks like a decimal comma; write {cell.replace(',', '.')}"
         raise DataError(f"{where}: {cell!r} is not a number; {hint}")

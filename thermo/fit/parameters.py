@@ -17,7 +17,7 @@ from thermo.errors import StudyError, UnitsError
 from thermo.fit.strict import Section, did_you_mean
 from thermo.fit.ties import Dual, Tie, order_ties, parse_tie
 from thermo.model.spin_model import SpinModel
-from thermo.units import quantity_factor
+from thermo.units import quantity_factor, unit_name
 
 Vector = NDArray[np.float64]
 
@@ -31,7 +31,7 @@ class Parameter:
 
     ``role`` is "coupling", "g", "chi0", "paramagnetic_fraction" or "auxiliary"; ``status`` is
     "free", "fixed" or "tied". ``start`` is the start or fixed value (NaN where tied), in ``unit``.
-    ``to_si`` takes it to SI per mole of ions (chi0 only; 1 otherwise).
+    ``to_si`` takes it to SI per mole of ions (chi0 only, whose unit names its mole; 1 otherwise).
     """
 
     name: str
@@ -110,8 +110,11 @@ class Parameters:
         )
 
 
-def read_parameters(section: Section, model: SpinModel) -> Parameters:
-    """Read the ``[parameters]`` table; what it does not name stays at the model's value."""
+def read_parameters(section: Section, model: SpinModel, chi0_per: str = "ion") -> Parameters:
+    """Read the ``[parameters]`` table; what it does not name stays at the model's value.
+
+    ``chi0_per`` is what a mole of chi0 counts, "ion" or "formula", where the table does not say.
+    """
     names = [*model.couplings, *(name for name in NUISANCE if name not in model.couplings)]
     for name in NUISANCE:
         if name in model.couplings:
@@ -124,28 +127,21 @@ def read_parameters(section: Section, model: SpinModel) -> Parameters:
     for name in names:
         if section.has(name):
             entry = Section(section.content[name], section.at(name), section.source)
-            found.append(_read_one(entry, name, model))
+            found.append(_read_one(entry, name, model, chi0_per))
         else:
-            found.append(_default(name, model))
+            found.append(_default(name, model, chi0_per))
     return Parameters(found, section.source)
 
 
-def _default(name: str, model: SpinModel) -> Parameter:
-    return Parameter(
-        name,
-        _role(name, model),
-        "fixed",
-        _unit(name, model),
-        _natural(name, model),
-        to_si=_chi0_factor(None, name, model),
-    )
+def _default(name: str, model: SpinModel, chi0_per: str) -> Parameter:
+    role = _role(name, model)
+    unit, to_si = _chi0_unit(None, model, chi0_per) if role == CHI0 else (_unit(role, model), 1.0)
+    return Parameter(name, role, "fixed", unit, _natural(name, model), to_si=to_si)
 
 
-def _read_one(entry: Section, name: str, model: SpinModel) -> Parameter:
-    role, unit = _role(name, model), _unit(name, model)
-    if role == "chi0":
-        unit = entry.text("unit", "the unit of chi0", unit)
-    to_si = _chi0_factor(entry, name, model, unit)
+def _read_one(entry: Section, name: str, model: SpinModel, chi0_per: str) -> Parameter:
+    role = _role(name, model)
+    unit, to_si = _chi0_unit(entry, model, chi0_per) if role == CHI0 else (_unit(role, model), 1.0)
     statuses = [key for key in ("fixed", "tied") if entry.has(key)]
     bounds = [key for key in ("start", "lower", "upper") if entry.has(key)]
     if len(statuses) > 1 or (statuses and bounds):
@@ -199,12 +195,8 @@ def _role(name: str, model: SpinModel) -> str:
     return name if name in NUISANCE else "auxiliary"
 
 
-def _unit(name: str, model: SpinModel) -> str:
-    if name in model.couplings:
-        return model.energy_unit
-    if name == CHI0:
-        return "1" if model.energy_unit == "1" else "emu/mol"
-    return "1"
+def _unit(role: str, model: SpinModel) -> str:
+    return model.energy_unit if role == "coupling" else "1"
 
 
 def _natural(name: str, model: SpinModel) -> float:
@@ -217,17 +209,18 @@ def _natural(name: str, model: SpinModel) -> float:
     return 0.0
 
 
-def _chi0_factor(
-    entry: Section | None, name: str, model: SpinModel, unit: str | None = None
-) -> float:
-    """From chi0's unit and reference to SI per mole of magnetic ions."""
-    if name != CHI0:
-        return 1.0
+def _chi0_unit(entry: Section | None, model: SpinModel, per: str) -> tuple[str, float]:
+    """chi0's unit with its mole, "emu/mol ion", and the factor to SI per mole of magnetic ions."""
     reduced = model.energy_unit == "1"
-    try:
-        factor = quantity_factor("susceptibility", unit or _unit(name, model), reduced=reduced)
-    except UnitsError as error:
-        where = f"{entry.source}: {entry.at('unit')}: " if entry is not None else ""
-        raise UnitsError(f"{where}{error}") from None
-    per = entry.word("per", ("ion", "formula"), "ion") if entry is not None else "ion"
-    return factor / model.ions_per_formula if per == "formula" else factor
+    unit = "1" if reduced else "emu/mol"
+    if entry is not None:
+        stated = entry.text("unit", "the unit of chi0", unit)
+        per = entry.word("per", ("ion", "formula"), per)
+        try:
+            unit = unit_name("susceptibility", stated, reduced)
+        except UnitsError as error:
+            raise UnitsError(f"{entry.source}: {entry.at('unit')}: {error}") from None
+    factor = quantity_factor("susceptibility", unit, reduced)
+    if per == "formula":
+        factor /= model.ions_per_formula
+    return (unit if reduced else f"{unit} {per}"), factor

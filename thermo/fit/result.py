@@ -148,7 +148,7 @@ class FitResult:
         """
         if quantity not in QUANTITIES:
             raise RangeError(
-                f"quantity {quantity!r} is unknown; {did_you_mean(quantity, tuple(QUANTITIES))}"
+                f"quantity {quantity!r} is unknown; {did_you_mean(quantity, QUANTITIES)}"
             )
         if per not in ("ion", "formula"):
             raise RangeError(f"per = {per!r} is unknown; use 'ion' or 'formula'")
@@ -166,7 +166,7 @@ class FitResult:
             raise RangeError("every field must be a finite number from zero upwards")
         factor = 1.0
         if units is not None:
-            factor = quantity_factor(QUANTITIES[quantity], units, reduced=self.study.reduced)
+            factor = quantity_factor(quantity, units, reduced=self.study.reduced)
         points = Points(quantity, np.ravel(T), np.ravel(B), per)
         return self.forward.predict(points, self.values).reshape(T.shape) / factor
 

@@ -1,4 +1,57 @@
-"""The study file: which data, which model, which parameters. Read whole and checked at once."""
+"""The study file: which data, which model, which parameters. Read whole and checked at once.
+
+Every key of a study file (positions in lists count from 0; paths are relative to the file):
+
+    format = 1                    required
+    title = "..."                 default: the file's name
+    model                         required: the path of the model file
+
+    [[data]]     name             required; no two sets share one
+                 file             required: a text table in UTF-8; lines that begin with # are
+                                  comments
+                 quantity         required: "susceptibility", "chi_T", "specific_heat",
+                                  "specific_heat_over_T", "magnetization"
+                 units            required, and must fit the quantity (below)
+                 per              what a mole counts, and of what muB is the moment: "ion"
+                                  (default), or "formula", which holds ions_per_formula of them
+                 delimiter        "," (default), ";", "tab", "space" (any number of them)
+                 header           true (default): the first row names the columns; or false
+                 columns          required: temperature, value, uncertainty, field, each the
+                                  header of a column or its number from 1; value is required
+                 temperature      of all rows, in K, instead of its column
+                 field            of all rows, in T, instead of its column; default 0, and
+                                  required for a magnetization. Above 0 a susceptibility means
+                                  M/B, at 0 the zero-field limit
+                 temperature_unit, field_unit    of the columns; default "K" and "T"
+                 direction        of the field: "z", for a crystal measured along the model's z.
+                                  Left out, a fit of an anisotropic model says what it assumed
+                 range            [lowest, highest] temperature to use, in K
+                 relative_uncertainty, absolute_uncertainty
+                                  of all rows (a fraction; or in units) instead of a column;
+                                  every set states its uncertainties, or none does
+
+    [parameters] the model's couplings, g, chi0, paramagnetic_fraction, and names of your own
+                 that ties use. What is left out is fixed at the model's value, or at 0. Each is
+                 a table with the keys start, lower, upper: free, from the model's value where
+                                  no start is given, without bounds where none are
+                 fixed            its value, or
+                 tied             an expression of + - * / ( ), numbers and other parameters
+                 unit             of chi0 only: a unit of susceptibility, default "emu/mol"
+                 per              of chi0 only: "ion" or "formula", default that of the magnetic
+                                  data sets if they agree, else "ion"
+
+Units, in any usual spelling (emu mol-1, J/mol/K, A m^2 mol^-1, μB):
+
+    susceptibility                "m3/mol", "emu/mol", "cm3/mol", "emu/(mol Oe)"
+    chi_T                         "m3 K/mol", "emu K/mol", "cm3 K/mol", "emu K/(mol Oe)"
+    specific_heat                 "J/(mol K)", "mJ/(mol K)", "R"
+    specific_heat_over_T          "J/(mol K2)", "mJ/(mol K2)"
+    magnetization                 "A m2/mol", "J/(mol T)", "emu/mol", "muB"
+    temperature                   "K", "mK"
+    field                         "T", "mT", "Oe", "kOe", "G", "kG"; taken as B, 1 Oe as 10⁻⁴ T
+
+A dimensionless model (energy_unit "1") takes "1" for all of them.
+"""
 
 from __future__ import annotations
 
@@ -83,12 +136,16 @@ def read_study(source: str | os.PathLike[str] | Mapping[str, object]) -> Study:
         model = read_model(folder / raw_model)
     else:
         raise section.fail("model", "must be the path of a model file; give one")
-    parameters = read_parameters(Section(raw_parameters, "parameters", name), model)
     if isinstance(raw_data, Mapping) or not isinstance(raw_data, Sequence) or not raw_data:
         raise section.fail("data", "must be one or more [[data]] tables; give at least one")
     sets = tuple(
         read_measured(Section(item, f"data[{k}]", name), folder, model.energy_unit == "1")
         for k, item in enumerate(raw_data)
+    )
+    # χ0 counts the moles the data do, unless they differ or its own table says otherwise.
+    per = {data.per for data in sets if data.quantity in MAGNETIC}
+    parameters = read_parameters(
+        Section(raw_parameters, "parameters", name), model, per.pop() if len(per) == 1 else "ion"
     )
     study = Study(title, name, text, model, sets, parameters)
     _check(study)
@@ -143,15 +200,14 @@ def _check(study: Study) -> None:
                 f"errors of {len(free)} parameters by; give uncertainties or fix a parameter"
             )
     magnetic = [data for data in sets if data.quantity in MAGNETIC]
-    in_field = [data for data in sets if np.any(data.field > 0)]
-    if study.model.common_g is None and (magnetic or in_field):
-        first = (magnetic or in_field)[0]
+    felt = [data for data in sets if data.feels_direction]
+    if study.model.common_g is None and felt:
         raise UnavailableError(
-            f"{name}: data set {first.name!r} needs one g common to all sites and directions, but "
-            "the model's g differs; give the model one g, or fit zero-field specific heat only"
+            f"{name}: data set {felt[0].name!r} needs one g common to all sites and directions, "
+            "but the model's g differs; give the model one g, or fit zero-field specific heat only"
         )
     slopes = study.parameters.values(study.parameters.start).slope
-    unfelt = {n for n, felt in ((G, magnetic or in_field), (CHI0, magnetic)) if not felt}
+    unfelt = {n for n, by in ((G, felt), (CHI0, magnetic)) if not by}
     unfelt |= {p.name for p in study.parameters.all if p.role == "auxiliary"}
     for k, parameter in enumerate(free):
         if not any(slope[k] for n, slope in slopes.items() if n not in unfelt):
