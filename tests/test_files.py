@@ -93,6 +93,7 @@ def dimer_fit() -> xr.Dataset:
             "dataset_name": ["chi", "heat"],
             "dataset_quantity": ["susceptibility", "specific_heat"],
             "dataset_units": ["emu/mol", "J/(mol K)"],
+            "dataset_per": ["ion", "formula"],
             "dataset_chi_square": [2.0, 1.0],
             "chi_square": 3.0,
             "reduced_chi_square": 1.5,
@@ -208,6 +209,18 @@ def test_attributes_of_a_source_file_do_not_leak() -> None:
     assert curves.attrs["history"].count("\n") == 1
     assert "SI" in curves.attrs["comment"]
     assert "formula units" in curves["entropy"].attrs["comment"]
+
+
+@pytest.mark.parametrize("kind", list(DATASETS))
+def test_further_attributes_are_kept(kind: str, tmp_path: Path) -> None:
+    further = {"field_direction": "z", "cautions": "", "made_by": "Ångström", "spectra_solved": 3}
+    source = DATASETS[kind]()
+    dataset = variables._build(
+        kind, {n: v.values for n, v in source.variables.items()}, source.attrs | further
+    )
+    storage.write_dataset(dataset, tmp_path / "x.nc")
+    back = storage.read_dataset(tmp_path / "x.nc", kind)
+    assert {name: back.attrs[name] for name in further} == further
 
 
 @pytest.mark.parametrize(

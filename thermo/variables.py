@@ -140,6 +140,8 @@ _FIT = (
     _v("dataset_quantity", "dataset", "str", None, "quantity the dataset measures"),
     _v("dataset_units", "dataset", "str", None, "units of the dataset's measured values",
        note="in these, observed, uncertainty, predicted and residual of its points are given"),
+    _v("dataset_per", "dataset", "str", None, "per what molar values of the dataset are counted",
+       note="ion: magnetic ions (sites), formula: formula units", required=False),
     _v("dataset_chi_square", "dataset", "f8", "1", "the dataset's share of chi square"),
     _v("chi_square", "", "f8", "1", "sum of squared residuals over uncertainties"),
     _v("reduced_chi_square", "", "f8", "1", "chi square per degree of freedom", finite=False),
@@ -223,9 +225,10 @@ def build_fit(arrays: Mapping[str, Any], attrs: Mapping[str, Any]) -> xr.Dataset
     (0 fixed, 1 free, 2 tied), and correlation (P, P). N points of all datasets one after the
     other: temperature (K), field (T), observed, uncertainty, predicted, residual (each in its
     dataset's own units), point_dataset. D datasets: dataset_name, dataset_quantity,
-    dataset_units, dataset_chi_square. Numbers: chi_square, reduced_chi_square,
-    degrees_of_freedom, evaluations, converged. Optional smooth lines for pictures:
-    curve_temperature, curve_field, curve_predicted, curve_dataset.
+    dataset_units, dataset_chi_square and, where known, dataset_per ("ion" or "formula").
+    Numbers: chi_square, reduced_chi_square, degrees_of_freedom, evaluations, converged.
+    Optional smooth lines for pictures: curve_temperature, curve_field, curve_predicted,
+    curve_dataset.
     """
     return _build("fit", arrays, attrs)
 

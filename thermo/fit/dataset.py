@@ -56,6 +56,7 @@ def fit_dataset(result: FitResult) -> xr.Dataset:
         "dataset_name": [d.name for d in data],
         "dataset_quantity": [d.quantity for d in data],
         "dataset_units": [d.units for d in data],
+        "dataset_per": [d.per for d in data],
         "dataset_chi_square": [item.chi_square for item in sets],
     }
     lines = [(k, d, points) for k, d in enumerate(data) for points in _lines(d)]
