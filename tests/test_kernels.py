@@ -110,7 +110,7 @@ def test_orbits_and_links_against_brute_force() -> None:
         assert orbits.fixing[orbits.start[r] : orbits.start[r + 1]].tolist() == fixing
         assert orbits.stabiliser[r] == len(fixing) + 1
     pair = {tuple(sorted((i, (i + 1) % n))): np.eye(3)[None] for i in range(n)}
-    moves = operators.move_tables(code, pair, {}, 1)
+    moves = operators.move_tables(code, pair, {}, 1, 0)
     links = find_links(code, orbits, tables, moves)
     for r, c in enumerate(expected):
         digits = enc.digits(code, np.array([c]))[0]
@@ -144,7 +144,7 @@ def test_moves_rebuild_the_dense_operator(seed: int) -> None:
     pair = {(0, 1): rng.standard_normal((1, 3, 3)), (1, 2): rng.standard_normal((1, 3, 3))}
     quadrupole = rng.standard_normal((3, 3))
     ion = {2: (quadrupole + quadrupole.T)[None]}
-    moves = operators.move_tables(code, pair, ion, 1)
+    moves = operators.move_tables(code, pair, ion, 1, 1)
     states = all_digits(twice)
     place = {s: k for k, s in enumerate(states)}
     dense = np.zeros((len(states), len(states)), dtype=complex)

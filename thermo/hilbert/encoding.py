@@ -66,13 +66,15 @@ def digits(encoding: Encoding, configurations: Ints) -> Ints:
 
 
 def element_tables(encoding: Encoding, permutations: Ints, reverse: NDArray[np.bool_]) -> Ints:
-    """Images of every chunk value under each element, shape (G, chunks, 256).
+    """Images of every chunk value under each element, shape (G, chunks, 256 or more).
 
     The image of a configuration is the sum of its chunks' entries. Site i's digit moves to
     site p[i]; with ``reverse`` it also turns from m into −m.
     """
     n_chunks = len(encoding.chunk_shift)
-    tables = np.zeros((len(permutations), n_chunks, 1 << CHUNK_BITS), dtype=np.int64)
+    # A single site of a very large spin may be wider than a chunk.
+    width = max(1 << CHUNK_BITS, int(encoding.chunk_mask.max()) + 1)
+    tables = np.zeros((len(permutations), n_chunks, width), dtype=np.int64)
     for k in range(n_chunks):
         sites = np.arange(encoding.chunk_site[k], encoding.chunk_site[k + 1])
         local = np.arange(encoding.chunk_mask[k] + 1)

@@ -28,7 +28,10 @@ def _source_hash() -> str:
 
 def _writable(folder: Path) -> bool:
     try:
-        folder.mkdir(parents=True, exist_ok=True)
+        folder.mkdir(parents=True, exist_ok=True, mode=0o700)
+        # Compiled code is loaded from here: nobody else may have put it there.
+        if hasattr(os, "getuid") and folder.stat().st_uid != os.getuid():
+            return False
         with tempfile.TemporaryFile(dir=folder):
             return True
     except OSError:
@@ -44,7 +47,7 @@ def cache_folder() -> Path | None:
     with contextlib.suppress(RuntimeError, KeyError):
         places.insert(0, Path(platformdirs.user_cache_dir("partita", appauthor=False)))
     for place in places:
-        if _writable(place / name):
+        if _writable(place) and _writable(place / name):
             return place / name
     return None
 

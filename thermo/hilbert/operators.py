@@ -59,19 +59,29 @@ class MoveTables:
         return values @ self.amplitudes, values @ self.diagonals
 
 
+def _band(matrices: NDArray[np.complex128], step: int) -> NDArray[np.complex128]:
+    """⟨a + step|S^x|a⟩ for all a, shape (3, d), zero where a + step is no state."""
+    d = matrices.shape[1]
+    a = np.arange(d)
+    inside = (a + step >= 0) & (a + step < d)
+    band: NDArray[np.complex128] = matrices[:, (a + step).clip(0, d - 1), a] * inside
+    return band
+
+
 def _steps(
-    operator: NDArray[np.complex128], di: int, dj: int
+    left: NDArray[np.complex128], right: NDArray[np.complex128], tensors: Tensors, modulus: int
 ) -> dict[tuple[int, int], NDArray[np.complex128]]:
-    """Split a (P, d_i, d_j, d_i, d_j) operator [a′ b′ a b] by steps, tables over (a, b)."""
-    a, b = np.arange(di)[:, None], np.arange(dj)[None, :]
+    """Tables (P, d_i, d_j) of Sᵀ A S over (a, b) for every step that keeps M (or its class)."""
     tables = {}
-    for step_i in range(-2, 3):
-        for step_j in range(-1, 2):
-            a_new, b_new = a + step_i, b + step_j
-            inside = (a_new >= 0) & (a_new < di) & (b_new >= 0) & (b_new < dj)
-            picked = operator[:, a_new.clip(0, di - 1), b_new.clip(0, dj - 1), a, b] * inside
-            if np.any(picked):
-                tables[step_i, step_j] = picked
+    for step_i in (-1, 0, 1):
+        for step_j in (-1, 0, 1):
+            change = step_i + step_j
+            # A forbidden step can only come from rounding; it would leave the sector.
+            if change if modulus == 0 else change % modulus:
+                continue
+            table = np.einsum("pxy,xa,yb->pab", tensors, _band(left, step_i), _band(right, step_j))
+            if np.any(table):
+                tables[step_i, step_j] = table
     return tables
 
 
@@ -80,8 +90,12 @@ def move_tables(
     pair: Mapping[tuple[int, int], Tensors],
     ion: Mapping[int, Tensors],
     n_channels: int,
+    modulus: int,
 ) -> MoveTables:
-    """Tables of Σ S_iᵀ A_ij S_j + Σ S_iᵀ D_i S_i; tensors have shape (n_channels, 3, 3)."""
+    """Tables of Σ S_iᵀ A_ij S_j + Σ S_iᵀ D_i S_i; tensors have shape (n_channels, 3, 3).
+
+    ``modulus`` tells what the terms conserve (0: M, 2: M modulo 2, 1: nothing).
+    """
     moves: list[tuple[int, int, int, int, NDArray[np.complex128]]] = []
     diagonal: list[tuple[int, int, Tensors]] = []
     spins = [spin_matrices(int(d) - 1) for d in encoding.dimension]
@@ -97,17 +111,20 @@ def move_tables(
     # Most pairs of a cluster are alike; each kind is worked out once.
     known: dict[tuple[bytes, int, int], dict[tuple[int, int], NDArray[np.complex128]]] = {}
     for (i, j), a in sorted(pair.items()):
-        di, dj = int(encoding.dimension[i]), int(encoding.dimension[j])
-        key = (a.tobytes(), di, dj)
+        key = (a.tobytes(), int(encoding.dimension[i]), int(encoding.dimension[j]))
         if key not in known:
-            operator = np.einsum("pxy,xac,ybd->pabcd", a, spins[i], spins[j])
-            operator = np.where(np.abs(operator) > 1e-15 * np.abs(a).max(), operator, 0)
-            known[key] = _steps(operator, di, dj)
+            known[key] = _steps(spins[i], spins[j], a, modulus)
         collect(i, j, known[key])
     for i, d in sorted(ion.items()):
-        operator = np.einsum("pxy,xab,ybc->pac", d, spins[i], spins[i])[:, :, None, :, None]
-        operator = np.where(np.abs(operator) > 1e-15 * np.abs(d).max(), operator, 0)
-        collect(i, i, _steps(operator, int(encoding.dimension[i]), 1))
+        operator = np.einsum("pxy,xab,ybc->pac", d, spins[i], spins[i])
+        tables = {}
+        for step in range(-2, 3):
+            if step if modulus == 0 else step % modulus:
+                continue
+            table = np.stack([_band(o[None], step) for o in operator])[:, 0, :, None]
+            if np.any(table):
+                tables[step, 0] = table
+        collect(i, i, tables)
 
     def column(values: list[int]) -> Ints:
         return np.array(values, dtype=np.int64)

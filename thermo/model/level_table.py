@@ -55,24 +55,52 @@ class LevelTable:
         )
 
 
+RESOLVED = ("total_spin", "magnetic_number", "parity", "none")
+
+
+def energy_scale(model: SpinModel) -> float:
+    """The largest coupling times tensor element, in the energy unit; 0 without any term."""
+    terms = [(t.coupling, t.matrix) for t in (*model.bonds, *model.ions)]
+    return max((abs(model.couplings[c]) * float(np.abs(a).max()) for c, a in terms), default=0.0)
+
+
+def _mean_square_m(table: LevelTable) -> float | None:
+    """Tr M² over the number of states, from the levels' labels; None where M is not resolved."""
+    if table.resolved == "total_spin":
+        square = table.twice_spin * (table.twice_spin + 2) / 12
+    elif table.resolved == "magnetic_number":
+        square = table.twice_m**2 / 4
+    else:
+        return None
+    return float(table.weight @ square / table.weight.sum())
+
+
 def check_levels(table: LevelTable, model: SpinModel) -> None:
-    """Hold a spectrum against Σw = Π(2S+1), Tr H and Tr H² of its model.
+    """Hold a spectrum against Σw = Π(2S+1), Tr H, Tr H² and, where M is resolved, Tr M².
 
     Raises SpectrumError on a mismatch. Cost: one pass over the levels.
     """
-    n_states, mean, mean_square = exact_traces(model)
+    unit = energy_scale(model) or 1.0
+    scaled = model.with_couplings({name: c / unit for name, c in model.couplings.items()})
+    n_states, mean, mean_square = exact_traces(scaled)
     found_states = float(table.weight.sum())
     share = table.weight / n_states
-    found_mean = float(share @ table.energy)
-    found_square = float(share @ table.energy**2)
-    scale = max(mean_square, 1e-300)
+    found_mean = float(share @ (table.energy / unit))
+    found_square = float(share @ (table.energy / unit) ** 2)
+    # Terms that cancel to rounding count as zero (symmetry/interaction.py).
+    scale = max(mean_square, 1e-20)
     faults = []
-    if abs(found_states - n_states) > TRACE_TOLERANCE * n_states:
+    square_m = _mean_square_m(table)
+    exact_m = float(np.sum(model.spins * (model.spins + 1)) / 3)
+    if square_m is not None and not abs(square_m - exact_m) <= TRACE_TOLERANCE * exact_m:
+        faults.append(f"a mean square of M of {square_m:.10g} instead of {exact_m:.10g}")
+    if not abs(found_states - n_states) <= TRACE_TOLERANCE * n_states:
         faults.append(f"{found_states:.10g} states instead of {n_states}")
-    if abs(found_mean - mean) > TRACE_TOLERANCE * scale**0.5:
-        faults.append(f"a mean energy of {found_mean:.10g} instead of {mean:.10g}")
-    if abs(found_square - mean_square) > TRACE_TOLERANCE * scale:
-        faults.append(f"a mean square of {found_square:.10g} instead of {mean_square:.10g}")
+    if not abs(found_mean - mean) <= TRACE_TOLERANCE * scale**0.5:
+        faults.append(f"a mean energy of {found_mean * unit:.10g} instead of {mean * unit:.10g}")
+    if not abs(found_square - mean_square) <= TRACE_TOLERANCE * scale:
+        found, exact = found_square**0.5 * unit, mean_square**0.5 * unit
+        faults.append(f"a root mean square energy of {found:.10g} instead of {exact:.10g}")
     if faults:
         raise SpectrumError(
             f"the levels fail their check against the model: {', '.join(faults)}; "
@@ -87,12 +115,20 @@ def table_from_dataset(levels: xr.Dataset) -> LevelTable:
         values = np.asarray(levels[name].values, dtype=np.float64)
         return np.where(np.isnan(values), -1, np.round(2 * np.nan_to_num(values))).astype(np.int64)
 
+    resolved = levels.attrs["resolved"]
+    spin, m = doubled("total_spin"), doubled("magnetic_number")
+    labelled = {"total_spin": spin, "magnetic_number": m}.get(str(resolved))
+    if str(resolved) not in RESOLVED or (labelled is not None and np.any(labelled < 0)):
+        raise FileFormatError(
+            f"the levels are said to be resolved by {str(resolved)[:40]!r} but do not carry it; "
+            "solve the model again"
+        )
     return LevelTable(
         np.asarray(levels["energy"].values, dtype=np.float64),
         np.asarray(levels["weight"].values, dtype=np.float64),
-        doubled("total_spin"),
-        doubled("magnetic_number"),
-        str(levels.attrs["resolved"]),
+        spin,
+        m,
+        str(resolved),
         int(levels.attrs["n_sites"]),
     )
 
@@ -104,7 +140,7 @@ def model_from_dataset(levels: xr.Dataset) -> SpinModel:
     try:
         model = read_model_text(str(levels.attrs["model_text"]))
         model = model.with_couplings(json.loads(str(levels.attrs["model_couplings"])))
-    except (KeyError, ValueError, PartitaError) as fault:
+    except (KeyError, ValueError, TypeError, AttributeError, PartitaError) as fault:
         raise FileFormatError(
             f"the model kept in the levels cannot be read ({fault}); solve the model again"
         ) from None
@@ -135,6 +171,16 @@ def read_checked(path: str | os.PathLike[str], kind: str | None = None) -> xr.Da
                 "the model's text and its digest disagree, so the file was changed after it was "
                 "written; solve the model again"
             )
+        for name, value in (
+            ("n_sites", len(model.sites)),
+            ("energy_unit", model.energy_unit),
+            ("ions_per_formula", model.ions_per_formula),
+        ):
+            if not np.array_equal(dataset.attrs.get(name), value):
+                raise FileFormatError(
+                    f"attribute {name} disagrees with the model kept in the file; solve the model "
+                    "again"
+                )
         check_levels(table_from_dataset(dataset), model)
     except PartitaError as fault:
         raise type(fault)(f"{os.fspath(path)}: {fault}") from None

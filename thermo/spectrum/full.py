@@ -7,6 +7,7 @@ import functools
 import json
 import os
 import platform
+import threading
 from collections.abc import Callable, Iterator, Mapping
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
@@ -17,7 +18,7 @@ from numpy.typing import NDArray
 from thermo.errors import RangeError, SpectrumError, UnavailableError
 from thermo.hilbert import blocks, encoding, operators
 from thermo.hilbert.orbits import Links, Orbits, find_images, find_links, find_orbits
-from thermo.model.level_table import LevelTable, check_levels
+from thermo.model.level_table import LevelTable, check_levels, energy_scale
 from thermo.model.spin_model import SpinModel
 from thermo.model.traces import total_matrices
 from thermo.spectrum import lapack, planning
@@ -32,6 +33,8 @@ if TYPE_CHECKING:
 ALONE_FROM = 1000
 # Λ in units of the width of the energy bounds; above ½ the windows of different S are apart.
 SHIFT = 0.6
+# Pairs with more states than this get a bound in closed form.
+LARGEST_LOCAL = 400
 
 Progress = Callable[[float, str], None]
 
@@ -82,13 +85,10 @@ class FullSolver:
                     pair[i, j] = np.concatenate([old, 2 * np.eye(3)[None]])
             ion = {k: np.concatenate([d, np.zeros((1, 3, 3))]) for k, d in ion.items()}
             n_channels += 1
-        self._moves = operators.move_tables(self._encoding, pair, ion, n_channels)
+        self._moves = operators.move_tables(
+            self._encoding, pair, ion, n_channels, self.plan.conserved.modulus
+        )
         self._structures: dict[int, _Structure] = {}
-
-    def _values(self, model: SpinModel) -> NDArray[np.float64]:
-        if self._generic:
-            return np.array([model.couplings[name] for name in self.plan.terms.names])
-        return np.ones(1)
 
     def _structure(self, magnetic: MagneticSector) -> _Structure:
         if magnetic.twice_m in self._structures:
@@ -124,8 +124,14 @@ class FullSolver:
         self, couplings: Mapping[str, float] | None = None, progress: Progress | None = None
     ) -> tuple[LevelTable, NDArray[np.int64]]:
         """The checked levels and, for each, the index of its sector in ``plan.sectors``."""
-        model = self.model.with_couplings(couplings or {})
-        values = self._values(model)
+        given = self.model.with_couplings(couplings or {})
+        # Energies in units of the largest term, so that no power of ten is too large or small.
+        unit = energy_scale(given) or 1.0
+        model = given.with_couplings({name: c / unit for name, c in given.couplings.items()})
+        if self._generic:
+            values = np.array([model.couplings[name] for name in self.plan.terms.names])
+        else:
+            values = np.array([1.0 / unit])
         low, high = energy_bounds(model)
         shift = 0.0
         if self.plan.conserved.total_spin:
@@ -145,7 +151,7 @@ class FullSolver:
                     progress(min(done / total, 1.0), text)
         table, sectors = self._collect(found, shift, low, high)
         check_levels(table, model)
-        return table, sectors
+        return table.scaled(unit), sectors
 
     def _blocks(
         self,
@@ -255,15 +261,20 @@ def _spin_by_window(
 
 
 def energy_bounds(model: SpinModel) -> tuple[float, float]:
-    """Bounds of the spectrum: the sums of every pair's and ion's own extreme eigenvalues."""
+    """Bounds of the spectrum: the sums of every pair's and ion's own extreme eigenvalues (for
+    pairs of large spins, a wider bound)."""
     pairs, ions = total_matrices(model)
     low = high = 0.0
     twice = [round(2 * s.spin) for s in model.sites]
 
     @functools.cache
     def pair_extremes(key: bytes, a: int, b: int) -> tuple[float, float]:
-        s, t = operators.spin_matrices(a), operators.spin_matrices(b)
         matrix = np.frombuffer(key).reshape(3, 3)
+        if (a + 1) * (b + 1) > LARGEST_LOCAL:
+            # |Σ_k σ_k (u_k·S)(v_k·S)| ≤ Σ_k σ_k s t over the singular values σ.
+            reach = float(np.linalg.svd(matrix, compute_uv=False).sum()) * a * b / 4
+            return -reach, reach
+        s, t = operators.spin_matrices(a), operators.spin_matrices(b)
         local = np.einsum("xy,xac,ybd->abcd", matrix, s, t).reshape((a + 1) * (b + 1), -1)
         ends = np.linalg.eigvalsh(local)
         return float(ends[0]), float(ends[-1])
@@ -282,9 +293,10 @@ def thread_count() -> int:
     """Threads to use: PARTITA_THREADS, else the cores this process may run on."""
     text = os.environ.get("PARTITA_THREADS", "")
     if text:
-        if not text.isdigit() or int(text) == 0:
+        if not (text.isascii() and text.isdecimal() and len(text) <= 4 and int(text) > 0):
             raise RangeError(
-                f"PARTITA_THREADS is {text!r}, not a number of threads; set a whole number above 0"
+                f"PARTITA_THREADS is {text[:40]!r}, not a number of threads; set a whole number "
+                "from 1 to 9999"
             )
         return int(text)
     if hasattr(os, "sched_getaffinity"):
@@ -300,11 +312,27 @@ def _thread_pools() -> Any:
     return threadpoolctl.ThreadpoolController()
 
 
+_blas_lock = threading.Lock()
+_blas_users: list[Any] = []
+
+
 @contextlib.contextmanager
 def blas_threads(count: int) -> Iterator[None]:
-    """Limit every BLAS of this process to ``count`` threads for a while."""
-    with _thread_pools().limit(limits=count, user_api="blas"):
+    """Limit every BLAS of this process to ``count`` threads for a while.
+
+    The limit is the process's, so of concurrent users the last to come sets it and the last to
+    leave puts back what the first found.
+    """
+    with _blas_lock:
+        limiter = _thread_pools().limit(limits=count, user_api="blas")
+        _blas_users.append(_blas_users[0] if _blas_users else limiter)
+    try:
         yield
+    finally:
+        with _blas_lock:
+            first = _blas_users.pop()
+            if not _blas_users:
+                first.restore_original_limits()
 
 
 def solve_full(

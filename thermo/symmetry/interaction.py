@@ -24,7 +24,7 @@ class Interaction:
     ``pair[(i, j)]`` with i < j has shape (P, 3, 3) and stands for Σ_p c_p S_iᵀ A_p S_j;
     ``ion[i]`` likewise for c_p S_iᵀ D_p S_i. With ``generic`` channels there is one channel
     per named coupling (symmetric for *every* value of the couplings); otherwise P = 1 and the
-    couplings' values are summed in. ``scale`` holds each channel's largest element.
+    couplings' values are summed in. ``scale`` holds each channel's largest term.
     """
 
     twice_spin: NDArray[np.int64]
@@ -59,20 +59,24 @@ def interaction(model: SpinModel, generic: bool = False) -> Interaction:
     n_channels = len(names)
     pair: dict[tuple[int, int], NDArray[np.float64]] = {}
     ion: dict[int, NDArray[np.float64]] = {}
+    largest = np.zeros(n_channels)
     for bond in model.bonds:
+        p = index[bond.coupling]
+        largest[p] = max(largest[p], np.abs(bond.matrix).max())
         ordered = (bond.i, bond.j) if bond.i < bond.j else (bond.j, bond.i)
         matrix = bond.matrix if bond.i < bond.j else bond.matrix.T
         pair.setdefault(ordered, np.zeros((n_channels, 3, 3)))[index[bond.coupling]] += matrix
     for term in model.ions:
+        p = index[term.coupling]
+        largest[p] = max(largest[p], np.abs(term.matrix).max())
         ion.setdefault(term.site, np.zeros((n_channels, 3, 3)))[index[term.coupling]] += term.matrix
     if not generic:
         values = np.array([model.couplings[name] for name in names])
         pair = {key: np.tensordot(values, a, 1)[None] for key, a in pair.items()}
         ion = {key: np.tensordot(values, a, 1)[None] for key, a in ion.items()}
-        n_channels = 1
-    scale = np.zeros(n_channels)
-    for a in (*pair.values(), *ion.values()):
-        scale = np.maximum(scale, np.abs(a).reshape(n_channels, -1).max(axis=1))
+        # Terms may cancel; what is zero to rounding is judged by what went into the sums.
+        largest = np.array([np.max(np.abs(values) * largest, initial=0.0)])
+    scale = largest
     found = Interaction(
         twice_spin=np.array([round(2 * s.spin) for s in model.sites], dtype=np.int64),
         pair=pair,
