@@ -95,9 +95,15 @@ def levels(n_sites: int = 8, resolved: str = "total_spin") -> xr.Dataset:
 
 
 def fit(
-    smooth: bool = True, uncertainties: bool = True, several_fields: bool = False
+    smooth: bool = True,
+    uncertainties: bool = True,
+    several_fields: bool = False,
+    scatter: bool = False,
 ) -> xr.Dataset:
-    """An invented fit: χ(T) in emu/mol and C(T) in J/(mol K), with noise."""
+    """An invented fit: χ(T) in emu/mol and C(T) in J/(mol K), with noise.
+
+    ``scatter``: no uncertainties were stated and those of the points are the residuals'.
+    """
     random = np.random.default_rng(3)
     t1, t2 = np.linspace(2, 300, 60), np.geomspace(2, 60, 35)
     b1 = np.array([0.1, 15.0, 30.0]) if several_fields else np.array([0.1])
@@ -132,6 +138,7 @@ def fit(
         "dataset_name": ["chi", "heat"],
         "dataset_quantity": ["susceptibility", "specific_heat"],
         "dataset_units": ["emu/mol", "J/(mol K)"],
+        "dataset_per": ["ion", "ion"],
         "dataset_chi_square": [61.0, 33.0],
         "chi_square": 94.0,
         "reduced_chi_square": 1.02,
@@ -149,4 +156,7 @@ def fit(
             "curve_predicted": np.concatenate([f1.T.ravel(), f2.ravel()]),
             "curve_dataset": np.repeat([0] * b1.size + [1], fine.size),
         }
-    return variables.build_fit(arrays, {"energy_unit": "K", "title": "made-up"})
+    attrs = {"energy_unit": "K", "title": "made-up"}
+    if scatter:
+        attrs["error_basis"] = "scatter"
+    return variables.build_fit(arrays, attrs)

@@ -15,18 +15,26 @@ from rich.console import Console
 
 import tests.report_samples as samples
 from thermo import units, variables
-from thermo.errors import FileFormatError, UnavailableError, UnitsError
+from thermo.errors import FileFormatError, RangeError, UnavailableError, UnitsError
 from thermo.report import export_csv, plot, print_curves, print_fit, print_plan
-from thermo.report.numbers import duration, grouped, plain, size, with_uncertainty
-from thermo.report.quantities import axis_label, power_of_thousand, pretty_unit, quantity
+from thermo.report.numbers import duration, grouped, plain, size, typeset, with_uncertainty
+from thermo.report.quantities import (
+    axis_label,
+    per_note,
+    power_of_thousand,
+    pretty_unit,
+    quantity,
+)
+from thermo.report.style import wants_log
 
 TEMPERATURE = np.geomspace(2, 100, 12)
 FIELD = np.array([0.0, 10.0, 20.0])
 
 
-def printed(show: Any, subject: Any, width: int = 100) -> str:
+def printed(show: Any, subject: Any, width: int = 100, window: bool = False) -> str:
+    """What is printed to a file, or to a colourless window."""
     stream = io.StringIO()
-    show(subject, Console(file=stream, width=width))
+    show(subject, Console(file=stream, width=width, force_terminal=window, color_system=None))
     return stream.getvalue()
 
 
@@ -64,13 +72,31 @@ def test_value_with_its_uncertainty(value: float, error: float, text: str) -> No
 
 def test_sizes_durations_and_counts() -> None:
     assert [size(n) for n in (0, 1023, 1536, 38 * 2**30)] == ["0 B", "1023 B", "1.5 KiB", "38 GiB"]
-    assert [duration(s) for s in (0.01, 12.3, 118, 7300, 3e5, 1e9, float("inf"))] == [
-        "under 1 s", "about 12 s", "about 2.0 min", "about 2.0 h", "about 3 days",
-        "about 32 years", "unknown",
+    assert [size(n) for n in (2.0**59, 2.0**60, 7e31)] == [
+        "512 PiB", "far beyond any machine", "far beyond any machine",
     ]  # fmt: skip
+    assert [duration(s) for s in (0.01, 12.3, 118, 7300, 3e5, 1e9, 3e10, 4e10, 2e37)] == [
+        "under 1 s", "about 12 s", "about 2.0 min", "about 2.0 h", "about 3 days",
+        "about 32 years", "about 951 years", "over 1000 years", "over 1000 years",
+    ]  # fmt: skip
+    assert duration(float("inf")) == "unknown"
     assert grouped(1048576) == "1\u202f048\u202f576"
     assert grouped(2**80) == "1.209×10²⁴"
     assert plain(0.25) == "0.25"
+
+
+@pytest.mark.parametrize(
+    ("text", "shown"),
+    [
+        ("-42.00(16) cm-1", "−42.00(16) cm⁻¹"),
+        ("-5.60(69)×10⁻⁵ emu/mol ion", "−5.60(69)×10⁻⁵ emu/mol ion"),
+        ("1.5(2) m3 K/mol", "1.5(2) m³ K/mol"),
+        ("2.1(1) mJ/(mol K2)", "2.1(1) mJ/(mol K²)"),
+        ("0.1 muB", "0.1 μ_B"),
+    ],
+)
+def test_numbers_and_units_as_text_sets_them(text: str, shown: str) -> None:
+    assert typeset(text) == shown
 
 
 def test_units_and_labels() -> None:
@@ -112,6 +138,8 @@ PICTURES: dict[str, Any] = {
     "levels unresolved": lambda: samples.levels(5, "none"),
     "fit": samples.fit,
     "fit without uncertainties": lambda: samples.fit(smooth=False, uncertainties=False),
+    "fit by the scatter": lambda: samples.fit(scatter=True),
+    "along z": lambda: samples.curves(TEMPERATURE, FIELD).assign_attrs(field_direction="z"),
     "fit in several fields": lambda: samples.fit(several_fields=True),
 }
 MAGIC = {".png": b"\x89PNG", ".svg": b"<?xml", ".pdf": b"%PDF"}
@@ -187,28 +215,64 @@ def test_curves_as_csv() -> None:
     curves = samples.curves(TEMPERATURE, FIELD, errors=True)
     rows = table(curves)
     assert len(rows) == 36
-    assert list(rows[0])[:3] == ["temperature (K)", "field (T)", "internal_energy (J mol-1)"]
-    assert "susceptibility_standard_error (m3 mol-1)" in rows[0]
+    assert list(rows[0])[:3] == [
+        "temperature (K)", "field (T)", "internal_energy (J mol-1) per mole of ions",
+    ]  # fmt: skip
+    names = [name.split(" ")[0] for name in rows[0]]
+    start = names.index("susceptibility")
+    assert names[start : start + 4] == [
+        "susceptibility", "susceptibility_standard_error", "chi_T", "chi_T_standard_error",
+    ]  # fmt: skip
+    assert "susceptibility_standard_error (m3 mol-1) per mole of ions" in rows[0]
     # the first field's whole curve, then the next
     assert [float(r["field (T)"]) for r in rows] == list(np.repeat(FIELD, 12))
     np.testing.assert_allclose(
-        [float(r["specific_heat (J mol-1 K-1)"]) for r in rows],
+        [float(r["specific_heat (J mol-1 K-1) per mole of ions"]) for r in rows],
         curves["specific_heat"].values.T.ravel(),
-        rtol=1e-9,
+        rtol=5e-7,  # seven digits
+    )
+    np.testing.assert_allclose(
+        [float(r["chi_T (m3 K mol-1) per mole of ions"]) for r in rows],
+        (curves["susceptibility"] * curves["temperature"]).values.T.ravel(),
+        rtol=5e-7,
     )
     assert all(len(cell) < 20 for row in rows for cell in row.values())
+
+
+def test_chosen_columns_as_csv() -> None:
+    curves = samples.curves(TEMPERATURE, FIELD)
+    axes = ["temperature (K)", "field (T)"]
+    heat, chi_t = "specific_heat (J mol-1 K-1)", "chi_T (emu K mol-1)"
+    rows = table(curves, what="specific_heat, chi_T", units_system="molar-cgs")
+    assert list(rows[0]) == [*axes, f"{heat} per mole of ions", f"{chi_t} per mole of ions"]
+    assert rows == table(curves, what=["specific_heat", "chi_T"], units_system="molar-cgs")
+    with pytest.raises(UnavailableError, match=r"'points' is no quantity of curves; choose from"):
+        table(curves, what="points")
+    with pytest.raises(UnavailableError, match="the model does not conserve M"):
+        table(PICTURES["no moment"](), what="chi_T")
+
+
+def test_tails_are_no_data_in_a_csv() -> None:
+    heat = np.array([[8.8e-90], [-1e-45], [1e-12], [2.0], [np.nan]])
+    curves = samples.curves(np.arange(1.0, 6.0), FIELD[:1])
+    curves["specific_heat"].values[:] = heat
+    rows = table(curves, what="specific_heat")
+    assert [list(row.values())[-1] for row in rows] == ["0", "0", "1e-12", "2", ""]
 
 
 def test_curves_as_csv_in_other_units() -> None:
     rows = table(samples.curves(TEMPERATURE, FIELD), units_system="molar-cgs")
     si = table(samples.curves(TEMPERATURE, FIELD))
-    ratio = float(si[5]["susceptibility (m3 mol-1)"]) / float(rows[5]["susceptibility (emu mol-1)"])
-    assert ratio == pytest.approx(4e-6 * np.pi, rel=1e-8)
-    assert "magnetization (emu mol-1)" in rows[0]
+    before = float(si[5]["susceptibility (m3 mol-1) per mole of ions"])
+    after = float(rows[5]["susceptibility (emu mol-1) per mole of ions"])
+    assert before / after == pytest.approx(4e-6 * np.pi, rel=1e-6)  # two roundings to 7 digits
+    assert "magnetization (emu mol-1) per mole of ions" in rows[0]
+    formula = samples.curves(TEMPERATURE, FIELD).assign_attrs(per="formula")
+    assert "entropy (J mol-1 K-1) per mole of formula units" in table(formula)[0]
     with pytest.raises(UnitsError, match="cannot become molar-si"):
         table(samples.reduced_curves(), units_system="molar-si")
-    assert "entropy (kB)" in table(samples.reduced_curves("K"))[0]
-    assert "temperature" in table(samples.reduced_curves("1"))[0]
+    assert "entropy (kB) per site" in table(samples.reduced_curves("K"))[0]
+    assert list(table(samples.reduced_curves("1"))[0])[::3] == ["temperature", "entropy per site"]
 
 
 def test_levels_as_csv(tmp_path: Path) -> None:
@@ -217,7 +281,10 @@ def test_levels_as_csv(tmp_path: Path) -> None:
     with (tmp_path / "l.csv").open(newline="") as stream:
         rows = list(csv.DictReader(stream))
     assert len(rows) == 32
-    assert rows[0]["total_spin"] == ""
+    assert list(rows[0]) == ["energy (K)", "weight", "magnetic_number", "block"]
+    assert "" not in rows[0].values()
+    assert list(table(samples.levels(4, "none"))[0]) == ["energy (K)", "weight", "block"]
+    assert "total_spin" in table(samples.levels(4))[0]
     np.testing.assert_allclose(
         [float(r["energy (K)"]) for r in rows], levels["energy"], rtol=1e-12, atol=1e-12
     )
@@ -232,6 +299,9 @@ def test_fit_as_csv() -> None:
     assert len(points) == 95
     assert points[0]["dataset"] == "chi"
     assert points[-1]["units of the values"] == "J/(mol K)"
+    assert {p["per"] for p in points} == {"ion"}
+    assert {p["per"] for p in table(fit.drop_vars("dataset_per"))} == {""}
+    assert "uncertainty (from the scatter)" in table(samples.fit(scatter=True))[0]
     assert float(points[3]["observed"]) == pytest.approx(float(fit["observed"][3]), rel=1e-9)
     parameters = table(fit, what="parameters")
     assert [p["parameter"] for p in parameters] == ["J_leg", "g", "chi0", "rho", "J_rung"]
@@ -310,7 +380,133 @@ def test_tables_fit_a_narrow_window() -> None:
         (print_fit, samples.fit()),
         (print_curves, samples.curves(TEMPERATURE, FIELD)),
     ):
-        assert max(map(len, printed(show, subject, width=60).splitlines())) <= 60
+        text = printed(show, subject, width=60, window=True)
+        assert max(map(len, text.splitlines())) <= 60
+        assert "40.12(35)" in text or show is not print_fit  # numbers are not cut in two
+
+
+def test_tables_in_a_file() -> None:
+    note = "a bond meets its own image, " * 8 + "so the physics differs"
+    for show, subject in (
+        (print_plan, made_up_plan(notes=(note,))),
+        (print_fit, samples.fit()),
+        (print_curves, samples.curves(TEMPERATURE, FIELD)),
+    ):
+        lines = printed(show, subject, width=60).splitlines()
+        assert lines
+        assert [line for line in lines if line != line.rstrip()] == []
+        assert show is not print_plan or lines[-1] == f"Note: {note}"
+
+
+def test_plan_far_beyond_any_machine() -> None:
+    plan = made_up_plan(method="none", memory_bytes=7e31, seconds=2.4e37, n_states=2**60)
+    text = printed(print_plan, plan)
+    assert "far beyond any machine; 4.0 GiB allowed" in text
+    assert "over 1000 years" in text
+    assert "1.153×10¹⁸" in text
+    assert "none: too large for full spectra" in text
+    assert "e+" not in text
+
+
+def test_fit_by_the_scatter_tells_no_chi_square() -> None:
+    fit = samples.fit(scatter=True)
+    text = printed(print_fit, fit)
+    assert "χ²" not in text
+    assert "converged after 14 evaluations" in text
+    these = fit["point_dataset"].values == 0
+    residual, observed = fit["residual"].values[these], fit["observed"].values[these]
+    share = 100 * np.sqrt(np.mean(residual**2)) / np.mean(np.abs(observed))
+    assert f"{share:.2g} % of the mean" in text
+
+
+def test_bound_is_told_once() -> None:
+    fit = samples.fit()
+    fit["at_bound"].values[0] = -1
+    told = fit.assign_attrs(cautions="J_leg sits at its lower bound 0: it has no standard error")
+    assert "At a bound" in printed(print_fit, fit)
+    assert "At a bound" not in printed(print_fit, told)
+
+
+def test_footers() -> None:
+    from thermo.report.fit_picture import per_what, summary
+
+    fit = samples.fit()
+    fit["value"].values[0] = -42.0
+    fit["parameter_units"].values[0] = "cm-1"
+    first, *_ = summary(fit).split(";  ")
+    assert first == "J_leg\u00a0=\u00a0−42.00(35)\u00a0cm⁻¹"
+    assert per_what(fit, [0, 1]) == "per mole of ions"
+    fit["dataset_per"].values[1] = "formula"
+    assert per_what(fit, [0, 1]) == "chi per mole of ions;  heat per mole of formula units"
+    assert per_what(fit, [1]) == "per mole of formula units"
+    fit["dataset_units"].values[0] = "muB"
+    assert per_what(fit, [0]) == "per ion"
+    assert per_what(fit.drop_vars("dataset_per"), [0, 1]) == ""
+    curves = samples.curves(TEMPERATURE, FIELD)
+    assert per_note(curves.attrs) == "per mole of ions"
+    assert per_note(curves.attrs | {"field_direction": "z"}) == "per mole of ions, B ∥ z"
+    assert per_note(curves.attrs | {"field_direction": "any"}) == "per mole of ions"
+    assert per_note(samples.reduced_curves("K").attrs) == "per site"
+
+
+def test_direction_of_the_field_is_printed() -> None:
+    curves = samples.curves(TEMPERATURE, FIELD)
+    assert "∥" not in printed(print_curves, curves)
+    assert "B ∥ z" in printed(print_curves, curves.assign_attrs(field_direction="z"))
+
+
+@pytest.mark.parametrize(
+    ("values", "scale", "logarithmic"),
+    [
+        (np.linspace(1, 300, 150), None, False),
+        (np.geomspace(1, 300, 150), None, True),
+        (np.geomspace(10, 50, 30), None, True),
+        (np.geomspace(10, 12, 30), None, False),
+        ([1.0, 2.0, 5.0, 10.0, 300.0], None, True),
+        ([10.0, 20.0, 50.0], None, False),
+        (np.linspace(1, 300, 150), "log", True),
+        (np.geomspace(1, 300, 150), "linear", False),
+        (np.linspace(0, 300, 150), "log", False),
+        ([2.0], "log", False),
+    ],
+)
+def test_scale_of_the_temperature_axis(values: Any, scale: str | None, logarithmic: bool) -> None:
+    assert wants_log(values, scale) is logarithmic
+
+
+def test_scale_of_a_picture(tmp_path: Path) -> None:
+    curves = samples.curves(TEMPERATURE, FIELD[:1])
+    plot(curves, tmp_path / "a.svg", what="entropy")
+    plot(curves, tmp_path / "b.svg", what="entropy", scale="log")
+    plot(curves, tmp_path / "c.svg", what="entropy", scale="linear")
+    a, b, c = ((tmp_path / f"{name}.svg").read_bytes() for name in "abc")
+    assert a == b != c
+    plot(samples.fit(), tmp_path / "fit.svg", scale="linear")
+    with pytest.raises(RangeError, match="'cubic' is unknown; use linear or log"):
+        plot(curves, tmp_path / "d.svg", scale="cubic")
+    with pytest.raises(UnavailableError, match="no temperature axis"):
+        plot(samples.levels(4), tmp_path / "e.svg", scale="log")
+
+
+def test_magnetization_in_bohr_magnetons_on_the_right(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    from thermo.report import style
+
+    seen: list[Any] = []
+    monkeypatch.setattr(style, "save", lambda figure, _: seen.append(figure))
+    for system in ("molar-si", "molar-cgs"):
+        plot(samples.curves(TEMPERATURE, FIELD), tmp_path / "m.png", "magnetization", system)
+        axes = seen[-1].axes[0]
+        seen[-1].draw_without_rendering()
+        (right,) = axes.child_axes
+        assert "per ion" in right.get_ylabel()
+        power = 1000 if r"10^{3}" in axes.get_ylabel() else 1
+        one = units.quantity_factor("magnetization", "muB") / (
+            1 if system == "molar-si" else units.MOMENT_SI_PER_EMU
+        )
+        ratio = right.get_ylim()[1] / axes.get_ylim()[1]
+        assert ratio == pytest.approx(power / one, rel=1e-9)
 
 
 def test_curves_table_tells_the_maxima() -> None:

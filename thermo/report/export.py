@@ -1,21 +1,23 @@
-"""Tables as plain CSV: one header row with units, then numbers."""
+"""Tables as plain CSV: one header row with units and per what they are, then numbers."""
 
 from __future__ import annotations
 
 import csv
 import os
-from collections.abc import Iterable, Iterator, Sequence
+from collections.abc import Callable, Iterable, Iterator, Sequence
 from typing import Any, TextIO
 
 import numpy as np
 import xarray as xr
 
 from thermo.errors import FileFormatError, UnavailableError, UnitsError
-from thermo.report.quantities import unit_of
+from thermo.report.quantities import by_scatter, dataset_per, names, quantity, share, unit_of
 from thermo.storage import atomic_path
 from thermo.variables import ERROR_SUFFIX, convert_curves, lookup
 
-_CURVE_DIGITS = 10
+_AXIS_DIGITS = 10  # a grid's own points, which must stay apart
+_CURVE_DIGITS = 7
+_NOTHING = 1e-30  # of a column's largest value: tails of exp(-E/T), which only look like data
 _LEVEL_DIGITS = 13  # gaps between levels are what matters, and they may be small
 
 Table = tuple[list[str], Iterator[Sequence[str]]]
@@ -25,13 +27,17 @@ def export_csv(
     dataset: xr.Dataset,
     target: str | os.PathLike[str] | TextIO,
     units_system: str | None = None,
-    what: str | None = None,
+    what: str | Sequence[str] | None = None,
 ) -> None:
     """Write a curves, levels or fit dataset as CSV to a path (whole or not at all) or a stream.
 
-    Curves: one row for each temperature and field; ``units_system`` converts molar ones to
-    "molar-si" or "molar-cgs". Levels: one row each. A fit: ``what`` is "points" (the default:
-    data, prediction and residual of each) or "parameters". A missing value is an empty cell.
+    Curves: one row for each temperature and field, values to 7 significant digits (the file
+    holds all) and 0 below 10⁻³⁰ of their column's largest; ``units_system`` converts molar ones
+    to "molar-si" or "molar-cgs", and ``what`` chooses columns by name (a list, or names with
+    commas: "specific_heat,chi_T"), by default all stored ones and chi_T. Levels: energy, weight
+    (number of states), S or M where resolved, and block, one row each. A fit: ``what`` is
+    "points" (the default: data, prediction and residual of each) or "parameters". A missing
+    value is an empty cell. Raises FileFormatError, UnavailableError or UnitsError.
     """
     header, rows = _table(dataset, units_system, what)
     if isinstance(target, str | os.PathLike):
@@ -50,26 +56,29 @@ def _write(stream: TextIO, header: list[str], rows: Iterable[Sequence[str]]) -> 
     writer.writerows(rows)
 
 
-def _table(dataset: xr.Dataset, units_system: str | None, what: str | None) -> Table:
+def _table(
+    dataset: xr.Dataset, units_system: str | None, what: str | Sequence[str] | None
+) -> Table:
     kind = str(dataset.attrs.get("content"))
-    tables = {"curves": ["curves"], "levels": ["levels"], "fit": ["points", "parameters"]}
-    if kind not in tables:
-        raise FileFormatError("only levels, curves and fit datasets can be exported")
-    chosen = what or tables[kind][0]
-    if chosen not in tables[kind]:
-        raise UnavailableError(
-            f"a {kind} file has no table {chosen!r}; choose from {', '.join(tables[kind])}"
-        )
+    chosen = names(what)
     if kind == "curves":
         if units_system is not None:
             dataset = convert_curves(dataset, units_system)
-        return _curves(dataset)
+        return _curves(dataset, chosen)
+    tables = _TABLES.get(kind)
+    if tables is None:
+        raise FileFormatError("only levels, curves and fit datasets can be exported")
     if units_system is not None:
         raise UnitsError(f"a {kind} file is exported in its own units; leave the units out")
-    return {"levels": _levels, "points": _points, "parameters": _parameters}[chosen](dataset)
+    name = ",".join(chosen) or next(iter(tables))
+    if name not in tables:
+        raise UnavailableError(
+            f"a {kind} file has no table {name!r}; choose from {', '.join(tables)}"
+        )
+    return tables[name](dataset)
 
 
-def _number(value: float, digits: int = _CURVE_DIGITS) -> str:
+def _number(value: float, digits: int = _AXIS_DIGITS) -> str:
     return "" if np.isnan(value) else f"{value:.{digits}g}"
 
 
@@ -77,29 +86,51 @@ def _head(name: str, unit: str | None) -> str:
     return name if unit in (None, "1") else f"{name} ({unit})"
 
 
-def _curves(curves: xr.Dataset) -> Table:
-    names = [
+def _curves(curves: xr.Dataset, chosen: list[str]) -> Table:
+    stored = [
         str(n) for n in curves.data_vars if (v := lookup("curves", str(n))) and len(v.dims) == 2
     ]
+    if not chosen:
+        chosen = [n for n in stored if not n.endswith(ERROR_SUFFIX)]
+        if "susceptibility" in chosen:
+            chosen.insert(chosen.index("susceptibility") + 1, "chi_T")
     header = [_head(n, unit_of(curves, n)) for n in ("temperature", "field")]
-    header += [_head(n, unit_of(curves, n.removesuffix(ERROR_SUFFIX))) for n in names]
+    per = share(curves.attrs)
+    columns = []
+    for name in chosen:
+        item = quantity(curves, name)
+        header.append(f"{_head(name, item.unit)} {per}")
+        columns.append(_without_tails(item.values))
+        if item.error is not None:
+            header.append(f"{_head(name + ERROR_SUFFIX, item.unit)} {per}")
+            columns.append(item.error)
     temperature, field = curves["temperature"].values, curves["field"].values
-    columns = [curves[n].values for n in names]
 
     def rows() -> Iterator[list[str]]:
         # All temperatures of one field together: each block is one curve to plot.
         for j, b in enumerate(field):
             for i, t in enumerate(temperature):
-                yield [_number(t), _number(b), *(_number(c[i, j]) for c in columns)]
+                point = [_number(v, _AXIS_DIGITS) for v in (t, b)]
+                yield [*point, *(_number(c[i, j], _CURVE_DIGITS) for c in columns)]
 
     return header, rows()
 
 
+def _without_tails(values: Any) -> Any:
+    finite = np.abs(values[np.isfinite(values)])
+    smallest = _NOTHING * finite.max() if finite.size else 0.0
+    return np.where(np.abs(values) < smallest, 0.0, values)
+
+
 def _levels(levels: xr.Dataset) -> Table:
-    unit = str(levels.attrs["energy_unit"])
-    names = ("energy", "weight", "total_spin", "magnetic_number", "vector", "sector")
-    header = [_head(n, unit if n == "energy" else None) for n in names]
-    columns = [levels[n].values for n in names]
+    resolved = str(levels.attrs["resolved"])
+    header = [_head("energy", str(levels.attrs["energy_unit"])), "weight"]
+    columns = [levels["energy"].values, levels["weight"].values]
+    if resolved in ("total_spin", "magnetic_number"):
+        header.append(resolved)
+        columns.append(levels[resolved].values)
+    header.append("block")
+    columns.append(levels["sector"].values)
     return header, (
         [_number(v, _LEVEL_DIGITS) if v.dtype.kind == "f" else str(v) for v in row]
         for row in zip(*columns, strict=True)
@@ -108,9 +139,12 @@ def _levels(levels: xr.Dataset) -> Table:
 
 def _points(fit: xr.Dataset) -> Table:
     numbers = ("temperature", "field", "observed", "uncertainty", "predicted", "residual")
-    header = ["dataset", "quantity", "units of the values"]
+    header = ["dataset", "quantity", "units of the values", "per"]
     header += [_head(n, fit[n].attrs.get("units")) for n in numbers]
-    texts = [fit[f"dataset_{n}"].values for n in ("name", "quantity", "units")]
+    if by_scatter(fit):
+        header[header.index("uncertainty")] = "uncertainty (from the scatter)"
+    texts: list[Any] = [fit[f"dataset_{n}"].values for n in ("name", "quantity", "units")]
+    texts.append([dataset_per(fit, d) for d in range(fit.sizes["dataset"])])
     columns = [fit[n].values for n in numbers]
     return header, (
         [*(str(text[d]) for text in texts), *(_number(c[i]) for c in columns)]
@@ -134,6 +168,12 @@ def _parameters(fit: xr.Dataset) -> Table:
             ]
 
     return header, rows()
+
+
+_TABLES: dict[str, dict[str, Callable[[xr.Dataset], Table]]] = {
+    "levels": {"levels": _levels},
+    "fit": {"points": _points, "parameters": _parameters},
+}
 
 
 def flag_word(flags: xr.DataArray, index: int) -> str:

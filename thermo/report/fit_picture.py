@@ -11,12 +11,20 @@ from matplotlib.axes import Axes
 
 from thermo.errors import UnavailableError
 from thermo.report import style
-from thermo.report.numbers import plain, with_uncertainty
-from thermo.report.quantities import SYMBOLS, axis_label, power_of_thousand
+from thermo.report.numbers import plain, typeset, with_uncertainty
+from thermo.report.quantities import (
+    SYMBOLS,
+    axis_label,
+    by_scatter,
+    dataset_share,
+    power_of_thousand,
+)
+
+_NO_BREAK = "\u00a0"
 
 
-def draw_fit(fit: xr.Dataset, chosen: list[str]) -> Any:
-    """A figure of the data sets named in ``chosen``, or of all."""
+def draw_fit(fit: xr.Dataset, chosen: list[str], scale: str | None = None) -> Any:
+    """A figure of the data sets named in ``chosen``, or of all; ``scale`` as for ``plot``."""
     names = [str(name) for name in fit["dataset_name"].values]
     for name in chosen:
         if name not in names:
@@ -33,30 +41,52 @@ def draw_fit(fit: xr.Dataset, chosen: list[str]) -> Any:
         inner = outer[divmod(place, columns)].subgridspec(2, 1, height_ratios=(3, 1), hspace=0)
         upper = figure.add_subplot(inner[0])
         lower = figure.add_subplot(inner[1], sharex=upper)
-        _draw_dataset(upper, lower, fit, index, names[index].replace("$", r"\$"))
+        _draw_dataset(upper, lower, fit, index, names[index].replace("$", r"\$"), scale)
+    lines = textwrap.wrap(
+        summary(fit), width=70 if columns == 1 else 150,
+        break_long_words=False, break_on_hyphens=False,
+    )  # fmt: skip
     figure.supxlabel(
-        textwrap.fill(summary(fit).replace("$", r"\$"), width=70 if columns == 1 else 150),
+        "\n".join([*lines, per_what(fit, picked)]).strip().replace("$", r"\$"),
         fontsize=6.5, color=style.GREY, x=0.99, ha="right",
     )  # fmt: skip
     return figure
 
 
 def summary(fit: xr.Dataset) -> str:
-    """The parameters in concise notation and the reduced chi square, in one line."""
+    """The parameters in concise notation and the reduced chi square, for a footer.
+
+    Blanks inside an entry are no-break ones.
+    """
     parts = []
     for n, name in enumerate(fit["parameter_name"].values):
         unit = str(fit["parameter_units"].values[n])
         text = with_uncertainty(float(fit["value"][n]), float(fit["standard_error"][n]))
+        text = typeset(text if unit == "1" else f"{text} {unit}")
         at_bound = " (at its bound)" if int(fit["at_bound"][n]) else ""
         fixed = " (fixed)" if int(fit["parameter_role"][n]) == 0 else ""
-        parts.append(f"{name} = {text}{'' if unit == '1' else ' ' + unit}{at_bound}{fixed}")
+        parts.append(f"{name} = {text}{at_bound}{fixed}")
     reduced = float(fit["reduced_chi_square"])
-    if np.isfinite(reduced):
+    if np.isfinite(reduced) and not by_scatter(fit):
         parts.append(f"χ²/ν = {plain(reduced, 3)}")
-    return ";  ".join(parts) + ("" if int(fit["converged"]) else ";  NOT CONVERGED")
+    if not int(fit["converged"]):
+        parts.append("NOT CONVERGED")
+    return ";  ".join(part.replace(" ", _NO_BREAK) for part in parts)
 
 
-def _draw_dataset(upper: Axes, lower: Axes, fit: xr.Dataset, index: int, name: str) -> None:
+def per_what(fit: xr.Dataset, picked: list[int]) -> str:
+    """Per what the data sets drawn are counted: once where it is the same for all."""
+    shares = {n: dataset_share(fit, n) for n in picked}
+    if len(set(shares.values())) == 1:
+        return shares[picked[0]]
+    return ";  ".join(
+        f"{fit['dataset_name'].values[n]} {share}" for n, share in shares.items() if share
+    )
+
+
+def _draw_dataset(
+    upper: Axes, lower: Axes, fit: xr.Dataset, index: int, name: str, scaling: str | None
+) -> None:
     mine = np.flatnonzero(fit["point_dataset"].values == index)
     column = {
         key: fit[key].values[mine]
@@ -68,7 +98,8 @@ def _draw_dataset(upper: Axes, lower: Axes, fit: xr.Dataset, index: int, name: s
     scale = 10.0**power
     x = column[over]
     sigma = column["uncertainty"]
-    weighted = bool(np.all(np.isfinite(sigma)) and np.all(sigma > 0))
+    # Uncertainties that come from the residuals themselves are no measure for these.
+    weighted = not by_scatter(fit) and bool(np.all(np.isfinite(sigma)) and np.all(sigma > 0))
     shades = style.Shades(
         np.unique(column[other]), SYMBOLS[other], str(fit[other].attrs.get("units", "1"))
     )
@@ -108,7 +139,7 @@ def _draw_dataset(upper: Axes, lower: Axes, fit: xr.Dataset, index: int, name: s
     lower.set_xlabel(axis_label(SYMBOLS[over], str(fit[over].attrs.get("units", "1"))))
     low, high = float(x.min()), float(x.max())
     margin = 0.03 * (high - low) or 1.0
-    if style.spans_decades(x):
+    if over == "temperature" and style.wants_log(np.unique(x), scaling):
         upper.set_xlim(low / 1.1, high * 1.1)
         style.log_axis(upper)
         upper.tick_params(labelbottom=False)

@@ -3,10 +3,11 @@
 from __future__ import annotations
 
 import math
+import re
 
-from thermo.numbers import plain, with_uncertainty
+from thermo.numbers import SUPERSCRIPTS, plain, with_uncertainty
 
-__all__ = ["duration", "grouped", "plain", "size", "with_uncertainty"]
+__all__ = ["duration", "grouped", "plain", "size", "typeset", "with_uncertainty"]
 
 
 def grouped(count: float) -> str:
@@ -17,13 +18,13 @@ def grouped(count: float) -> str:
 
 
 def size(n_bytes: float) -> str:
-    """Bytes in binary units: 512 B, 3.2 MiB, 38 GiB."""
+    """Bytes in binary units: 512 B, 3.2 MiB, 38 GiB; in words where no machine has as much."""
     amount = float(n_bytes)
-    for unit in ("B", "KiB", "MiB", "GiB", "TiB"):
+    for unit in ("B", "KiB", "MiB", "GiB", "TiB", "PiB"):
         if abs(amount) < 1024:
             return f"{amount:.0f} {unit}" if unit == "B" or amount >= 10 else f"{amount:.1f} {unit}"
         amount /= 1024
-    return f"{amount:.3g} PiB"
+    return "far beyond any machine"
 
 
 def duration(seconds: float) -> str:
@@ -32,6 +33,9 @@ def duration(seconds: float) -> str:
         return "unknown"
     if seconds < 1:
         return "under 1 s"
+    years = seconds / (365.25 * 86400)
+    if years > 1000:
+        return "over 1000 years"
     for limit, step, unit in (
         (90, 1, "s"),
         (90 * 60, 60, "min"),
@@ -41,4 +45,10 @@ def duration(seconds: float) -> str:
         if seconds < limit:
             amount = seconds / step
             return f"about {amount:.1f} {unit}" if amount < 3 else f"about {amount:.0f} {unit}"
-    return f"about {plain(seconds / (365.25 * 86400), 2)} years"
+    return f"about {years:.1f} years" if years < 3 else f"about {years:.0f} years"
+
+
+def typeset(text: str) -> str:
+    """A number or unit as plain text sets it: true minus, raised powers (cm⁻¹, m³/mol), μ_B."""
+    raised = re.sub(r"(?<=[^\W\d_])-?\d+\b", lambda found: found[0].translate(SUPERSCRIPTS), text)
+    return raised.replace("-", "\u2212").replace("muB", "μ_B")

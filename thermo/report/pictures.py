@@ -12,19 +12,23 @@ from matplotlib.axes import Axes
 from matplotlib.collections import LineCollection
 from matplotlib.ticker import MaxNLocator
 
-from thermo.errors import FileFormatError, UnavailableError
+from thermo.errors import FileFormatError, RangeError, UnavailableError
 from thermo.report import style
 from thermo.report.fit_picture import draw_fit
+from thermo.report.numbers import grouped, typeset
 from thermo.report.quantities import (
     CURVE_QUANTITIES,
     DEFAULT_PANELS,
     SYMBOLS,
     Quantity,
     axis_label,
+    names,
     per_note,
     power_of_thousand,
+    pretty_unit,
     quantity,
 )
+from thermo.units import MOLAR_BOHR_MAGNETON, MOMENT_SI_PER_EMU
 from thermo.variables import convert_curves
 
 _MOST_LEVELS = 3000  # bars of a column of levels that a page can still tell apart
@@ -37,6 +41,7 @@ def plot(
     what: str | Sequence[str] | None = None,
     units_system: str | None = None,
     title: str | None = None,
+    scale: str | None = None,
 ) -> None:
     """Draw a curves, levels or fit dataset into a .png, .svg or .pdf file.
 
@@ -44,31 +49,32 @@ def plot(
     specific_heat, specific_heat_over_T, entropy, susceptibility, chi_T, magnetization (over the
     field), internal_energy, free_energy; for a fit the name of a data set; for levels "levels"
     or "density". All there is by default. ``units_system`` converts molar curves to "molar-si"
-    or "molar-cgs". Raises FileFormatError, UnavailableError or UnitsError.
+    or "molar-cgs". ``scale`` "linear" or "log" sets the temperature axis; by default it is
+    linear for evenly spaced temperatures and logarithmic for geometric ones, or others that span
+    over 1.5 decades. Raises FileFormatError, UnavailableError, UnitsError or RangeError.
     """
     style.check_suffix(path)
-    chosen = _names(what)
+    chosen = names(what)
     kind = str(dataset.attrs.get("content"))
-    draw = {"curves": _draw_curves, "levels": _draw_levels, "fit": draw_fit}.get(kind)
-    if draw is None:
+    if kind not in ("curves", "levels", "fit"):
         raise FileFormatError("only levels, curves and fit datasets can be drawn")
+    if scale not in (None, "linear", "log"):
+        raise RangeError(f"the scale {scale!r} is unknown; use linear or log")
+    if scale is not None and kind == "levels":
+        raise UnavailableError("a picture of levels has no temperature axis; leave the scale out")
     if kind == "curves" and units_system is not None:
         dataset = convert_curves(dataset, units_system)
     with style.style():
-        figure = draw(dataset, chosen)
+        if kind == "levels":
+            figure = _draw_levels(dataset, chosen)
+        else:
+            figure = (_draw_curves if kind == "curves" else draw_fit)(dataset, chosen, scale)
         if title:
             figure.suptitle(title, fontsize=9)
         style.save(figure, path)
 
 
-def _names(what: str | Sequence[str] | None) -> list[str]:
-    if what is None:
-        return []
-    parts = what.split(",") if isinstance(what, str) else what
-    return [part.strip() for part in parts if part.strip()]
-
-
-def _draw_curves(curves: xr.Dataset, chosen: list[str]) -> Any:
+def _draw_curves(curves: xr.Dataset, chosen: list[str], scale: str | None) -> Any:
     panels = chosen or [
         name
         for name in DEFAULT_PANELS
@@ -96,17 +102,22 @@ def _draw_curves(curves: xr.Dataset, chosen: list[str]) -> Any:
     over_temperature = []
     for axes, item in zip(grid, ready, strict=True):
         if item.name == "magnetization" and several:
-            _over_field(axes, curves, item, spare[0] if len(spare) else None)
+            power = _over_field(axes, curves, item, spare[0] if len(spare) else None)
         else:
-            _over_temperature(axes, curves, item, fields)
+            power = _over_temperature(axes, curves, item, fields, scale)
             over_temperature.append(axes)
+        if item.name == "magnetization":
+            _bohr_magnetons(axes, curves, item, power)
     if over_temperature:
         fields.explain(figure, list(grid), over_temperature[0])
     figure.supxlabel(per_note(curves.attrs), fontsize=6.5, color=style.GREY, x=0.99, ha="right")
     return figure
 
 
-def _over_temperature(axes: Axes, curves: xr.Dataset, item: Quantity, fields: style.Shades) -> None:
+def _over_temperature(
+    axes: Axes, curves: xr.Dataset, item: Quantity, fields: style.Shades, scale: str | None
+) -> int:
+    """Draw a quantity at each field; the power of ten taken out of its axis."""
     t = curves["temperature"].values
     power = power_of_thousand([item.values])
     y = item.values / 10.0**power
@@ -123,14 +134,16 @@ def _over_temperature(axes: Axes, curves: xr.Dataset, item: Quantity, fields: st
     axes.set_xlabel(axis_label("T", str(curves["temperature"].attrs["units"])))
     if t.size > 1:
         axes.set_xlim(t[0], t[-1])
-    if style.spans_decades(t):
+    if style.wants_log(t, scale):
         style.log_axis(axes)
     elif t.size > 1 and t[0] < 0.1 * t[-1]:
         axes.set_xlim(0, t[-1])
     _from_zero(axes, y)
+    return power
 
 
-def _over_field(axes: Axes, curves: xr.Dataset, item: Quantity, spare: Axes | None) -> None:
+def _over_field(axes: Axes, curves: xr.Dataset, item: Quantity, spare: Axes | None) -> int:
+    """Draw isotherms over the field; the power of ten taken out of the axis."""
     t, b = curves["temperature"].values, curves["field"].values
     # A few isotherms spread evenly over the grid's own spacing.
     picked = np.unique(np.linspace(0, t.size - 1, min(_ISOTHERMS, t.size)).round().astype(int))
@@ -146,11 +159,31 @@ def _over_field(axes: Axes, curves: xr.Dataset, item: Quantity, spare: Axes | No
     axes.set_ylabel(item.label(power))
     _from_zero(axes, y[picked])
     if shades.single:
-        return
+        return power
     if spare is None:
         axes.legend(title="$T$", loc="best")
     else:  # isotherms fan out over the whole panel; the empty place beside it takes the legend
         spare.legend(*axes.get_legend_handles_labels(), title="$T$", loc="upper left")
+    return power
+
+
+def _bohr_magnetons(axes: Axes, curves: xr.Dataset, item: Quantity, power: int) -> None:
+    """A second scale on the right: a molar magnetization in μ_B per ion or formula unit."""
+    per = {"ion": "ion", "formula": "formula unit"}.get(str(curves.attrs["per"]))
+    if item.unit == "1" or item.unit == "muB" or per is None:
+        return
+    one = MOLAR_BOHR_MAGNETON / (MOMENT_SI_PER_EMU if item.unit.startswith("emu") else 1)
+    ratio = 10.0**power / one
+    axes.tick_params(axis="y", which="both", right=False)
+
+    def there(y: Any) -> Any:
+        return y * ratio
+
+    def back(y: Any) -> Any:
+        return y / ratio
+
+    right = axes.secondary_yaxis("right", functions=(there, back))
+    right.set_ylabel(f"$M$ ({pretty_unit('muB')} per {per})")
 
 
 def _from_zero(axes: Axes, values: Any) -> None:
@@ -190,10 +223,9 @@ def _draw_levels(levels: xr.Dataset, chosen: list[str]) -> Any:
     grid[0].set_ylabel(axis_label("E - E_0", unit, power))
     top = float(above.max()) or 1.0
     grid[0].set_ylim(-0.02 * top, 1.02 * top)
-    states = float(levels["weight"].sum())
-    note = f"{levels.sizes['level']} levels, {states:.10g} states, $E_0$ = "
-    note += f"{energy.min():.8g}".replace("-", "\u2212")
-    note += "" if unit == "1" else f" {unit}"
+    count, states = grouped(levels.sizes["level"]), grouped(float(levels["weight"].sum()))
+    note = f"{count} levels, {states} states, $E_0$ = {typeset(f'{energy.min():.8g}')}"
+    note += "" if unit == "1" else f" {typeset(unit)}"
     figure.supxlabel(note, fontsize=6.5, color=style.GREY, x=0.99, ha="right")
     return figure
 

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import re
-from collections.abc import Iterable
+from collections.abc import Iterable, Sequence
 from dataclasses import dataclass
 from typing import Any
 
@@ -32,6 +32,7 @@ SYMBOLS = {
 DERIVED = {"chi_T": ("susceptibility", 1), "specific_heat_over_T": ("specific_heat", -1)}
 #: All that `what` may name for curves, in the order they are drawn.
 CURVE_QUANTITIES = tuple(name for name in SYMBOLS if name not in ("temperature", "field"))
+MAGNETIC = ("susceptibility", "chi_T", "magnetization")
 DEFAULT_PANELS = ("specific_heat", "entropy", "susceptibility", "chi_T")
 
 
@@ -54,7 +55,7 @@ def quantity(curves: xr.Dataset, name: str) -> Quantity:
     stored, power = DERIVED.get(name, (name, 0))
     if name not in CURVE_QUANTITIES:
         raise UnavailableError(
-            f"{name!r} cannot be drawn; choose from {', '.join(CURVE_QUANTITIES)}"
+            f"{name!r} is no quantity of curves; choose from {', '.join(CURVE_QUANTITIES)}"
         )
     if stored not in curves:
         why = curves.attrs.get("unavailable")
@@ -102,6 +103,8 @@ def _inverse(energy: str) -> str:
     return {"K": "K-1", "meV": "meV-1", "cm-1": "cm"}[energy]
 
 
+_WHOLE = {"ion": "ions", "formula": "formula units"}
+_ONE = {"ion": "per ion", "formula": "per formula unit"}
 _NAMES = {"muB": r"\mu_\mathrm{B}", "kB": r"k_\mathrm{B}", "R": "R"}
 
 
@@ -138,9 +141,49 @@ def power_of_thousand(arrays: Iterable[Any]) -> int:
     return int(3 * np.floor(np.log10(top) / 3))
 
 
-def per_note(attrs: Any) -> str:
-    """Per what the curves are counted, as a sentence fragment."""
+def names(what: str | Sequence[str] | None) -> list[str]:
+    """The names of a list, or of text with commas between them; none for None."""
+    if what is None:
+        return []
+    parts = what.split(",") if isinstance(what, str) else what
+    return list(dict.fromkeys(part.strip() for part in parts if part.strip()))
+
+
+def share(attrs: Any) -> str:
+    """Per what the curves are counted: "per mole of ions", "per site"."""
     if attrs.get("units_system") == "reduced":
-        return "per site" + (", $k_B = \\mu_B = 1$" if attrs.get("energy_unit") == "1" else "")
-    whole = {"ion": "magnetic ions", "formula": "formula units"}
-    return f"per mole of {whole.get(str(attrs.get('per')), str(attrs.get('per')))}"
+        return "per site"
+    return f"per mole of {_WHOLE.get(str(attrs.get('per')), str(attrs.get('per')))}"
+
+
+def per_note(attrs: Any) -> str:
+    """What to know of all curves of a picture: per what, natural units, the field's direction."""
+    text = share(attrs)
+    if attrs.get("units_system") == "reduced" and attrs.get("energy_unit") == "1":
+        text += ", $k_B = \\mu_B = 1$"
+    return text + (", B \u2225 z" if along_z(attrs) else "")
+
+
+def along_z(attrs: Any) -> bool:
+    """Whether field and moment are along z because the model is anisotropic."""
+    return attrs.get("field_direction") == "z"
+
+
+def dataset_share(fit: xr.Dataset, index: int) -> str:
+    """Per what a data set of a fit is counted; "" where the file does not say."""
+    per = dataset_per(fit, index)
+    if not per or fit.attrs.get("energy_unit") == "1":
+        return "per site" if per == "ion" else _ONE.get(per, "")
+    unit = str(fit["dataset_units"].values[index])
+    return f"per mole of {_WHOLE[per]}" if unit == "R" or "mol" in unit else _ONE[per]
+
+
+def dataset_per(fit: xr.Dataset, index: int) -> str:
+    """A fit's ``dataset_per`` ("ion" or "formula"); "" where the file does not say."""
+    per = str(fit["dataset_per"].values[index]) if "dataset_per" in fit else ""
+    return per if per in _ONE else ""
+
+
+def by_scatter(fit: xr.Dataset) -> bool:
+    """Whether no uncertainties were stated, so that the residuals' scatter stands in for them."""
+    return fit.attrs.get("error_basis") == "scatter"

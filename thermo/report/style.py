@@ -93,7 +93,32 @@ def save(figure: Figure, path: str | os.PathLike[str]) -> None:
 def spans_decades(values: Any) -> bool:
     """Whether positive values span so much that only a logarithmic axis shows them."""
     array = np.asarray(values, dtype=float)
-    return array.size > 1 and float(array.min()) > 0 and array.max() / array.min() > 10**1.5
+    return array.size > 1 and bool(array.min() > 0 and array.max() / array.min() > 10**1.5)
+
+
+def wants_log(values: Any, scale: str | None = None) -> bool:
+    """Whether an axis of these increasing values is drawn logarithmically.
+
+    ``scale`` "log" or "linear" decides where given (values from zero on stay linear). Otherwise
+    the grid does: evenly spaced is linear, geometric is logarithmic over a factor of 4 or more,
+    and anything else is so where it spans over 1.5 decades.
+    """
+    array = np.asarray(values, dtype=float)
+    if array.size < 2 or array[0] <= 0 or scale == "linear":
+        return False
+    if scale == "log":
+        return True
+    if array.size > 2 and _even(array):
+        return False
+    return spans_decades(array) or (
+        array.size > 2 and _even(np.log(array)) and bool(array[-1] >= 4 * array[0])
+    )
+
+
+def _even(values: Any) -> bool:
+    """Whether steps are alike to 5 %, as of a grid, or of a controlled run's temperatures."""
+    steps = np.diff(values)
+    return float(np.ptp(steps)) <= 0.05 * float(np.abs(steps).mean())
 
 
 def log_axis(axes: Axes) -> None:

@@ -1,6 +1,6 @@
 """Tables for the terminal: the plan of a spectrum, the result of a fit, the shape of curves.
 
-They go to standard output, without colour or box characters lost when it is not a terminal.
+They go to standard output; to a file without colour, and with no blanks at the ends of lines.
 """
 
 from __future__ import annotations
@@ -18,7 +18,15 @@ from rich.text import Text
 
 from thermo.report.export import flag_word
 from thermo.report.numbers import duration, grouped, plain, size, with_uncertainty
-from thermo.report.quantities import quantity, unit_of
+from thermo.report.quantities import (
+    MAGNETIC,
+    along_z,
+    by_scatter,
+    dataset_per,
+    quantity,
+    share,
+    unit_of,
+)
 
 _PIPE_WIDTH = 100  # columns, when nobody's window sets them
 
@@ -32,11 +40,28 @@ def _console(console: Console | None) -> Console:
     return found
 
 
+def _show(console: Console | None, *parts: Table | str) -> None:
+    """Print tables and lines of text; a file gets whole lines, without blanks at their ends."""
+    out = _console(console)
+    with out.capture() as capture:
+        for part in parts:
+            if isinstance(part, str):
+                out.print(Text(part), soft_wrap=not out.is_terminal)
+            else:
+                out.print(part)
+    lines = capture.get()
+    if not out.is_terminal:
+        lines = "\n".join(line.rstrip(" ") for line in lines.split("\n"))
+    out.file.write(lines)
+    out.file.flush()
+
+
 def _sheet(title: str, *columns: str, right: tuple[str, ...] = ()) -> Table:
     sheet = Table(title=title or None, title_justify="left", box=box.SIMPLE_HEAD, pad_edge=False,
                   title_style="bold", show_header=any(columns))  # fmt: skip
     for column in columns:
-        sheet.add_column(column, justify="right" if column in right else "left", overflow="fold")
+        sheet.add_column(column, justify="right" if column in right else "left", overflow="fold",
+                         no_wrap=column == "value")  # fmt: skip
     return sheet
 
 
@@ -48,14 +73,15 @@ def print_plan(plan: Any, console: Console | None = None) -> None:
     sheet.add_column(overflow="fold")
     for name, text in plan_rows(facts):
         sheet.add_row(Text(name), Text(text))
-    out = _console(console)
-    out.print(sheet)
-    for note in facts.get("notes") or ():
-        out.print(Text(f"Note: {note}"))
+    _show(console, sheet, *(f"Note: {note}" for note in facts.get("notes") or ()))
 
 
-def _many(count: int, noun: str) -> str:
-    return f"{_count(count)} {noun}{'' if count == 1 else 's'}"
+def _many(count: Any, noun: str) -> str:
+    number = count if isinstance(count, int) else len(count)
+    return f"{grouped(number)} {noun}{'' if number == 1 else 's'}"
+
+
+_METHODS = {"none": "none: too large for full spectra"}
 
 
 def plan_rows(facts: Mapping[str, Any]) -> list[tuple[str, str]]:
@@ -96,12 +122,14 @@ def plan_rows(facts: Mapping[str, Any]) -> list[tuple[str, str]]:
         rows.append(("blocks", blocks_text(facts["sectors"])))
     if facts.get("memory_bytes") is not None:
         limit = facts.get("memory_limit")
-        allowed = f" of {size(limit)} allowed" if limit else ""
-        rows.append(("memory", size(facts["memory_bytes"]) + allowed))
+        needed = size(facts["memory_bytes"])
+        link = " of" if needed[0].isdigit() else ";"
+        rows.append(("memory", needed + (f"{link} {size(limit)} allowed" if limit else "")))
     if facts.get("seconds") is not None:
         rows.append(("time", duration(float(facts["seconds"]))))
     if facts.get("method"):
-        rows.append(("method", str(facts["method"])))
+        method = str(facts["method"])
+        rows.append(("method", _METHODS.get(method, method)))
     return rows
 
 
@@ -117,49 +145,66 @@ def blocks_text(sectors: Any) -> str:
     return text
 
 
-def _count(value: Any) -> str:
-    return str(value) if isinstance(value, int) else str(len(value))
-
-
 def print_fit(fit: xr.Dataset, console: Console | None = None) -> None:
-    """Print a fit dataset: parameters with standard errors, correlations, χ² per data set."""
-    out = _console(console)
-    out.print(_parameter_sheet(fit))
-    correlations = _correlation_sheet(fit)
-    if correlations is not None:
-        out.print(correlations)
-    right = ("points", "χ²", "χ² per point")
-    sheet = _sheet("Data sets", "name", "quantity", "units", *right, right=right)
-    points = np.bincount(fit["point_dataset"].values, minlength=fit.sizes["dataset"])
+    """Print a fit dataset: parameters with standard errors, correlations, how each set fits.
+
+    How: χ² where uncertainties were stated, else the scatter, since χ² is then fixed by it.
+    """
+    sheets = [_parameter_sheet(fit), _correlation_sheet(fit), _dataset_sheet(fit)]
+    _show(console, *(sheet for sheet in sheets if sheet is not None), *fit_verdict(fit))
+
+
+def _dataset_sheet(fit: xr.Dataset) -> Table:
+    scatter = by_scatter(fit)
+    right = ("points", "scatter") if scatter else ("points", "χ²", "χ² per point")
+    sheet = _sheet("Data sets", "name", "quantity", "units", "per", *right, right=right)
+    owner = fit["point_dataset"].values
     for n, name in enumerate(fit["dataset_name"].values):
-        chi = float(fit["dataset_chi_square"][n])
+        mine = owner == n
+        count = int(np.count_nonzero(mine))
+        if scatter:
+            found = [_scatter(fit["observed"].values[mine], fit["residual"].values[mine])]
+        else:
+            chi = float(fit["dataset_chi_square"][n])
+            found = [plain(chi, 4), plain(chi / count, 3) if count else ""]
         sheet.add_row(
             Text(str(name)),
             Text(str(fit["dataset_quantity"].values[n])),
             Text(str(fit["dataset_units"].values[n])),
-            str(points[n]),
-            plain(chi, 4),
-            plain(chi / points[n], 3) if points[n] else "",
+            dataset_per(fit, n),
+            grouped(count),
+            *found,
         )
-    out.print(sheet)
-    for line in fit_verdict(fit):
-        out.print(Text(line))
+    return sheet
+
+
+def _scatter(observed: Any, residual: Any) -> str:
+    """Root mean square of the residuals as a share of the mean magnitude measured."""
+    mean = float(np.mean(np.abs(observed))) if observed.size else 0.0
+    if not mean:
+        return ""
+    return f"{plain(100 * math.sqrt(float(np.mean(residual**2))) / mean, 2)} % of the mean"
 
 
 def fit_verdict(fit: xr.Dataset) -> list[str]:
     """What to know before believing the numbers: χ²/ν, convergence, bounds."""
-    freedom = int(fit["degrees_of_freedom"])
+    freedom = f"{grouped(int(fit['degrees_of_freedom']))} degrees of freedom"
     reduced = float(fit["reduced_chi_square"])
     ratio = f", reduced χ² = {plain(reduced, 4)}" if math.isfinite(reduced) else ""
+    if by_scatter(fit):  # each χ² is then as large as the scatter makes it
+        start = f"Errors from the scatter, with {freedom}"
+    else:
+        start = f"χ² = {plain(float(fit['chi_square']), 5)} with {freedom}{ratio}"
     lines = [
-        f"χ² = {plain(float(fit['chi_square']), 5)} with {freedom} degrees of freedom{ratio}; "
+        f"{start}; "
         + ("converged" if int(fit["converged"]) else "NOT converged: do not use these values")
-        + f" after {int(fit['evaluations'])} evaluations."
+        + f" after {grouped(int(fit['evaluations']))} evaluations."
     ]
+    told = str(fit.attrs.get("cautions", ""))
     stuck = [
-        f"{fit['parameter_name'].values[n]} ({flag_word(fit['at_bound'], n)})"
-        for n in range(fit.sizes["parameter"])
-        if int(fit["at_bound"][n])
+        f"{name} ({flag_word(fit['at_bound'], n)})"
+        for n, name in enumerate(fit["parameter_name"].values)
+        if int(fit["at_bound"][n]) and f"{name} sits at" not in told
     ]
     if stuck:
         lines.append(
@@ -225,11 +270,13 @@ def _correlation_sheet(fit: xr.Dataset) -> Table | None:
 def print_curves(curves: xr.Dataset, console: Console | None = None) -> None:
     """Print where C, χ and χT peak and where the entropy ends, for each field."""
     right = ("field", "largest value", "at temperature", "at the highest")
-    sheet = _sheet("Curves", "quantity", "units", *right, right=right)
+    sheet = _sheet(f"Curves {share(curves.attrs)}", "quantity", "units", *right, right=right)
     temperature, field = curves["temperature"].values, curves["field"].values
+    magnetic = False
     for name in ("specific_heat", "susceptibility", "chi_T", "entropy", "magnetization"):
         if name not in curves and not (name == "chi_T" and "susceptibility" in curves):
             continue
+        magnetic |= name in MAGNETIC
         item = quantity(curves, name)
         for j, b in enumerate(field):
             column = item.values[:, j]
@@ -240,4 +287,7 @@ def print_curves(curves: xr.Dataset, console: Console | None = None) -> None:
                 plain(float(column[top]), 6), f"{temperature[top]:.5g}{edge}",
                 plain(float(column[-1]), 6),
             )  # fmt: skip
-    _console(console).print(sheet)
+    direction = []
+    if magnetic and along_z(curves.attrs):
+        direction.append("B \u2225 z: the field, susceptibility and magnetization are along z.")
+    _show(console, sheet, *direction)
