@@ -41,17 +41,32 @@ def test_the_tables_are_those_of_the_script_and_say_they_are_invented(
         assert "invented" in (DEMO / name).read_text()
 
 
-def test_a_false_minimum_is_not_passed_over_in_silence(tmp_path):
-    """From a leg coupling of the wrong sign the fit ends in another valley, and says so."""
+def test_a_false_minimum_is_left_by_another_start_and_else_told(tmp_path):
+    """From a leg coupling of the wrong sign the fit ends in another valley, and is led out of it;
+    without further starts it says so."""
     text = (DEMO / "study.toml").read_text().replace("start = 60.0", "start = -100.0")
     text = text.replace("start = 100.0", "start = 450.0")
     text = text.replace('file = "', f'file = "{DEMO}/')
     text = text.replace('"model.toml"', f'"{DEMO}/model.toml"')
     (tmp_path / "study.toml").write_text(text)
+    false = fit(tmp_path / "study.toml", starts=0)
+    assert false["J_leg"].value < 0
+    assert false.n_starts == 1
+    assert false.reduced_chi_square > 2
+    assert any("start" in caution for caution in false.cautions)
     result = fit(tmp_path / "study.toml")
-    assert result["J_leg"].value < 0
-    assert not result.trustworthy
-    assert any("start" in caution for caution in result.cautions)
+    good = fit(DEMO / "study.toml")
+    for name in good.free_names:
+        assert result[name].value == pytest.approx(good[name].value, rel=1e-5)
+    assert result.cautions == ()
+    assert result.n_starts == 7
+    assert "7 starts were tried" in result.message
+    assert "this minimum is lower" in result.message
+    assert result.n_solves > false.n_solves
+    # A good first minimum costs nothing more.
+    assert good.n_starts == 1
+    assert good.n_solves <= 16
+    assert "start" not in good.message
 
 
 def test_the_smaller_cluster_serves_at_these_temperatures(script):

@@ -5,10 +5,12 @@ from __future__ import annotations
 import os
 from collections.abc import Callable, Mapping
 
+from thermo.errors import RangeError
 from thermo.fit.forward import Forward, Points, Solver, check_available
 from thermo.fit.minimise import make_problem, minimise
 from thermo.fit.parameters import CHI0
 from thermo.fit.result import Estimate, FitResult, SetResult, make_result
+from thermo.fit.starts import FURTHER_STARTS
 from thermo.fit.study import Study, read_study
 
 __all__ = ["Estimate", "FitResult", "SetResult", "Study", "fit", "read_study"]
@@ -19,20 +21,27 @@ def fit(
     progress: Callable[[float, str], None] | None = None,
     memory: int | float | str | None = None,
     solver: Solver | None = None,
+    starts: int = FURTHER_STARTS,
 ) -> FitResult:
     """Fit a study: a ``Study``, or what ``read_study`` takes.
 
     ``progress`` is called with the share done (0 to 1, a guess) and a line of text. ``memory``
     limits the diagonalisation, in bytes. ``solver`` replaces the full diagonalisation by anything
-    with a ``table(couplings) -> LevelTable`` method.
+    with a ``table(couplings) -> LevelTable`` method. ``starts`` is how many further starts may be
+    tried, and only where the first minimum looks like a false one: a parameter at its bound,
+    reduced χ² above 2, residuals of one sign in long runs, or no convergence.
 
     Cost: one diagonalisation for each new direction of the couplings. Changing only their common
     scale, g, χ0 or the paramagnetic fraction needs none; k independent couplings take k an
-    iteration, and one alone takes one in all.
+    iteration, and one alone takes one in all. Further starts take one each and those of the
+    iterations of the best three, in doubt some times as many as the first minimum took.
 
-    Raises StudyError, DataError, UnitsError, ModelError for the input, UnavailableError where the
-    model cannot give what was measured, MemoryLimitError where a block is too large.
+    Raises RangeError, StudyError, DataError, UnitsError, ModelError for the input,
+    UnavailableError where the model cannot give what was measured, MemoryLimitError where a block
+    is too large.
     """
+    if isinstance(starts, bool) or not isinstance(starts, int) or not 0 <= starts <= 1000:
+        raise RangeError(f"starts = {starts!r} must be a whole number from 0 to 1000")
     study = study if isinstance(study, Study) else read_study(study)
     if solver is None:
         from thermo.spectrum.full import FullSolver
@@ -44,4 +53,4 @@ def fit(
         solver = full
     forward = Forward(study.model, solver, study.parameters.by_name[CHI0].to_si)
     problem = make_problem(study, forward, progress)
-    return make_result(study, problem, minimise(problem))
+    return make_result(study, problem, minimise(problem, starts))

@@ -60,6 +60,7 @@ class SpectrumCache:
         self.solver = solver
         self.names = tuple(names)
         self.n_solves = 0
+        self.resolved = ""  # what the last table found resolves, as in a LevelTable
         self._known: list[_Known] = []
 
     def levels(self, couplings: Vector) -> tuple[LevelTable, float]:
@@ -86,9 +87,11 @@ class SpectrumCache:
 
     def _solve(self, couplings: Vector) -> LevelTable:
         self.n_solves += 1
-        return self.solver.table(
+        table = self.solver.table(
             {name: float(c) for name, c in zip(self.names, couplings, strict=True)}
         )
+        self.resolved = table.resolved
+        return table
 
     def _keep(self, known: _Known) -> None:
         self._known.insert(0, known)

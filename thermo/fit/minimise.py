@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Callable
 from dataclasses import dataclass, field
 
@@ -12,6 +13,7 @@ from scipy.optimize import least_squares
 from thermo.errors import StudyError
 from thermo.fit.forward import Forward, Points
 from thermo.fit.parameters import Parameters
+from thermo.fit.starts import FOLLOWED, further_starts, suspicious
 from thermo.fit.study import Study
 
 Vector = NDArray[np.float64]
@@ -23,6 +25,10 @@ MAX_EVALUATIONS = 300
 # Relative tolerances of cost, step and gradient: tight, since an evaluation without a solve is
 # cheap and rounding in the levels is about 1e-14.
 TOLERANCE = 1e-12
+# A further start is followed roughly, and to the end only where it leads lower by this share.
+EVALUATIONS_FOLLOWING = 30
+TOLERANCE_FOLLOWING = 1e-5
+LOWER = 1e-3
 # A parameter this near a bound, in standard errors, that is still pushed outward, is at it.
 NEAR_BOUND = 1e-2
 # A relative change of the data below this is the differences' own error, or unmeasurable.
@@ -43,6 +49,7 @@ class Problem:
     weighted: bool
     n_evaluations: int = 0
     progress: Callable[[float, str], None] | None = None
+    stage: str = ""
     _first: bool = field(default=True, repr=False)
 
     def predict(self, theta: Vector) -> Vector:
@@ -58,7 +65,8 @@ class Problem:
             # The number of steps is not known beforehand; this creeps towards the end.
             done = 1 - 1 / (1 + self.n_evaluations / 10)
             solves = self.forward.cache.n_solves
-            self.progress(done, f"chi square {float(found @ found):.6g}, {solves} spectra")
+            text = f"chi square {float(found @ found):.6g}, {solves} spectra"
+            self.progress(done, self.stage + text)
         return found
 
     def slopes(self, theta: Vector, final: bool = False) -> Vector:
@@ -104,6 +112,22 @@ class Minimum:
     identifiable: bool
     weak: str
     message: str
+    n_starts: int
+
+
+@dataclass(frozen=True, eq=False)
+class _End:
+    """Where one start led."""
+
+    theta: Vector
+    bound: NDArray[np.int64]
+    residuals: Vector
+    converged: bool
+    message: str
+
+    @property
+    def chi_square(self) -> float:
+        return float(self.residuals @ self.residuals)
 
 
 def make_problem(
@@ -129,23 +153,11 @@ def make_problem(
     )
 
 
-def minimise(problem: Problem) -> Minimum:
-    """Trust-region reflective least squares (Branch, Coleman and Li 1999, as in SciPy).
-
-    Parameters that end at a bound are put on it and the others are fitted again, so the result is
-    a minimum on that bound and not one that still creeps towards it.
-    """
-    lower, upper = problem.parameters.bounds
-    theta, converged, message = _descend(problem, problem.parameters.start, ())
-    bound = np.zeros(len(theta), dtype=np.int64)
-    for _ in range(len(theta)):
-        new = _pushed(problem, theta, bound, lower, upper)
-        if not np.any(new):
-            break
-        bound += new
-        theta = np.where(bound < 0, lower, np.where(bound > 0, upper, theta))
-        theta, converged, message = _descend(problem, theta, tuple(np.flatnonzero(bound)))
-    residuals = problem.residuals(theta)
+def minimise(problem: Problem, starts: int) -> Minimum:
+    """Least squares from the study's start and, where that minimum is suspicious, from up to
+    ``starts`` others; the lowest minimum found."""
+    end, n_starts, message = _lowest(problem, starts)
+    theta, bound, residuals = end.theta, end.bound, end.residuals
     jacobian = problem.slopes(theta, final=True)
     inside = np.flatnonzero(bound == 0)
     covariance = np.full((len(theta), len(theta)), np.nan)
@@ -158,14 +170,95 @@ def minimise(problem: Problem) -> Minimum:
         jacobian=jacobian,
         covariance=covariance,
         bound=bound,
-        converged=converged,
+        converged=end.converged,
         identifiable=weak is None,
         weak="" if weak is None else _combination(weak, names, theta[inside]),
         message=message,
+        n_starts=n_starts,
     )
 
 
-def _descend(problem: Problem, start: Vector, held: tuple[int, ...]) -> tuple[Vector, bool, str]:
+def _lowest(problem: Problem, starts: int) -> tuple[_End, int, str]:
+    """The lowest end of all starts tried, how many these were, and how it was reached."""
+    best = _settle(problem, problem.parameters.start)
+    others = further_starts(problem.parameters, starts) if _doubtful(problem, best) else []
+    if not others:
+        return best, 1, best.message
+    better = False
+    heights = [_height(problem, theta, k, len(others)) for k, theta in enumerate(others)]
+    for k in np.argsort(heights, kind="stable")[:FOLLOWED]:
+        problem.stage = f"from further start {k + 1} of {len(others)}: "
+        end = _follow(problem, others[k], best.chi_square)
+        if end is not None:
+            best, better = end, True
+            if not _doubtful(problem, best):
+                break
+    problem.stage = ""
+    outcome = "this minimum is lower" if better else "none led lower"
+    return (
+        best,
+        1 + len(others),
+        f"{best.message}; {1 + len(others)} starts were tried, since the first led to a doubtful "
+        f"minimum, and {outcome}",
+    )
+
+
+def _doubtful(problem: Problem, end: _End) -> bool:
+    parameters, sets = problem.parameters, problem.sets
+    return not end.converged or suspicious(
+        parameters, end.bound, sets, end.residuals, problem.weighted
+    )
+
+
+def _height(problem: Problem, theta: Vector, k: int, count: int) -> float:
+    """χ² at the k-th further start, infinite where a tie has no value there."""
+    problem.stage = f"further start {k + 1} of {count}: "
+    try:
+        residuals = problem.residuals(theta)
+    except StudyError:
+        return math.inf
+    chi_square = float(residuals @ residuals)
+    return chi_square if math.isfinite(chi_square) else math.inf
+
+
+def _follow(problem: Problem, start: Vector, to_beat: float) -> _End | None:
+    """Where a further start leads, or None: not lower, or to where a tie has no value."""
+    try:
+        theta, _, _ = _descend(problem, start, (), TOLERANCE_FOLLOWING, EVALUATIONS_FOLLOWING)
+        rough = problem.residuals(theta)
+        if not rough @ rough < (1 - LOWER) * to_beat:
+            return None
+        return _settle(problem, theta)
+    except (StudyError, ValueError):  # SciPy's word for residuals that are not finite
+        return None
+
+
+def _settle(problem: Problem, start: Vector) -> _End:
+    """Trust-region reflective least squares (Branch, Coleman and Li 1999, as in SciPy).
+
+    Parameters that end at a bound are put on it and the others are fitted again, so the result is
+    a minimum on that bound and not one that still creeps towards it.
+    """
+    lower, upper = problem.parameters.bounds
+    theta, converged, message = _descend(problem, start, ())
+    bound = np.zeros(len(theta), dtype=np.int64)
+    for _ in range(len(theta)):
+        new = _pushed(problem, theta, bound, lower, upper)
+        if not np.any(new):
+            break
+        bound += new
+        theta = np.where(bound < 0, lower, np.where(bound > 0, upper, theta))
+        theta, converged, message = _descend(problem, theta, tuple(np.flatnonzero(bound)))
+    return _End(theta, bound, problem.residuals(theta), converged, message)
+
+
+def _descend(
+    problem: Problem,
+    start: Vector,
+    held: tuple[int, ...],
+    tolerance: float = TOLERANCE,
+    evaluations: int = MAX_EVALUATIONS,
+) -> tuple[Vector, bool, str]:
     """Minimise over all parameters but those held; theta, whether it converged, and how."""
     lower, upper = problem.parameters.bounds
     moving = np.array([k for k in range(len(start)) if k not in held], dtype=np.int64)
@@ -184,13 +277,13 @@ def _descend(problem: Problem, start: Vector, held: tuple[int, ...]) -> tuple[Ve
         bounds=(lower[moving], upper[moving]),
         method="trf",
         x_scale="jac",
-        ftol=TOLERANCE,
-        xtol=TOLERANCE,
-        gtol=TOLERANCE,
-        max_nfev=MAX_EVALUATIONS,
+        ftol=tolerance,
+        xtol=tolerance,
+        gtol=tolerance,
+        max_nfev=evaluations,
     )
     how = {
-        0: f"stopped after {MAX_EVALUATIONS} evaluations without settling",
+        0: f"stopped after {evaluations} evaluations without settling",
         1: "the gradient vanished",
         2: "chi square no longer changed",
         3: "the parameters no longer changed",

@@ -5,13 +5,14 @@ from __future__ import annotations
 import json
 import math
 from collections.abc import Mapping
-from dataclasses import dataclass, field
+from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
 from thermo.errors import RangeError, StudyError
+from thermo.fit.cautions import find_cautions
 from thermo.fit.forward import Forward, Points
 from thermo.fit.measured import QUANTITIES, Measured
 from thermo.fit.minimise import Minimum, Problem
@@ -19,6 +20,7 @@ from thermo.fit.parameters import Values
 from thermo.fit.strict import did_you_mean
 from thermo.fit.study import Study
 from thermo.model.spin_model import SpinModel
+from thermo.numbers import plain, with_uncertainty
 from thermo.units import quantity_factor
 
 if TYPE_CHECKING:
@@ -51,6 +53,17 @@ class Estimate:
     expression: str
     reason: str
 
+    def __str__(self) -> str:
+        """Like "J = -42.00(16) cm-1", with what else there is to know in brackets."""
+        unit = "" if self.unit == "1" else f" {self.unit}"
+        remark = self.reason
+        if self.at_bound:
+            remark = f"at its {'lower' if self.at_bound < 0 else 'upper'} bound"
+        elif self.status == "tied":
+            remark = f"= {self.expression}" + (f"; {self.reason}" if self.reason else "")
+        text = f"{self.name} = {with_uncertainty(self.value, self.standard_error)}{unit}"
+        return text + (f" ({remark})" if remark else "")
+
 
 @dataclass(frozen=True, eq=False)
 class SetResult:
@@ -68,7 +81,7 @@ class SetResult:
     chi_square: float
 
 
-@dataclass(frozen=True, eq=False)
+@dataclass(frozen=True, eq=False, repr=False)
 class FitResult:
     """The outcome of a fit.
 
@@ -77,8 +90,9 @@ class FitResult:
     ``reduced_chi_square`` tests the model; "scatter": none were stated, errors follow from the
     residuals' own scatter (errors scaled by the root of the reduced χ²) and
     ``reduced_chi_square`` is NaN, because it then tests nothing. ``n_solves`` counts
-    diagonalisations of the cluster, ``n_evaluations`` model curves. ``converged`` is about the
-    minimiser only; ``trustworthy`` asks all the questions at once.
+    diagonalisations of the cluster, ``n_evaluations`` model curves, ``n_starts`` the starts tried,
+    all from beginning to end. ``converged`` is about the minimiser only; ``trustworthy`` asks all
+    the questions at once. ``print(result)`` gives it in a few lines.
     """
 
     study: Study
@@ -95,12 +109,29 @@ class FitResult:
     converged: bool
     identifiable: bool
     message: str
+    n_starts: int
     cautions: tuple[str, ...]
     sets: tuple[SetResult, ...]
     n_solves: int
     n_evaluations: int
-    forward: Forward = field(repr=False)
-    values: Values = field(repr=False)
+    forward: Forward
+    values: Values
+
+    def __repr__(self) -> str:
+        """Values with errors, χ² and cautions, a line each."""
+        if math.isfinite(self.reduced_chi_square):
+            test = f"reduced χ² = {plain(self.reduced_chi_square, 4)}"
+        else:
+            test = "reduced χ² unknown, since no uncertainties are stated"
+        state = "converged" if self.converged else "NOT converged"
+        lines = [
+            f"Fit of {self.study.title}",
+            *(f"  {e}" for e in self.parameters if math.isfinite(e.value)),
+            f"χ² = {plain(self.chi_square, 5)} with {self.degrees_of_freedom} degrees of freedom, "
+            f"{test}; {state}",
+            *(f"Caution: {caution}" for caution in self.cautions),
+        ]
+        return "\n".join(lines)
 
     def __getitem__(self, name: str) -> Estimate:
         """The estimate of a parameter by its name."""
@@ -194,6 +225,7 @@ class FitResult:
             "message": self.message,
             "cautions": "\n".join(self.cautions),
             "spectra_solved": self.n_solves,
+            "starts_tried": self.n_starts,
             "points_masked": self.n_masked,
         }
 
@@ -265,7 +297,10 @@ def make_result(study: Study, problem: Problem, minimum: Minimum) -> FitResult:
         converged=minimum.converged,
         identifiable=minimum.identifiable,
         message=minimum.message,
-        cautions=_cautions(study, minimum, estimates, correlation, reduced, scale),
+        n_starts=minimum.n_starts,
+        cautions=find_cautions(
+            study, minimum, estimates, covariance, problem.forward.cache.resolved, scale
+        ),
         sets=tuple(sets),
         n_solves=problem.forward.cache.n_solves,
         n_evaluations=problem.n_evaluations,
@@ -289,56 +324,3 @@ def _error(
     if not minimum.identifiable:
         return math.nan, f"the data do not fix {minimum.weak}"
     return float(np.sqrt(slope[moved] @ covariance[np.ix_(moved, moved)] @ slope[moved])), ""
-
-
-def _cautions(
-    study: Study,
-    minimum: Minimum,
-    estimates: list[Estimate],
-    correlation: Vector,
-    reduced: float,
-    scale: float,
-) -> tuple[str, ...]:
-    found = []
-    if not minimum.converged:
-        found.append(f"the fit did not converge: it {minimum.message}")
-    for e in estimates:
-        if e.at_bound:
-            side, bound = ("lower", e.lower) if e.at_bound < 0 else ("upper", e.upper)
-            found.append(
-                f"{e.name} sits at its {side} bound {bound:g}: it has no standard error, and "
-                "those of the others hold only with it fixed there"
-            )
-    if not minimum.identifiable:
-        found.append(
-            f"the data do not fix {minimum.weak} separately: no standard errors; fix one of them"
-        )
-    if not study.weighted:
-        found.append(
-            "no uncertainties were stated: each set was weighted by its mean magnitude, the "
-            f"standard errors come from the residuals' scatter ({100 * scale:.2g} % of that "
-            "magnitude), and chi square says nothing about the model"
-        )
-    elif math.isfinite(reduced):
-        # Five standard deviations of a reduced chi square.
-        spread = 5 * math.sqrt(2 / (study.n_points - len(study.parameters.free)))
-        if reduced > 1 + spread:
-            found.append(
-                f"reduced chi square is {reduced:.3g}: this minimum does not describe the data "
-                "within their uncertainties and the standard errors are too small; try other "
-                "starts, the other signs among them, or another model"
-            )
-        elif reduced < 1 - spread:
-            found.append(
-                f"reduced chi square is {reduced:.3g}: the stated uncertainties are larger than "
-                "the scatter of the data, or their errors are not independent"
-            )
-    names = [p.name for p in study.parameters.free]
-    for i in range(len(names)):
-        for j in range(i):
-            if abs(correlation[i, j]) > 0.99:
-                found.append(
-                    f"{names[j]} and {names[i]} are correlated to {correlation[i, j]:+.4f}: the "
-                    "data fix little more than one combination of them"
-                )
-    return tuple(found)
