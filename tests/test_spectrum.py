@@ -202,3 +202,116 @@ def test_no_interaction_at_all_is_a_paramagnet() -> None:
     levels = solve(ring(5).with_couplings({"J": 0.0, "J2": 0.0}))
     assert levels.weight.values.sum() == 32
     assert np.abs(levels.energy.values).max() < 1e-12
+
+
+def pair_model(first: float, second: float):
+    """Two separate dimers of very different strength."""
+    return read_model(
+        {
+            "format": 1,
+            "energy_unit": "1",
+            "bond_term": "+J S.S",
+            "couplings": {"a": first, "b": second},
+            "site": [{"spin": 0.5}] * 4,
+            "bond": [{"sites": [0, 1], "coupling": "a"}, {"sites": [2, 3], "coupling": "b"}],
+        }
+    )
+
+
+def test_a_weak_bond_is_kept_whatever_the_scale() -> None:
+    for scale in (1.0, 1e-6, 1e9):
+        energies = solve(pair_model(scale, 1e-9 * scale)).energy.values / scale
+        lowest = np.unique(np.round(energies - energies[0], 12))[1]
+        assert lowest == pytest.approx(1e-9, rel=1e-3)
+
+
+def test_couplings_that_cancel_to_rounding_are_no_interaction() -> None:
+    mapping = {
+        "format": 1,
+        "energy_unit": "1",
+        "bond_term": "+J S.S",
+        "couplings": {"a": 0.1 + 0.2, "b": -0.1, "c": -0.2},
+        "site": [{"spin": 0.5}] * 2,
+        "bond": [{"sites": [0, 1], "coupling": name} for name in "abc"],
+    }
+    assert np.abs(solve(read_model(mapping)).energy.values).max() < 1e-15
+
+
+@pytest.mark.parametrize("scale", [1e-200, 1e-90, 1e90])
+def test_any_power_of_ten(scale: float) -> None:
+    energies = solve(ring(4).with_couplings({"J": scale, "J2": 0.0})).energy.values
+    assert energies[0] == pytest.approx(-2 * scale, rel=1e-12)  # the four-ring's ground state
+
+
+def test_wrong_spin_labels_fail_the_check() -> None:
+    model = ring(6)
+    table = table_from_dataset(solve(model))
+    for change in (0, table.twice_spin + 2):
+        labels = np.zeros_like(table.twice_spin) + change
+        with pytest.raises(SpectrumError, match="mean square of M"):
+            check_levels(type(table)(**{**table.__dict__, "twice_spin": labels}), model)
+
+
+def test_large_spins() -> None:
+    def dimer(spin: float):
+        return read_model(
+            {
+                "format": 1,
+                "energy_unit": "1",
+                "bond_term": "+J S.S",
+                "couplings": {"J": 1.0},
+                "site": [{"spin": spin}] * 2,
+                "bond": [{"sites": [0, 1], "coupling": "J"}],
+            }
+        )
+
+    for spin in (10.0, 30.0, 150.0):
+        levels = solve(dimer(spin))
+        s = np.arange(2 * spin + 1)
+        expected = (s * (s + 1) - 2 * spin * (spin + 1)) / 2  # Kambe 1950
+        found = np.repeat(levels.energy.values, levels.weight.values.astype(int))
+        expected = np.repeat(expected, (2 * s + 1).astype(int))
+        assert np.abs(np.sort(found) - expected).max() < 1e-12 * 2 * spin**2
+
+
+@pytest.mark.parametrize(
+    "bonds",
+    [
+        [],
+        [(2 * i, 2 * i + 1) for i in range(15)],
+        [(i, j) for i in range(30) for j in range(i)],
+    ],
+    ids=["free", "dimers", "complete"],
+)
+def test_huge_groups_are_surveyed_in_seconds(bonds: list[tuple[int, int]]) -> None:
+    mapping = {
+        "format": 1,
+        "energy_unit": "1",
+        "bond_term": "+J S.S",
+        "couplings": {"J": 1.0},
+        "site": [{"spin": 0.5}] * 30,
+    }
+    if bonds:
+        mapping["bond"] = [{"sites": list(b), "coupling": "J"} for b in bonds]
+    started = time.perf_counter()
+    plan = survey(read_model(mapping))
+    assert plan.abelian_order > 50
+    assert time.perf_counter() - started < 30
+
+
+def test_concurrent_solves_leave_the_threads_as_they_were() -> None:
+    import threadpoolctl
+
+    def blas() -> list[int]:
+        return [
+            p["num_threads"] for p in threadpoolctl.threadpool_info() if p["user_api"] == "blas"
+        ]
+
+    solve(ring(8))
+    before = blas()
+    workers = [threading.Thread(target=lambda: solve(ring(9))) for _ in range(8)]
+    for w in workers:
+        w.start()
+    for w in workers:
+        w.join()
+    assert blas() == before

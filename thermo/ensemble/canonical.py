@@ -46,16 +46,22 @@ class ClusterCurves:
 
 @dataclass(frozen=True, eq=False)
 class _Groups:
-    """Levels sorted by magnetic numbers. ``excess`` (L,) energies above the group's lowest,
-    ``lowest`` (K,) those above the ground level; ``weight`` (L,) per state of the group.
-    ``m`` and ``owner`` (J,) list each group's states."""
+    """Levels sorted by magnetic numbers.
+
+    ``excess`` (L,) energies above the group's lowest, ``weight`` (L,) per state of the group;
+    ``lowest`` (K,) each group's lowest above the ``ground`` level and ``lowest_weight`` (K,) the
+    weight there; ``m`` and ``owner`` (J,) list each group's states; energies within
+    ``tolerance`` of the ground level count as equal.
+    """
 
     excess: Array
     weight: Array
     start: NDArray[np.int64]
     owner_of_level: NDArray[np.int64]
     lowest: Array
+    lowest_weight: Array
     ground: float
+    tolerance: float
     m: Array
     owner: NDArray[np.int64]
 
@@ -76,8 +82,8 @@ def _group(table: LevelTable) -> _Groups:
     tolerance = DEGENERACY * float(energy.max() - ground)
     lowest = energy[start] - ground
     excess = energy - energy[start][owner_of_level]
-    lowest[lowest < tolerance] = 0.0
-    excess[excess < tolerance] = 0.0
+    lowest[lowest <= tolerance] = 0.0
+    excess[excess <= tolerance] = 0.0
     m: list[float] = []
     owner: list[int] = []
     states = np.empty(len(values))
@@ -92,15 +98,20 @@ def _group(table: LevelTable) -> _Groups:
         owner += [k] * len(members)
         states[k] = len(members)
     weight = table.weight[order] / states[owner_of_level]
+    lowest_weight = np.add.reduceat(weight * (excess == 0), start)
     return _Groups(
-        excess, weight, start, owner_of_level, lowest, ground, np.array(m), np.array(owner)
-    )
+        excess, weight, start, owner_of_level, lowest, lowest_weight, ground, tolerance,
+        np.array(m), np.array(owner),
+    )  # fmt: skip
 
 
-def _group_sums(groups: _Groups, temperature: Array) -> tuple[Array, Array, Array]:
-    """Z, mean and variance of the excess energy of every group, each (nT, K)."""
+def _group_sums(groups: _Groups, temperature: Array) -> tuple[Array, Array, Array, Array]:
+    """Z without the group's lowest level, Z, mean and variance of the excess energy of every
+    group, each (nT, K)."""
     shape = (len(temperature), len(groups.start))
     z, mean, variance = np.empty(shape), np.empty(shape), np.empty(shape)
+    excited = np.empty(shape)
+    above = groups.excess > 0
     step = max(1, _CHUNK // len(groups.excess))
     for first in range(0, len(temperature), step):
         part = slice(first, first + step)
@@ -108,10 +119,11 @@ def _group_sums(groups: _Groups, temperature: Array) -> tuple[Array, Array, Arra
         exponent = np.maximum(-groups.excess / temperature[part, None], -800.0)
         p = groups.weight * np.exp(exponent)
         z[part] = np.add.reduceat(p, groups.start, axis=1)
+        excited[part] = np.add.reduceat(p * above, groups.start, axis=1)
         mean[part] = np.add.reduceat(p * groups.excess, groups.start, axis=1) / z[part]
         centred = groups.excess - mean[part][:, groups.owner_of_level]
         variance[part] = np.add.reduceat(p * centred**2, groups.start, axis=1) / z[part]
-    return z, mean, variance
+    return excited, z, mean, variance
 
 
 def cluster_curves(table: LevelTable, temperature: Array, field: Array) -> ClusterCurves:
@@ -124,31 +136,45 @@ def cluster_curves(table: LevelTable, temperature: Array, field: Array) -> Clust
     temperature = np.asarray(temperature, dtype=np.float64)
     field = np.asarray(field, dtype=np.float64)
     groups = _group(table)
-    z, mean, variance = _group_sums(groups, temperature)
+    excited, z, mean, variance = _group_sums(groups, temperature)
     shape = (len(temperature), len(field))
     energy, free, entropy = np.empty(shape), np.empty(shape), np.empty(shape)
     heat = np.empty(shape)
     moment, moment_variance = np.empty(shape), np.empty(shape)
     t = temperature[:, None]
-    z, mean, variance = z[:, groups.owner], mean[:, groups.owner], variance[:, groups.owner]
+    excited, z, mean, variance = (a[:, groups.owner] for a in (excited, z, mean, variance))
+    positive = np.flatnonzero(groups.m > 0)
+    # The state of the same group with −M.
+    opposite = {(int(k), m): j for j, (k, m) in enumerate(zip(groups.owner, groups.m, strict=True))}
+    negative = np.array(
+        [opposite[int(groups.owner[j]), -groups.m[j]] for j in positive], dtype=np.int64
+    )
     for b, h in enumerate(field):
         lowest = groups.lowest[groups.owner] - h * groups.m
         base = lowest.min()
         lowest = lowest - base
+        at_ground = lowest <= groups.tolerance
+        lowest[at_ground] = 0.0
         # Every term is between 0 and the number of states, the lowest at least its weight.
-        q = z * np.exp(np.maximum(-lowest / t, -800.0))
+        boltzmann = np.exp(np.maximum(-lowest / t, -800.0))
+        q = z * boltzmann
         total = q.sum(axis=1)
         p = q / total[:, None]
+        # ln Z = ln(ground weight) + ln(1 + the rest): the rest may be far below rounding.
+        ground_weight = groups.lowest_weight[groups.owner][at_ground].sum()
+        rest = np.where(at_ground, excited * boltzmann, q).sum(axis=1)
         relative = lowest + mean
         u = (p * relative).sum(axis=1)
         energy[:, b] = groups.ground + base + u
-        log_z = np.log(total)
+        log_z = np.log(ground_weight) + np.log1p(rest / ground_weight)
         free[:, b] = groups.ground + base - temperature * log_z
         entropy[:, b] = log_z + u / temperature
         spread = (p * (variance + (relative - u[:, None]) ** 2)).sum(axis=1)
         heat[:, b] = spread / temperature**2
-        # Without a field ±M cancel exactly; rounding must not say otherwise.
-        m = (p * groups.m).sum(axis=1) if h != 0 else np.zeros(len(temperature))
+        # p(M) − p(−M) from their ratio e^{−2|h|M/T}, exact for the smallest field.
+        favoured = positive if h >= 0 else negative
+        bias = -np.expm1(-2 * abs(h) * groups.m[positive] / t)
+        m = np.sign(h) * (p[:, favoured] * bias * groups.m[positive]).sum(axis=1)
         moment[:, b] = m
         moment_variance[:, b] = (p * (groups.m - m[:, None]) ** 2).sum(axis=1)
     known = table.resolved in ("total_spin", "magnetic_number")

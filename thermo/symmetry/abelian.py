@@ -17,7 +17,8 @@ from thermo.symmetry.automorphisms import Group, Permutation, powers
 
 ENUMERATE_UP_TO = 20_000
 SAMPLES = 2_000
-LARGEST_ORDER = 2_048
+# Beyond this the blocks are small enough and the character table grows as the square.
+LARGEST_ORDER = 512
 SEEDS = 12
 
 Permutations = NDArray[np.int64]
@@ -115,7 +116,17 @@ class AbelianGroup:
 
 
 def _order(p: Permutation) -> int:
-    return sum(1 for _ in powers(p))
+    return lcm(*(len(c) for c in cycles(p)))
+
+
+def _shortened(p: Permutation) -> Permutation:
+    """A power of p whose order is within bounds, p itself where it already is."""
+    order = _order(p)
+    divisor = next(d for d in range(1, order + 1) if order % d == 0 and order // d <= LARGEST_ORDER)
+    power = np.arange(len(p))
+    for _ in range(divisor):
+        power = p[power]
+    return power
 
 
 def _close(elements: Permutations, p: Permutation) -> Permutations:
@@ -273,7 +284,7 @@ def choose_abelian(
         by_order if len(by_order) <= SEEDS else [*by_order[: SEEDS // 2], *by_order[-SEEDS // 2 :]]
     )
     for seed in few:
-        candidates.append(_grow([seed], pool))
+        candidates.append(_grow([_shortened(seed)], pool))
     built = [_build(generators, pool) for generators in candidates]
     return min(built, key=lambda a: _work(a, real_hamiltonian))
 

@@ -19,6 +19,10 @@ from thermo.symmetry.abelian import AbelianGroup, choose_abelian, cycles
 from thermo.symmetry.automorphisms import Permutation, automorphism_group, colour_matrix
 from thermo.symmetry.interaction import Conserved, Interaction, conserved, interaction
 
+# Resolving S by a shift Λ·S(S+1) costs rounding of that size: beyond this S of the cluster the
+# sectors of M, which need no shift, are the accurate way.
+LARGEST_SHIFTED_SPIN = 40
+
 
 @dataclass(frozen=True, eq=False)
 class Sector:
@@ -162,7 +166,7 @@ def plan_symmetry(
     kept = conserved(terms)
     if not use_magnetization:
         kept = Conserved(1, False, False, kept.real)
-    if not use_total_spin:
+    if not use_total_spin or terms.twice_spin.sum() > 2 * LARGEST_SHIFTED_SPIN:
         kept = Conserved(kept.modulus, False, kept.reversal, kept.real)
     if use_permutations:
         group = automorphism_group(colour_matrix(terms))
