@@ -166,7 +166,7 @@ def per_note(attrs: Any) -> str:
 
 def along_z(attrs: Any) -> bool:
     """Whether field and moment are along z because the model is anisotropic."""
-    return attrs.get("field_direction") == "z"
+    return bool(attrs.get("field_direction") == "z")
 
 
 def dataset_share(fit: xr.Dataset, index: int) -> str:
