@@ -109,6 +109,8 @@ def string(value: object, path: str) -> str:
     """A text that is not empty."""
     if not isinstance(value, str) or not value.strip():
         raise fault(path, f"{show(value)} is not a name or text; give one in quotes")
+    if any("\ud800" <= c <= "\udfff" for c in value):
+        raise fault(path, f"{show(value)} holds half a character (a surrogate); write it whole")
     return value
 
 

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import keyword
+import re
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from fractions import Fraction
@@ -28,6 +29,8 @@ BOND_TERMS = {"+J S.S": 1.0, "-J S.S": -1.0, "+2J S.S": 2.0, "-2J S.S": -2.0}
 BOND_FORMS = ("isotropic", "xy", "ising", "antisymmetric")
 ION_FORMS = ("axial", "rhombic")
 DEFAULT_G = 2.0
+# Short by design: a fraction of an arbitrary text, such as "1e99999999", may never be done.
+_SPIN = re.compile(r"[0-9]{1,4}(/[0-9]{1,4}|\.[0-9]{0,6})?|\.[0-9]{1,6}")
 
 
 @dataclass(frozen=True)
@@ -71,8 +74,10 @@ def read_spin(value: object, path: str) -> float:
     remedy = "give a positive multiple of 1/2, such as 0.5, 1 or 1.5"
     if isinstance(value, str):
         try:
-            spin = float(Fraction(value))
-        except (ValueError, ZeroDivisionError, OverflowError):
+            if _SPIN.fullmatch(value.strip()) is None:
+                raise ValueError
+            spin = float(Fraction(value.strip()))
+        except (ValueError, ZeroDivisionError):
             raise fault(path, f"{show(value)} is not a spin; {remedy}") from None
     else:
         spin = number(value, path)
