@@ -39,7 +39,20 @@ _HARDLY_FREE = 1 << 20  # bytes
 def write_failure(target: str | os.PathLike[str], error: OSError) -> FileFormatError:
     """The one sentence that tells why a target cannot be written."""
     reason = _REASONS.get(error.errno or 0, f"{error.strerror or error}; choose another place")
-    return FileFormatError(f"cannot write {os.fspath(target)}: {reason}")
+    name = os.fspath(target)
+    shown = name if len(name) <= 300 else name[:296] + " ..."
+    return FileFormatError(f"cannot write {shown}: {reason}")
+
+
+def check_name(path: str | os.PathLike[str]) -> None:
+    """FileFormatError for a name that the netCDF library cannot take: it must be UTF-8."""
+    try:
+        os.fspath(path).encode()
+    except UnicodeEncodeError:
+        raise FileFormatError(
+            f"the name {os.fspath(path)!r} is not UTF-8, which netCDF files need; rename the file "
+            "or its directory"
+        ) from None
 
 
 @contextlib.contextmanager
@@ -50,18 +63,19 @@ def atomic_path(target: str | os.PathLike[str]) -> Iterator[Path]:
     the temporary file and leaves the target as it was. OSErrors become a FileFormatError. A
     link is followed; a device such as /dev/stdout is written through.
     """
+    final = Path(os.path.realpath(target))
+    check_name(final)
     try:
-        final = Path(os.path.realpath(target))
         if final.is_dir():
             raise IsADirectoryError(errno.EISDIR, "is a directory")
         through = final.exists() and not final.is_file()
         folder = Path(tempfile.gettempdir()) if through else final.parent
         # The stem is cut so that a long name stays within the file system's 255 bytes.
         temporary = folder / f".{final.stem[:40]}-{uuid.uuid4().hex[:12]}{final.suffix}"
-        os.close(os.open(temporary, os.O_CREAT | os.O_EXCL | os.O_WRONLY, 0o666))
     except OSError as error:
         raise write_failure(target, error) from error
     try:
+        os.close(os.open(temporary, os.O_CREAT | os.O_EXCL | os.O_WRONLY, 0o666))
         yield temporary
         if through:
             with temporary.open("rb") as source, final.open("wb") as sink:
@@ -155,6 +169,7 @@ def read_dataset(path: str | os.PathLike[str], kind: str | None = None) -> xr.Da
 
     where = os.fspath(path)
     wanted = f"a Partita {kind} file" if kind else "a Partita file"
+    check_name(Path(path).absolute())
     # Looked at first: the netCDF library would take a name with "://" for an address.
     if Path(path).is_dir():
         raise FileFormatError(f"{where} is a directory, not {wanted}; give a file")
