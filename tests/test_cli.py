@@ -92,6 +92,15 @@ def test_every_public_name_loads() -> None:
         _ = thermo.melt
 
 
+def test_modules_answer_as_attributes() -> None:
+    code = "import thermo, sys; assert 'thermo.model' not in sys.modules; "
+    code += (
+        "print(thermo.model.reading.__doc__); thermo.units.BOLTZMANN; help(thermo.model.reading)"
+    )
+    done = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, check=True)
+    assert "Every key of a model file" in done.stdout
+
+
 @pytest.mark.parametrize(
     "first", ["import thermo.fit", "from thermo.fit import read_study", "thermo.read_study"]
 )
@@ -116,7 +125,7 @@ def test_help_documents_every_exit_code(partita: Command) -> None:
     text = partita("--help").stdout
     family = [e for e in vars(errors).values() if isinstance(e, type)]
     codes = {e.exit_code for e in family if issubclass(e, errors.PartitaError)}
-    for code in codes | {0, 2, 130}:
+    for code in codes | {0, 2, 129, 130, 143}:
         assert re.search(rf"^ +{code} +\w", text, re.MULTILINE), code
 
 
@@ -153,12 +162,15 @@ def test_solve_is_quiet_and_overwrites(partita: Command, folder: Path, tmp_path:
     assert energy == pytest.approx([-7.5, 2.5], abs=1e-12)
 
 
-def test_curves_to_standard_output(partita: Command, folder: Path) -> None:
+def test_curves_to_standard_output(partita: Command, folder: Path, tmp_path: Path) -> None:
     done = partita("curves", "levels.nc", "-t", "2,5,10", cwd=folder)
     assert (done.returncode, done.stderr) == (0, "")
     found = table(done.stdout)
     assert found["temperature"] == [2, 5, 10]
-    for temperature, heat in zip(found["temperature"], found["specific_heat"], strict=True):
+    assert partita("curves", folder / "levels.nc", "-t", "2,5,10", "-o", "c.nc").returncode == 0
+    exact = thermo.read(tmp_path / "c.nc", "curves")["specific_heat"].values[:, 0]
+    assert found["specific_heat"] == pytest.approx(exact, rel=5e-7)  # seven digits
+    for temperature, heat in zip(found["temperature"], exact, strict=True):
         # A level with weight 1 and one with weight 3 at the gap J = 10 K (Schottky).
         x = 10 / temperature
         z = 1 + 3 * math.exp(-x)
@@ -228,6 +240,22 @@ def test_plot(partita: Command, folder: Path, tmp_path: Path, suffix: str, start
     assert (tmp_path / f"picture.{suffix}").read_bytes().startswith(start)
 
 
+def test_plot_scales(partita: Command, folder: Path, tmp_path: Path) -> None:
+    for scale in ("linear", "log"):
+        done = partita("plot", folder / "curves.nc", "--scale", scale, "-o", f"{scale}.svg")
+        assert (done.returncode, done.stderr) == (0, "")
+    linear, log = ((tmp_path / f"{s}.svg").read_text() for s in ("linear", "log"))
+    assert linear != log
+    done = partita("plot", folder / "curves.nc", "--scale", "square")
+    assert done.returncode == 2
+    assert "--scale" in done.stderr
+
+
+def test_export_of_chosen_columns(partita: Command, folder: Path) -> None:
+    done = partita("export", folder / "curves.nc", "--what", "specific_heat,chi_T")
+    assert list(table(done.stdout)) == ["temperature", "field", "specific_heat", "chi_T"]
+
+
 def test_plot_names_its_picture(partita: Command, folder: Path, tmp_path: Path) -> None:
     assert partita("plot", folder / "curves.nc").returncode == 0
     assert [p.name for p in tmp_path.iterdir()] == ["curves.png"]
@@ -263,6 +291,25 @@ def test_demo_within_ten_seconds(partita: Command) -> None:
     started = time.perf_counter()
     assert partita(*arguments).returncode == 0
     assert time.perf_counter() - started < 10
+
+
+# ---------------------------------------------------------------- the streams
+
+
+@pytest.mark.parametrize("closed", ["2>&-", ">&- 2>&-", "<&- >&- 2>&-"])
+def test_closed_streams(folder: Path, tmp_path: Path, closed: str) -> None:
+    line = f"'{command_path()}' solve '{folder}/model.toml' -o levels.nc {closed}"
+    assert subprocess.run(["sh", "-c", line], cwd=tmp_path).returncode == 0
+    assert thermo.read(tmp_path / "levels.nc").attrs["content"] == "levels"
+    line = f"'{command_path()}' solve absent.toml -o levels.nc {closed}"
+    assert subprocess.run(["sh", "-c", line], cwd=tmp_path).returncode == 4
+
+
+def test_a_terminal_of_few_characters(partita: Command, folder: Path) -> None:
+    environment = {**os.environ, "PYTHONIOENCODING": "ascii"}
+    done = partita("survey", folder / "model.toml", env=environment)
+    assert (done.returncode, done.stderr) == (0, "")
+    assert "1 ? 1 real" in done.stdout
 
 
 # ---------------------------------------------------------------- faults

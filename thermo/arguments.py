@@ -7,8 +7,8 @@ import tempfile
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
-from thermo.errors import FileFormatError, RangeError
-from thermo.storage import write_failure
+from thermo.errors import FileFormatError, MemoryLimitError, RangeError
+from thermo.storage import check_name, write_failure
 
 if TYPE_CHECKING:
     import xarray as xr
@@ -16,6 +16,20 @@ if TYPE_CHECKING:
 
 PICTURES = (".png", ".svg", ".pdf")
 LARGEST_GRID = 1_000_000
+_ARRAYS = 10  # of one number a point, that curves hold at their peak
+
+
+def brief(text: str, longest: int = 60) -> str:
+    """What a user wrote, short enough to stand in a sentence."""
+    return text if len(text) <= longest else text[: longest - 4] + " ..."
+
+
+def small_int(text: str) -> int | None:
+    """A whole number of at most nine plain digits, or None."""
+    digits = text.strip()
+    if digits.isascii() and digits.isdecimal() and len(digits) <= 9:
+        return int(digits)
+    return None
 
 
 def parse_grid(text: str, what: str) -> NDArray[Any]:
@@ -25,10 +39,10 @@ def parse_grid(text: str, what: str) -> NDArray[Any]:
     """
     import numpy as np
 
-    option = f"--{what} {text!r}"
+    option = f"--{what} {brief(text)!r}"
     shape = 'write "start:stop:count", "log start:stop:count" or a list like "2,5,10"'
     words = text.strip()
-    if Path(words).is_file():
+    if os.path.isfile(words):  # unlike Path.is_file, not upset by a text too long for a name
         values = _column(Path(words), what)
     elif ":" in words:
         logarithmic = words.lower().startswith("log")
@@ -36,12 +50,12 @@ def parse_grid(text: str, what: str) -> NDArray[Any]:
         if len(parts) != 3:
             raise RangeError(f"{option} has {len(parts)} parts where a grid has three; {shape}")
         start, stop = (_number(part, option, shape) for part in parts[:2])
-        if not parts[2].strip().isdigit() or not 1 <= int(parts[2]) <= LARGEST_GRID:
+        count = small_int(parts[2])
+        if count is None or not 1 <= count <= LARGEST_GRID:
             raise RangeError(
-                f"{option} asks for {parts[2].strip()!r} points; give a whole number from 1 to "
-                f"{LARGEST_GRID}"
+                f"{option} asks for {brief(parts[2].strip())!r} points; give a whole number from "
+                f"1 to {LARGEST_GRID}"
             )
-        count = int(parts[2])
         if logarithmic and min(start, stop) <= 0:
             raise RangeError(f"{option} is logarithmic and must start above zero; raise its start")
         spaced = np.geomspace if logarithmic else np.linspace
@@ -86,7 +100,8 @@ def _number(text: str, where: str, shape: str) -> float:
     try:
         value = float(text)
     except ValueError:
-        raise RangeError(f"{where} has {text.strip()!r} where a number belongs; {shape}") from None
+        word = brief(text.strip())
+        raise RangeError(f"{where} has {word!r} where a number belongs; {shape}") from None
     if value - value != 0:
         raise RangeError(f"{where} has {value}, which is not a finite number; {shape}")
     return value
@@ -108,21 +123,43 @@ def _column(path: Path, what: str) -> NDArray[Any]:
     return np.array([_number(line, f"{path}, line {n},", shape) for n, line in rows])
 
 
+def grid_files(*texts: str | None) -> tuple[Path, ...]:
+    """The files among grids as they were written; all others are numbers."""
+    return tuple(Path(t.strip()) for t in texts if t is not None and os.path.isfile(t.strip()))
+
+
+def check_grid_memory(n_temperatures: int, n_fields: int) -> None:
+    """Refuse a grid whose curves would not fit into free memory, before anything is allocated."""
+    from thermo.spectrum.memory import memory_limit, size_text
+
+    size, free = 8 * _ARRAYS * n_temperatures * n_fields, memory_limit(None)
+    if size > free:
+        raise MemoryLimitError(
+            f"curves at {n_temperatures} temperatures × {n_fields} fields need "
+            f"{size_text(size)} of memory and {size_text(free)} is free; give fewer of either, "
+            "or do a few fields at a time"
+        )
+
+
 def check_source(path: Path) -> None:
     """Refuse a missing file before anything slow is imported."""
-    if path.is_dir():
+    if os.path.isdir(path):
         raise FileFormatError(f"{path} is a directory where a file belongs; name a file in it")
-    if not path.exists():
-        raise FileFormatError(f"{path} does not exist; check the name and the directory")
+    if not os.path.exists(path):
+        name = brief(str(path), 200)
+        raise FileFormatError(f"{name} does not exist; check the name and the directory")
 
 
 def check_target(path: Path, suffixes: tuple[str, ...], sources: tuple[Path, ...]) -> None:
     """Refuse, before any work, a target that could not be written at its end."""
     if path.suffix.lower() not in suffixes:
         known = " or ".join(suffixes)
-        raise FileFormatError(f"the output {path} must end in {known}; change its name")
+        raise FileFormatError(
+            f"the output {brief(str(path), 200)} must end in {known}; change its name"
+        )
     real = Path(os.path.realpath(path))
-    if real.exists():
+    check_name(real)
+    if os.path.exists(real):
         if not real.is_file():
             raise FileFormatError(f"the output {path} is not a regular file; choose another name")
         if any(source.exists() and real.samefile(source) for source in sources):

@@ -6,8 +6,8 @@ Nothing slow is imported until a command needs it.
 
 from __future__ import annotations
 
-import contextlib
 import os
+import re
 import shutil
 import sys
 import textwrap
@@ -22,12 +22,16 @@ import typer
 from thermo import __version__
 from thermo.arguments import (
     PICTURES,
+    brief,
+    check_grid_memory,
     check_source,
     check_target,
     default_temperatures,
+    grid_files,
     parse_grid,
 )
 from thermo.errors import FileFormatError, PartitaError, RangeError
+from thermo.process import catch_signals, drop, ending, open_streams
 from thermo.progress import Interrupted, work
 
 if TYPE_CHECKING:
@@ -42,7 +46,9 @@ Exit codes:
   4    file cannot be read or written
   5    not enough memory
   6    a spectrum failed its own check
-  130  interrupted"""
+  129  ended by SIGHUP
+  130  interrupted (Ctrl-C)
+  143  ended by SIGTERM"""
 
 app = typer.Typer(
     name="partita",
@@ -65,6 +71,11 @@ class Units(StrEnum):
     reduced = "reduced"
 
 
+class Scale(StrEnum):
+    linear = "linear"
+    log = "log"
+
+
 class Per(StrEnum):
     ion = "ion"
     formula = "formula"
@@ -76,7 +87,8 @@ Memory = Annotated[
     typer.Option(metavar="SIZE", help='Memory limit, for example "4 GiB"; default: what is free.'),
 ]
 Threads = Annotated[
-    int | None, typer.Option(min=1, metavar="N", help="Processor cores to use; default: all.")
+    int | None,
+    typer.Option(min=1, max=9999, metavar="N", help="Processor cores to use; default: all."),
 ]
 
 
@@ -186,7 +198,8 @@ def curves(
         raise RangeError(f"--g {g:g} is no g factor; give a finite number above zero")
     check_source(levels)
     if output is not None:
-        check_target(output, (".nc", ".csv"), sources=(levels,))
+        sources = (levels, *grid_files(temperature, field))
+        check_target(output, (".nc", ".csv"), sources=sources)
     import thermo
 
     spectrum = _read(levels, "levels")
@@ -200,6 +213,7 @@ def curves(
             f"{temperatures[-1]:g}{unit}, from the width of the spectrum; "
             "--temperature sets others"
         )
+    check_grid_memory(len(temperatures), len(fields))
     found = thermo.curves(spectrum, temperatures, fields, units=system.value, per=per.value, g=g)
     if found.attrs.get("field_direction") == "z":
         _note("the model is anisotropic: fields, susceptibility and magnetization are along z")
@@ -278,6 +292,9 @@ def plot(
     units: Annotated[
         Units | None, typer.Option(help="Units of the curves; default: those of the file.")
     ] = None,
+    scale: Annotated[
+        Scale | None, typer.Option(help="Temperature axis; default: as the grid is spaced.")
+    ] = None,
 ) -> None:
     """Draw the curves, the fit or the levels of a file."""
     check_source(file)
@@ -286,7 +303,7 @@ def plot(
     import thermo
 
     system = None if units is None else units.value
-    thermo.plot(_read(file), target, what=what, units_system=system)
+    thermo.plot(_read(file), target, what=what, units_system=system, scale=scale and scale.value)
     _confirm(f"wrote {target}")
 
 
@@ -299,7 +316,11 @@ def export(
     ] = None,
     what: Annotated[
         str | None,
-        typer.Option(metavar="TABLE", help="Of a fit: points (default) or parameters."),
+        typer.Option(
+            metavar="NAMES",
+            help='Columns of curves, for example "specific_heat,chi_T"; of a fit: points (default) '
+            "or parameters.",
+        ),
     ] = None,
     units: Annotated[
         Units | None, typer.Option(help="Units of the curves; default: those of the file.")
@@ -346,10 +367,14 @@ def _set_threads(threads: int | None) -> None:
 def _say(sentence: str) -> None:
     # One sentence, whatever a library put into its message: one line, wrapped only for eyes.
     line = "partita: " + " ".join(sentence.split())
+    line = re.sub(r"\S{301,}", lambda long: brief(long[0], 300), line)
     if sys.stderr.isatty():
         width = shutil.get_terminal_size().columns
         line = textwrap.fill(line, width, subsequent_indent="  ", break_on_hyphens=False)
-    print(line, file=sys.stderr, flush=True)
+    try:
+        print(line, file=sys.stderr, flush=True)
+    except OSError:  # the terminal was closed, or the disk behind 2>file is full
+        drop(sys.stderr)
 
 
 def _note(sentence: str) -> None:
@@ -391,20 +416,22 @@ def run(arguments: Sequence[str]) -> int:
     except (BrokenPipeError, SystemExit):
         # Whoever read the output has had enough (partita export … | head): not a fault. Typer
         # turns it into SystemExit, which nothing else here raises.
-        _drop_stdout()
+        drop(sys.stdout)
         return 0
     except OSError as fault:
-        where = fault.filename or "standard output"
+        where = brief(os.fsdecode(fault.filename or "standard output"), 200)
         reason = (fault.strerror or str(fault)).lower()
         _say(f"{where}: {reason}; free space, or check the name and its permissions")
-        _drop_stdout()
+        drop(sys.stdout)
         return _leave(fault, 4)
     except Exception as fault:
         # Misuse of the command line, by whichever class this version of typer raises.
         usage = getattr(fault, "format_message", None)
         if usage is not None:
             command = getattr(getattr(fault, "ctx", None), "command_path", "partita")
-            _say(f"{str(usage()).rstrip('.')}; see {command} --help")
+            told = str(usage()).rstrip(".").replace("Value error, ", "")
+            told = re.sub(r"\S{61,}", lambda long: brief(long[0]), told)
+            _say(f"{told}; see {command} --help")
             return 2
         _say(
             f"unexpected fault ({type(fault).__name__}: {fault}); please report it, with the "
@@ -417,8 +444,9 @@ def run(arguments: Sequence[str]) -> int:
 
 
 def _interrupted(fault: BaseException) -> int:
-    _say("interrupted; nothing was written")
-    return _leave(fault, 130)
+    code, what = ending()
+    _say(f"{what}; no file is left half written")
+    return _leave(fault, code)
 
 
 def _leave(fault: BaseException, code: int) -> int:
@@ -429,24 +457,19 @@ def _leave(fault: BaseException, code: int) -> int:
     return code
 
 
-def _drop_stdout() -> None:
-    """Point standard output nowhere, so that the interpreter's last flush cannot fail again."""
-    with contextlib.suppress(OSError, ValueError):
-        os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
-
-
 def main() -> None:
     """Entry point of the command."""
     import warnings
 
+    open_streams()
+    catch_signals()
     if os.environ.get("PARTITA_DEBUG") != "1":
         warnings.simplefilter("ignore")
     try:
         code = run(sys.argv[1:])
-    except Interrupted as fault:
+    except (Interrupted, KeyboardInterrupt) as fault:
         # A thread deep in compiled code cannot be stopped: leave without waiting for it.
         code = _interrupted(fault)
-        sys.stdout.flush()
         os._exit(code)
     sys.exit(code)
 
