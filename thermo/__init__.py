@@ -58,6 +58,9 @@ _HOMES = {
     "write": ("thermo.storage", "write_dataset"),
 }
 
+# Modules that answer as attributes too, for help(thermo.model.reading) and the like.
+_MODULES = ("ensemble", "model", "report", "spectrum", "storage", "units", "variables")
+
 
 class _FitPackage(ModuleType):
     """The subpackage ``thermo.fit``, which can be called like the function of that name."""
@@ -81,6 +84,8 @@ sys.modules[__name__].__class__ = _Package
 
 def __getattr__(name: str) -> Any:
     """Load a public name from its own module on first use (PEP 562)."""
+    if name in _MODULES:
+        return import_module(f"thermo.{name}")
     if name not in _HOMES:
         raise AttributeError(f"module 'thermo' has no attribute {name!r}")
     home, attribute = _HOMES[name]
@@ -93,4 +98,4 @@ def __getattr__(name: str) -> Any:
 
 
 def __dir__() -> list[str]:
-    return sorted({*__all__, "__version__"})
+    return sorted({*__all__, *_MODULES, "__version__"})
