@@ -432,3 +432,23 @@ def test_a_file_with_a_byte_order_mark_is_read(tmp_path):
     path = tmp_path / "model.toml"
     path.write_bytes(b"\xef\xbb\xbf" + NAMED.encode())
     assert read_model(path).digest == read_model_text(NAMED).digest
+
+
+def test_a_coupling_lost_in_rounding_is_told() -> None:
+    def notes(weak: float) -> tuple[str, ...]:
+        mapping = {
+            "format": 1,
+            "energy_unit": "1",
+            "bond_term": "+J S.S",
+            "couplings": {"strong": 1.0, "weak": weak},
+            "site": [{"spin": 0.5}] * 3,
+            "bond": [
+                {"sites": [0, 1], "coupling": "strong"},
+                {"sites": [1, 2], "coupling": "weak"},
+            ],
+        }
+        return read_model(mapping).notes
+
+    assert notes(1e-8) == notes(0.0) == ()
+    assert len(notes(1e-11)) == 1
+    assert "weak" in notes(1e-11)[0]

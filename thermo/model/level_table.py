@@ -60,7 +60,8 @@ RESOLVED = ("total_spin", "magnetic_number", "parity", "none")
 
 def energy_scale(model: SpinModel) -> float:
     """The largest coupling times tensor element, in the energy unit; 0 without any term."""
-    terms = [(t.coupling, t.matrix) for t in (*model.bonds, *model.ions)]
+    terms = [(bond.coupling, bond.matrix) for bond in model.bonds]
+    terms += [(ion.coupling, ion.matrix) for ion in model.ions]
     return max((abs(model.couplings[c]) * float(np.abs(a).max()) for c, a in terms), default=0.0)
 
 
@@ -176,7 +177,8 @@ def read_checked(path: str | os.PathLike[str], kind: str | None = None) -> xr.Da
             ("energy_unit", model.energy_unit),
             ("ions_per_formula", model.ions_per_formula),
         ):
-            if not np.array_equal(dataset.attrs.get(name), value):
+            stored = dataset.attrs.get(name, "")
+            if np.shape(stored) != () or stored != value:
                 raise FileFormatError(
                     f"attribute {name} disagrees with the model kept in the file; solve the model "
                     "again"

@@ -232,6 +232,12 @@ def build(data: dict[str, Any], text: str, source: str) -> SpinModel:
         for name in couplings
         if name not in used
     ]
+    largest = max((abs(couplings[name]) for name in used), default=0.0)
+    notes += [
+        f"couplings.{name}: below 10⁻¹⁰ of the largest, too weak to be told from rounding for sure."
+        for name in couplings
+        if name in used and 0 < abs(couplings[name]) < 1e-10 * largest
+    ]
     return SpinModel(
         title=title,
         energy_unit=unit,
