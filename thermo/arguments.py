@@ -16,7 +16,7 @@ if TYPE_CHECKING:
 
 PICTURES = (".png", ".svg", ".pdf")
 LARGEST_GRID = 1_000_000
-_ARRAYS = 10  # of one number a point, that curves hold at their peak
+_ARRAYS = 16  # of one number a point: what curves hold at their peak, measured
 
 
 def brief(text: str, longest: int = 60) -> str:
