@@ -396,3 +396,63 @@ def test_the_fraction_replaces_spins_rather_than_adding_them(tmp_path) -> None:
     np.testing.assert_allclose(
         result.predict("specific_heat", T), dimer_heat(T, TRUE["J"], 0.021), rtol=1e-6
     )
+
+
+# ---------------------------------------------------------------- runaways
+
+
+def triangle(folder, **starts) -> dict:
+    """Three spins ½, J = −60 on two bonds and J2 = 35 on the third, g = 2.2; χ without noise."""
+    model = {
+        "format": 1, "energy_unit": "K", "bond_term": "+J S.S",
+        "couplings": {"J": -60.0, "J2": 35.0},
+        "site": [{"name": name, "spin": 0.5, "g": 2.2} for name in "abc"],
+        "bond": [{"sites": list(pair), "coupling": c}
+                 for pair, c in (("ab", "J"), ("bc", "J"), ("ac", "J2"))],
+    }  # fmt: skip
+    hot = np.linspace(2.0, 300.0, 40)
+    spins = thermo.read_model(model)
+    chi = thermo.curves(thermo.solve(spins), hot)["susceptibility"].values[:, 0]
+    write_csv(folder / "chi.csv", "T,value", hot, chi)
+    data = {"name": "chi", "file": str(folder / "chi.csv"), "quantity": "susceptibility",
+            "units": "m3/mol", "relative_uncertainty": 1e-3,
+            "columns": {"temperature": "T", "value": "value"}}  # fmt: skip
+    parameters = {name: {"start": start} for name, start in starts.items()} | {"g": {}}
+    return {"format": 1, "model": spins, "data": [data], "parameters": parameters}
+
+
+def test_a_fit_that_ran_away_says_so_and_is_led_back_by_other_starts(tmp_path) -> None:
+    study = triangle(tmp_path, J=-70.0, J2=20.0)
+    lost = fit(study, starts=0)
+    assert abs(lost["J"].value) > 1000
+    assert not lost.identifiable
+    assert not lost.trustworthy
+    assert math.isnan(lost["J"].standard_error)
+    assert "do not fix J" in lost["J"].reason
+    assert any("J ran away to where the data do not depend on it" in c for c in lost.cautions)
+    assert np.isnan(lost.covariance).all()
+    lost.to_dataset()
+    found = fit(study)
+    assert found.trustworthy
+    assert found["J"].value == pytest.approx(-60, rel=1e-6)
+    assert found["J2"].value == pytest.approx(35, rel=1e-6)
+
+
+def test_a_small_value_known_to_be_small_is_no_runaway(tmp_path) -> None:
+    """An error larger than the value and its start is a result where it is below the others."""
+    model = chain(J3=0.0)
+    study = study_of(tmp_path, {"J1": {"start": 50.0}, "J3": {"start": 0.01}, "chi0": {}}, model)
+    result = fit(study)
+    assert abs(result["J3"].value) < result["J3"].standard_error
+    assert result.trustworthy
+    assert abs(result["chi0"].value) < result["chi0"].standard_error
+
+
+def test_a_long_chain_of_ties_and_a_long_circle() -> None:
+    known = {f"x{k}": 0 for k in range(1501)}
+    ties = {f"x{k}": parse_tie(f"x{k}", f"x{k + 1}", known) for k in range(1500)}
+    assert [tie.parameter for tie in order_ties(ties)] == [f"x{k}" for k in range(1499, -1, -1)]
+    ties["x1500"] = parse_tie("x1500", "x0", known)
+    with pytest.raises(StudyError, match="circle, x0 -> x1") as caught:
+        order_ties(ties)
+    assert len(str(caught.value)) < 250

@@ -47,7 +47,14 @@ def find_cautions(
                 f"{e.name} sits at its {side} bound {bound:g}: it has no standard error, and "
                 "those of the others hold only with it fixed there"
             )
-    if not minimum.identifiable:
+    idle = [e for e in estimates if e.name in minimum.idle]
+    for e in idle:
+        unit = "" if e.unit == "1" else f" {e.unit}"
+        found.append(
+            f"{e.name} ran away to where the data do not depend on it, {plain(e.value, 3)}{unit}: "
+            "no standard errors; start it elsewhere, give it bounds, or fix it"
+        )
+    if not minimum.identifiable and not idle:
         found.append(
             f"the data do not fix {minimum.weak} separately: no standard errors; fix one of them"
         )

@@ -172,11 +172,12 @@ class Forward:
             if np.any(tangents):
                 by_scale[rows] = _five_point(shifted, 1.0, 0.0)
             for name, slope in (
-                (CHI0, self._chi0_part(points)),
+                (CHI0, self.chi0_part(points)),
                 (FRACTION, free - spins),
             ):
                 rest[rows] += np.outer(slope, values.slope[name])
-            if np.any(values.slope[G]):
+            # At g = 0 every quantity is at its least and the slope vanishes.
+            if np.any(values.slope[G]) and g != 0:
                 by_g = (
                     _five_point(shifted, 0.0, 1.0)
                     if np.any(points.field > 0)
@@ -235,9 +236,9 @@ class Forward:
     def _mix(
         self, points: Points, spins: Vector, free: Vector, chi0: float, fraction: float
     ) -> Vector:
-        return (1 - fraction) * spins + fraction * free + chi0 * self._chi0_part(points)
+        return (1 - fraction) * spins + fraction * free + chi0 * self.chi0_part(points)
 
-    def _chi0_part(self, points: Points) -> Vector:
+    def chi0_part(self, points: Points) -> Vector:
         """The quantity that chi0 = 1, in the unit of the parameter, makes."""
         per = self._per(points) * self.chi0_to_si
         if points.quantity == "susceptibility":
@@ -377,7 +378,8 @@ def _free_moments(
     x = zeeman / temperature
     for spin, share in shares:
         m = np.arange(round(2 * spin) + 1) - spin
-        boltzmann = np.exp((m - spin)[:, None] * x)
+        exponent = m[:, None] * x
+        boltzmann = np.exp(exponent - exponent.max(axis=0))  # of either sign of g
         p = boltzmann / boltzmann.sum(axis=0)
         mean = m @ p
         # About the mean, so that nothing cancels where the ion is saturated.

@@ -10,9 +10,10 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy.optimize import least_squares
 
-from thermo.errors import StudyError
+from thermo.errors import DataError, StudyError
 from thermo.fit.forward import Forward, Points
-from thermo.fit.parameters import Parameters
+from thermo.fit.measured import MAGNETIC
+from thermo.fit.parameters import CHI0, Parameters
 from thermo.fit.starts import FOLLOWED, further_starts, suspicious
 from thermo.fit.study import Study
 
@@ -33,6 +34,12 @@ LOWER = 1e-3
 NEAR_BOUND = 1e-2
 # A relative change of the data below this is the differences' own error, or unmeasurable.
 IDLE = 1e-5
+# Squares of residuals and slopes up to here are finite.
+FINITE = 1e140
+# A standard error this many times what the parameter could be at all: the data do not fix it.
+NOT_FIXED = 10.0
+# A coupling this many times all starts and temperatures has probably run away.
+FAR = 30.0
 # Below this, the smallest singular value of the column-normalised Jacobian is only error.
 SINGULAR = 1e-6
 
@@ -60,7 +67,14 @@ class Problem:
 
     def residuals(self, theta: Vector) -> Vector:
         """(observed − predicted)/σ, shape (N,)."""
-        found = (self.observed - self.predict(theta)) / self.sigma
+        if not np.all(np.isfinite(theta)) or np.abs(theta).max(initial=0.0) > FINITE:
+            raise self.ran_away(theta)
+        try:
+            found = (self.observed - self.predict(theta)) / self.sigma
+        except OverflowError:
+            raise self.ran_away(theta) from None
+        if not (np.abs(found) < FINITE).all():
+            raise self.ran_away(theta)
         if self.progress is not None:
             # The number of steps is not known beforehand; this creeps towards the end.
             done = 1 - 1 / (1 + self.n_evaluations / 10)
@@ -73,12 +87,61 @@ class Problem:
         """Derivatives of the residuals by the free parameters, (N, n_free)."""
         values = self.parameters.values(theta)
         step = STEP_AT_THE_END if final else STEP_ON_THE_WAY
-        jacobian = -self.forward.jacobian(self.sets, values, step, central=final)
+        try:
+            jacobian = -self.forward.jacobian(self.sets, values, step, central=final)
+        except OverflowError:
+            raise self.ran_away(theta) from None
         jacobian /= self.sigma[:, None]
+        if not (np.abs(jacobian) < FINITE).all():
+            raise self.ran_away(theta)
         if self._first:
             self._first = False
             self._refuse_idle(theta, jacobian)
         return jacobian
+
+    def ran_away(self, theta: Vector) -> StudyError:
+        """The error where the model's points, or their slopes, are no longer usable numbers."""
+        free, start = self.parameters.free, self.parameters.start
+        if np.array_equal(theta, start):
+            shown = ", ".join(f"{p.name} = {x:g}" for p, x in zip(free, start, strict=True))
+            return StudyError(
+                f"at the start, {shown}, the model and the data over their uncertainties are too "
+                "far apart to compute with; check the starts, the units and the uncertainties"
+            )
+        far = np.abs(theta) / np.maximum(np.abs(start), 1e-3 * np.abs(start).max(initial=1.0))
+        k = int(np.argmax(np.where(np.isfinite(far), far, np.inf)))
+        return StudyError(
+            f"parameters.{free[k].name} ran away from its start {start[k]:g} to {theta[k]:g}, "
+            "where the model gives no usable numbers; give it bounds, another start or a fixed "
+            "value"
+        )
+
+    def reach(self, theta: Vector) -> Vector:
+        """By how much each free parameter could at all differ, (n_free,); NaN where any size may.
+
+        A coupling by itself, its start, the largest coupling or the highest temperature; an
+        auxiliary parameter by what changes a coupling so; χ0 and ρ, which the data depend on
+        linearly, cannot run away.
+        """
+        p = self.parameters
+        now, then = p.values(theta), p.values(p.start)
+        scale = max(float(np.abs(self.forward.couplings(v)).max(initial=0.0)) for v in (now, then))
+        scale = max(scale, self.hottest)
+        found = np.maximum(np.abs(theta), np.abs(p.start))
+        names = list(self.forward.model.couplings)
+        for k, parameter in enumerate(p.free):
+            if parameter.role in ("chi0", "paramagnetic_fraction"):
+                found[k] = math.nan
+            elif parameter.role != "g":
+                steep = max((abs(float(now.slope[name][k])) for name in names), default=0.0)
+                found[k] = max(found[k], scale / steep if steep > 0 else 0.0)
+        return found
+
+    @property
+    def hottest(self) -> float:
+        """The highest temperature of the points, in the model's energy unit."""
+        highest = max(float(points.temperature.max()) for points in self.sets)
+        return highest / self.forward.kelvin
 
     def _refuse_idle(self, theta: Vector, jacobian: Vector) -> None:
         values = self.parameters.values(theta)
@@ -100,7 +163,8 @@ class Minimum:
     """Where the minimiser ended. Arrays run over the free parameters.
 
     ``bound`` is −1, 0 or 1 (at lower, none, at upper). ``covariance`` is NaN in the rows and
-    columns of parameters at a bound, and everywhere if the data do not fix the parameters.
+    columns of parameters at a bound, and everywhere if the data do not fix the parameters: those
+    named in ``weak`` then, of which the data do not depend at all on those in ``idle`` here.
     """
 
     theta: Vector
@@ -111,6 +175,7 @@ class Minimum:
     converged: bool
     identifiable: bool
     weak: str
+    idle: tuple[str, ...]
     message: str
     n_starts: int
 
@@ -141,6 +206,7 @@ def make_problem(
         for data in study.sets
     ]
     sets = tuple(Points(d.quantity, d.temperature, d.field, d.per) for d in study.sets)
+    _refuse_negative(study, forward, sets)
     observed = np.concatenate([data.value for data in study.sets])
     return Problem(
         study.parameters,
@@ -153,9 +219,32 @@ def make_problem(
     )
 
 
+def _refuse_negative(study: Study, forward: Forward, sets: tuple[Points, ...]) -> None:
+    """Spins have no negative χ, C or M: data below zero throughout need a free χ0."""
+    values = study.parameters.values(study.parameters.start)
+    if np.any(values.slope[CHI0]):
+        return
+    chi0 = values.value[CHI0]
+    for data, points in zip(study.sets, sets, strict=True):
+        spins = data.value - chi0 * forward.chi0_part(points)
+        error = 0.0 if data.uncertainty is None else 3 * data.uncertainty
+        if np.all(spins + error < 0):
+            less = ", less the fixed chi0," if chi0 and data.quantity in MAGNETIC else ""
+            hint = ", or leave chi0 free" if data.quantity in MAGNETIC else ""
+            raise DataError(
+                f"{data.file}: all values{less} are negative, which the {data.quantity} of spins "
+                f"alone cannot be; check the sign and the correction for the sample's holder{hint}"
+            )
+
+
 def minimise(problem: Problem, starts: int) -> Minimum:
     """Least squares from the study's start and, where that minimum is suspicious, from up to
     ``starts`` others; the lowest minimum found."""
+    with np.errstate(all="ignore"):  # each point and slope is checked to be finite
+        return _minimise(problem, starts)
+
+
+def _minimise(problem: Problem, starts: int) -> Minimum:
     end, n_starts, message = _lowest(problem, starts)
     theta, bound, residuals = end.theta, end.bound, end.residuals
     jacobian = problem.slopes(theta, final=True)
@@ -163,6 +252,9 @@ def minimise(problem: Problem, starts: int) -> Minimum:
     covariance = np.full((len(theta), len(theta)), np.nan)
     part, weak = _covariance(jacobian[:, inside])
     covariance[np.ix_(inside, inside)] = part
+    loose, idle = _not_fixed(problem, theta, residuals, jacobian, covariance, inside)
+    if loose:
+        covariance[:] = np.nan
     names = [problem.parameters.free[k].name for k in inside]
     return Minimum(
         theta=theta,
@@ -171,8 +263,13 @@ def minimise(problem: Problem, starts: int) -> Minimum:
         covariance=covariance,
         bound=bound,
         converged=end.converged,
-        identifiable=weak is None,
-        weak="" if weak is None else _combination(weak, names, theta[inside]),
+        identifiable=weak is None and not loose,
+        weak=(
+            " and ".join(loose)
+            if loose or weak is None
+            else _combination(weak, names, theta[inside])
+        ),
+        idle=idle,
         message=message,
         n_starts=n_starts,
     )
@@ -205,8 +302,14 @@ def _lowest(problem: Problem, starts: int) -> tuple[_End, int, str]:
 
 def _doubtful(problem: Problem, end: _End) -> bool:
     parameters, sets = problem.parameters, problem.sets
-    return not end.converged or suspicious(
-        parameters, end.bound, sets, end.residuals, problem.weighted
+    couplings = [
+        problem.forward.couplings(parameters.values(t)) for t in (parameters.start, end.theta)
+    ]
+    size, far = (float(np.abs(c).max(initial=0.0)) for c in couplings)
+    return (
+        not end.converged
+        or far > FAR * max(size, problem.hottest)
+        or suspicious(parameters, end.bound, sets, end.residuals, problem.weighted)
     )
 
 
@@ -222,14 +325,14 @@ def _height(problem: Problem, theta: Vector, k: int, count: int) -> float:
 
 
 def _follow(problem: Problem, start: Vector, to_beat: float) -> _End | None:
-    """Where a further start leads, or None: not lower, or to where a tie has no value."""
+    """Where a further start leads, or None: not lower, or to where the model has no value."""
     try:
         theta, _, _ = _descend(problem, start, (), TOLERANCE_FOLLOWING, EVALUATIONS_FOLLOWING)
         rough = problem.residuals(theta)
         if not rough @ rough < (1 - LOWER) * to_beat:
             return None
         return _settle(problem, theta)
-    except (StudyError, ValueError):  # SciPy's word for residuals that are not finite
+    except StudyError:
         return None
 
 
@@ -270,18 +373,28 @@ def _descend(
         theta[moving] = x
         return theta
 
-    found = least_squares(
-        lambda x: problem.residuals(full(x)),
-        start[moving],
-        jac=lambda x: problem.slopes(full(x))[:, moving],
-        bounds=(lower[moving], upper[moving]),
-        method="trf",
-        x_scale="jac",
-        ftol=tolerance,
-        xtol=tolerance,
-        gtol=tolerance,
-        max_nfev=evaluations,
-    )
+    last = start
+
+    def residuals(x: Vector) -> Vector:
+        nonlocal last
+        last = full(x)
+        return problem.residuals(last)
+
+    try:
+        found = least_squares(
+            residuals,
+            start[moving],
+            jac=lambda x: problem.slopes(full(x))[:, moving],
+            bounds=(lower[moving], upper[moving]),
+            method="trf",
+            x_scale="jac",
+            ftol=tolerance,
+            xtol=tolerance,
+            gtol=tolerance,
+            max_nfev=evaluations,
+        )
+    except (ArithmeticError, ValueError):  # SciPy's words for numbers that are not finite
+        raise problem.ran_away(last) from None
     how = {
         0: f"stopped after {evaluations} evaluations without settling",
         1: "the gradient vanished",
@@ -328,6 +441,35 @@ def _covariance(jacobian: Vector) -> tuple[Vector, Vector | None]:
         return np.full((n, n), np.nan), rotation[-1] / length
     half = rotation.T / singular / length[:, None]
     return half @ half.T, None
+
+
+def _not_fixed(
+    problem: Problem,
+    theta: Vector,
+    residuals: Vector,
+    jacobian: Vector,
+    covariance: Vector,
+    inside: NDArray[np.int64],
+) -> tuple[list[str], tuple[str, ...]]:
+    """Parameters whose errors exceed all they could be, and those of them that change nothing.
+
+    The singular values cannot tell: each column is divided by its own length there, however
+    small. A single column counts as nothing where the parameter's whole reach moves χ² by ≪ 1.
+    """
+    reach = problem.reach(theta)
+    scale = 1.0
+    if not problem.weighted:
+        scale = math.sqrt(float(residuals @ residuals) / max(len(residuals) - len(theta), 1))
+    length = np.linalg.norm(jacobian, axis=0)
+    loose, idle = [], []
+    for k in inside:
+        name = problem.parameters.free[k].name
+        if length[k] * reach[k] * NOT_FIXED < scale:
+            idle.append(name)
+            loose.append(name)
+        elif scale * math.sqrt(covariance[k, k]) > NOT_FIXED * reach[k]:
+            loose.append(name)
+    return loose, tuple(idle)
 
 
 def _combination(direction: Vector, names: list[str], theta: Vector) -> str:

@@ -21,6 +21,8 @@ from thermo.errors import StudyError
 
 Gradient = NDArray[np.float64]
 MAX_LENGTH = 500
+# A longer circle of ties is shown by its ends.
+CIRCLE_SHOWN = 10
 
 _ALLOWED = "use numbers, parameter names, + - * / and parentheses only"
 
@@ -45,7 +47,8 @@ class Tie:
     def evaluate(self, values: Mapping[str, Dual]) -> Dual:
         """The tie's value and gradient; division by zero and overflow are a StudyError."""
         try:
-            result = _evaluate(self.tree, values)
+            with np.errstate(all="ignore"):  # what is not finite is told below
+                result = _evaluate(self.tree, values)
         except ZeroDivisionError:
             raise StudyError(
                 f"parameters.{self.parameter}.tied = {self.expression!r} divides by zero at "
@@ -82,23 +85,29 @@ def order_ties(ties: Mapping[str, Tie]) -> tuple[Tie, ...]:
     """The ties in an order in which each only needs earlier ones; a circle is a StudyError."""
     ordered: list[Tie] = []
     done: set[str] = set()
-
-    def visit(name: str, trail: tuple[str, ...]) -> None:
-        if name in trail:
-            circle = " -> ".join((*trail[trail.index(name) :], name))
-            raise StudyError(
-                f"the ties go in a circle, {circle}, so none of these has a value; "
-                "make one of them free or fixed"
-            )
-        if name in done or name not in ties:
-            return
-        for needed in ties[name].names:
-            visit(needed, (*trail, name))
-        done.add(name)
-        ordered.append(ties[name])
-
-    for name in ties:
-        visit(name, ())
+    for first in ties:
+        if first in done:
+            continue
+        # Depth first with a list of its own: a long chain of ties would exhaust Python's stack.
+        trail = {first: iter(ties[first].names)}
+        while trail:
+            name = next(reversed(trail))
+            needed = next(trail[name], None)
+            if needed is None:
+                del trail[name]
+                done.add(name)
+                ordered.append(ties[name])
+            elif needed in trail:
+                names = list(trail)
+                circle = [*names[names.index(needed) :], needed]
+                if len(circle) > CIRCLE_SHOWN:
+                    circle[CIRCLE_SHOWN // 2 : -(CIRCLE_SHOWN // 2)] = ["..."]
+                raise StudyError(
+                    f"the ties go in a circle, {' -> '.join(circle)}, so none of these has a "
+                    "value; make one of them free or fixed"
+                )
+            elif needed in ties and needed not in done:
+                trail[needed] = iter(ties[needed].names)
     return tuple(ordered)
 
 
