@@ -235,7 +235,7 @@ BAD_TABLES = {
     "tabs": (ROWS.replace(",", "\t"), ["holds tabs", 'set delimiter = "tab"']),
     "spaces": (ROWS.replace(",", "  "), ["single column", 'delimiter = "space"']),
     "a header that is a comment": (
-        ROWS.replace("T (K)", "# T (K)"), ["holds numbers", "header = false", "comment"]
+        ROWS.replace("T (K)", "# T (K)"), ["looks like data", "header = false", "comment"]
     ),
     "no rows": (ROWS[: ROWS.index("\n4")], ["no rows"]),
     "nothing": ("", ["no rows"]),
@@ -393,3 +393,84 @@ def test_what_the_study_leaves_out_stays_at_the_models_values(tmp_path) -> None:
     assert study.parameters.by_name["g"].start == 2.0
     assert study.title == "invented points of a dimer"
     assert study.text.startswith("\nformat = 1")
+
+
+def test_a_first_row_of_numbers_is_not_lost_as_a_header(tmp_path) -> None:
+    path = write_dimer(tmp_path)
+    path.write_text(STUDY.replace("header = false\n", ""))
+    with pytest.raises(DataError, match=r"heat\.csv, line 2, looks like data; set header = false"):
+        read_study(path)
+    # A study that says so itself has numbers for the names of its columns.
+    path.write_text(STUDY.replace("header = false\n", "header = true\n"))
+    assert read_study(path).sets[1].n_points == 59
+
+
+OPEN = STUDY.replace(", lower = 1.0, upper = 200.0", "").replace(", lower = 1.5, upper = 3.0", "")
+SIZES = {
+    "values near zero": (OPEN, 1e-300, 1.0, DataError, ["line 3", "susceptibility is", "unit"]),
+    "enormous values": (OPEN, 1e150, 1.0, DataError, ["line 3", "susceptibility is"]),
+    "tiny uncertainties": (OPEN, 1.0, 1e-200, DataError, ["line 3", "the uncertainty is"]),
+    "enormous uncertainties": (OPEN, 1.0, 1e150, DataError, ["line 3", "the uncertainty is"]),
+    "uncertainties without digits": (OPEN, 1.0, 1e-315, DataError, ["line 3", "uncertainty"]),
+    "uncertainties that hide all": (OPEN, 1.0, 1e90, StudyError, ["do not change with"]),
+    "chi0 start": (
+        OPEN.replace("chi0 = { start = 0.0", "chi0 = { start = 1e300"), 1.0, 1.0, StudyError,
+        ["parameters.chi0.start = 1e+300"],
+    ),
+    "g start": (
+        OPEN.replace("g = { start = 2.0", "g = { start = 1e200"), 1.0, 1.0, StudyError,
+        ["parameters.g.start = 1e+200"],
+    ),
+    "a bound": (
+        OPEN.replace("J = { start = 30.0", "J = { start = 30.0, upper = 1e300"), 1.0, 1.0,
+        StudyError, ["parameters.J.upper = 1e+300"],
+    ),
+    "a g far off": (
+        OPEN.replace("g = { start = 2.0", "g = { start = 1e90"), 1.0, 1.0, StudyError,
+        ["at the start", "g = 1e+90", "too far apart"],
+    ),
+    "negative throughout": (
+        OPEN.replace("chi0 = { start = 0.0 }\n", ""), -1.0, 1.0, DataError,
+        ["chi.csv: all values are negative", "susceptibility of spins alone", "chi0 free"],
+    ),
+    "negative less chi0": (
+        OPEN.replace("chi0 = { start = 0.0 }", "chi0 = { fixed = 1.0 }"), 1.0, 1e-3, DataError,
+        ["all values, less the fixed chi0, are negative"],
+    ),
+}  # fmt: skip
+
+
+def scaled(folder, study: str, values: float, errors: float):
+    path = write_dimer(folder, study=study)
+    T, chi, error = np.loadtxt(folder / "chi.csv", delimiter=",", skiprows=2).T
+    write_csv(folder / "chi.csv", "T (K),chi,error", T, values * chi, errors * error)
+    return path
+
+
+@pytest.mark.parametrize("starts", [0, 6])
+@pytest.mark.parametrize("case", SIZES)
+def test_numbers_of_no_usable_size(tmp_path, case: str, starts: int) -> None:
+    text, values, errors, fault, words = SIZES[case]
+    with pytest.raises(fault) as caught:
+        fit(scaled(tmp_path, text, values, errors), starts=starts)
+    for word in words:
+        assert word in told(caught.value)
+
+
+@pytest.mark.parametrize("starts", [0, 6])
+def test_far_off_starts_and_data_end_in_a_result_or_a_sentence(tmp_path, starts: int) -> None:
+    """Whatever comes out is neither a traceback nor a warning, and says that the fit is bad."""
+    for text, values, errors in (
+        (OPEN, -1.0, 1.0),
+        (OPEN, 1.0, 1e-90),
+        (OPEN, 1e-90, 1e-90),
+        (OPEN.replace("start = 0.0", "start = 1e90"), 1.0, 1.0),
+        (OPEN.replace("J = { start = 30.0", "J = { start = -1e5"), 1.0, 1.0),
+        (OPEN.replace("chi0 = { start = 0.0 }\n", ""), -1.0, 1e7),
+    ):
+        try:
+            result = fit(scaled(tmp_path, text, values, errors), starts=starts)
+        except (StudyError, DataError) as error:
+            told(error)
+        else:
+            assert result.cautions

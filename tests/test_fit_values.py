@@ -294,3 +294,46 @@ def test_the_constants_here_agree_with_the_packages():
 
     assert pytest.approx(CURIE, rel=1e-9) == units.CURIE_EMU
     assert pytest.approx(fitting.MOMENT, rel=1e-8) == units.MOLAR_BOHR_MAGNETON_EMU
+
+
+@pytest.mark.parametrize("shares", [((0.5, 1.0),), ((0.5, 0.25), (2.0, 0.75))])
+def test_free_ions_of_negative_g_in_any_field(shares):
+    """The moment is odd in g, and neither sign overflows, however cold it is."""
+    T, field = np.array([1e-3, 2.0]), np.array([3000.0, 3.0])
+    up, down = _free_moments(shares, T, field), _free_moments(shares, T, -field)
+    for one, other, sign in zip(up, down, (1, -1, 1), strict=True):
+        np.testing.assert_allclose(other, sign * one, rtol=1e-12)
+
+
+def test_a_model_of_negative_g_at_field_is_fitted_like_one_of_positive(tmp_path):
+    B = np.linspace(0.5, 30, 30)
+    moment, _ = fitting.dimer_moments(1.5 + 0 * B, B, 20.0, 2.2)
+    moment = 0.97 * moment / 2 + 0.03 * np.tanh(2.2 * MU_B * B / 3) / 2
+    write_csv(tmp_path / "m.csv", "B,M", B, 2.2 * moment)
+    data = {"name": "M", "file": str(tmp_path / "m.csv"), "quantity": "magnetization",
+            "units": "muB", "temperature": 1.5, "absolute_uncertainty": 1e-4,
+            "columns": {"field": "B", "value": "M"}}  # fmt: skip
+    for g in ("2.2", "-2.2"):
+        path = tmp_path / "model.toml"
+        path.write_text(MODEL.replace("spin = 0.5", f"spin = 0.5\ng = {g}"))
+        parameters = {"J": {"start": 24.0}, "paramagnetic_fraction": {"start": 0.01}}
+        study = {"format": 1, "model": str(path), "data": [data], "parameters": parameters}
+        result = fit(study)
+        assert result["J"].value == pytest.approx(20.0, rel=1e-6)
+        assert result["paramagnetic_fraction"].value == pytest.approx(0.03, rel=1e-6)
+
+
+def test_stated_units_apply_to_values_stated_for_all_rows(tmp_path):
+    study = _mapping(tmp_path, J={"start": 20.0})
+    _write_model(tmp_path)
+    (data,) = study["data"]
+    data |= {"field": 15, "field_unit": "kOe"}
+    (found,) = read_study(study).sets
+    np.testing.assert_allclose(found.field, 1.5, rtol=1e-12)
+    write_csv(tmp_path / "one.csv", "B,M", [1.0, 2.0, 3.0], [0.1, 0.2, 0.3])
+    del data["field"]
+    data |= {"quantity": "magnetization", "temperature": 1800, "temperature_unit": "mK",
+             "columns": {"field": "B", "value": "M"}, "range": [1, 2]}  # fmt: skip
+    (found,) = read_study(study).sets
+    np.testing.assert_allclose(found.temperature, 1.8, rtol=1e-12)
+    np.testing.assert_allclose(found.field, [0.1, 0.2, 0.3], rtol=1e-12)

@@ -24,6 +24,8 @@ QUANTITIES = ("susceptibility", "chi_T", "specific_heat", "specific_heat_over_T"
 MAGNETIC = ("susceptibility", "chi_T", "magnetization")
 DELIMITERS: Mapping[str, str] = {",": ",", ";": ";", "tab": "\t", "space": " "}
 COMMENT = "#"
+#: Sizes of numbers that can be used: squares and quotients of them are finite.
+SMALLEST, LARGEST = 1e-100, 1e100
 
 
 @dataclass(frozen=True, eq=False)
@@ -86,6 +88,7 @@ def read_measured(section: Section, folder: Path, reduced: bool) -> Measured:
     direction = section.word("direction", ("z",)) if section.has("direction") else ""
     delimiter = section.word("delimiter", tuple(DELIMITERS), ",")
     header = section.flag("header", True)
+    stated = section.has("header")
     temperature_unit = section.text("temperature_unit", "K or mK", "1" if reduced else "K")
     field_unit = section.text("field_unit", "T, mT, Oe or kOe", "1" if reduced else "T")
     to_si = _factor(section, "units", quantity, units, reduced)
@@ -100,18 +103,20 @@ def read_measured(section: Section, folder: Path, reduced: bool) -> Measured:
     for optional in ("uncertainty", "field"):
         if columns.has(optional):
             roles[optional] = f"the {optional}"
-    fixed_temperature = section.optional_number("temperature", "a temperature in K")
-    fixed_field = section.optional_number("field", "a field in T")
+    fixed_temperature = section.optional_number(
+        "temperature", f"a temperature in {temperature_unit}"
+    )
+    fixed_field = section.optional_number("field", f"a field in {field_unit}")
     if fixed_temperature is not None:
         del roles["temperature"]
         if columns.has("temperature"):
             raise section.fail("temperature", "is given besides a temperature column; keep one")
         if fixed_temperature <= 0:
-            raise section.fail("temperature", f"= {fixed_temperature:g} K must lie above zero")
+            raise section.fail("temperature", f"= {fixed_temperature:g} must lie above zero")
     if fixed_field is not None and "field" in roles:
         raise section.fail("field", "is given besides a field column; keep one of the two")
     if fixed_field is not None and fixed_field < 0:
-        raise section.fail("field", f"= {fixed_field:g} T is negative; give its magnitude")
+        raise section.fail("field", f"= {fixed_field:g} is negative; give its magnitude")
     if quantity == "magnetization" and fixed_field is None and "field" not in roles:
         raise section.fail("field", "is missing, and a magnetization needs one; give columns.field")
     wanted = {role: _column(columns, role, what, header) for role, what in roles.items()}
@@ -131,17 +136,19 @@ def read_measured(section: Section, folder: Path, reduced: bool) -> Measured:
     window = section.interval("range", "[lowest, highest] temperature in K")
     section.close()
 
-    rows = _read_rows(folder / file, DELIMITERS[delimiter], header)
+    rows = _read_rows(folder / file, DELIMITERS[delimiter], header, stated)
     numbers = {role: _numbers(rows, where, role) for role, where in wanted.items()}
     n = len(rows.lines)
     line = np.array(rows.lines, dtype=np.int64)
     value = numbers["value"]
-    temperature = (
-        np.full(n, fixed_temperature)
-        if fixed_temperature is not None
-        else numbers["temperature"] * to_kelvin
+    # The stated units are those of the columns and of the values that stand for them.
+    temperature = to_kelvin * (
+        np.full(n, fixed_temperature) if fixed_temperature is not None else numbers["temperature"]
     )
-    field = numbers["field"] * to_tesla if "field" in numbers else np.full(n, fixed_field or 0.0)
+    field = to_tesla * (numbers["field"] if "field" in numbers else np.full(n, fixed_field or 0.0))
+    for what, unit, size in (("temperature", "K", temperature), ("field", "T", field),
+                             (quantity, "SI units", value * to_si)):  # fmt: skip
+        _check_size(rows.path, line, size, what, unit)
     _check_points(rows.path, line, temperature, field, "temperature" in numbers, "field" in numbers)
     uncertainty: Vector | None = None
     if relative is not None:
@@ -162,6 +169,8 @@ def read_measured(section: Section, folder: Path, reduced: bool) -> Measured:
                 f"{rows.path}, line {line[bad[0]]}: the uncertainty {uncertainty[bad[0]]:g} is "
                 "not above zero; give a positive one or take the point out"
             )
+    if uncertainty is not None:
+        _check_size(rows.path, line, uncertainty * to_si, "uncertainty", "SI units", zero=False)
     keep = np.ones(n, dtype=bool)
     if window is not None:
         keep = (temperature >= window[0]) & (temperature <= window[1])
@@ -211,7 +220,8 @@ def _column(columns: Section, role: str, what: str, header: bool) -> str | int:
     return value.strip()
 
 
-def _read_rows(path: Path, delimiter: str, header: bool) -> _Rows:
+def _read_rows(path: Path, delimiter: str, header: bool, stated: bool) -> _Rows:
+    """The table's cells; ``stated`` says that the study itself asks for a header, or for none."""
     shown = os.fspath(path)
     try:
         text = path.read_text(encoding="utf-8-sig")
@@ -232,6 +242,13 @@ def _read_rows(path: Path, delimiter: str, header: bool) -> _Rows:
         row = _split(line, delimiter, shown, number)
         if header and names is None:
             names = row
+            # Taken for a header, a row of data would be lost without a word.
+            if not stated and any(row) and all(_is_float(cell) for cell in row if cell):
+                raise DataError(
+                    f"the first row of {shown}, line {number}, looks like data; "
+                    "set header = false and give columns by number (a line that begins with "
+                    f"{COMMENT!r} is a comment, not a header)"
+                )
             repeated = [name for name in names if name and names.count(name) > 1]
             if repeated:
                 raise DataError(
@@ -372,6 +389,19 @@ def _check_points(
         _check_ascending(path, line, field, "field", "T")
     elif len(line) > 1:
         raise DataError(f"{path}: all rows are at one temperature and field; name their column")
+
+
+def _check_size(
+    path: str, line: NDArray[np.int64], value: Vector, what: str, unit: str, zero: bool = True
+) -> None:
+    """Refuse what no measurement is and whose square is no finite number."""
+    size = np.abs(value)
+    bad = np.flatnonzero(~((size >= SMALLEST) & (size <= LARGEST)) & ~(zero & (size == 0)))
+    if bad.size:
+        raise DataError(
+            f"{path}, line {line[bad[0]]}: the {what} is {value[bad[0]]:g} in {unit}, and only "
+            f"sizes from {SMALLEST:g} to {LARGEST:g} can be used; check the numbers and their unit"
+        )
 
 
 def _check_ascending(

@@ -14,6 +14,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from thermo.errors import StudyError, UnitsError
+from thermo.fit.measured import LARGEST, SMALLEST
 from thermo.fit.strict import Section, did_you_mean
 from thermo.fit.ties import Dual, Tie, order_ties, parse_tie
 from thermo.model.spin_model import SpinModel
@@ -130,6 +131,7 @@ def read_parameters(section: Section, model: SpinModel, chi0_per: str = "ion") -
             found.append(_read_one(entry, name, model, chi0_per))
         else:
             found.append(_default(name, model, chi0_per))
+        _check_sizes(section, found[-1])
     return Parameters(found, section.source)
 
 
@@ -180,6 +182,19 @@ def _read_one(entry: Section, name: str, model: SpinModel, chi0_per: str) -> Par
         )
     _check_value(entry, "start", start, role)
     return Parameter(name, role, "free", unit, start, lower, upper, to_si=to_si)
+
+
+def _check_sizes(section: Section, p: Parameter) -> None:
+    """Refuse numbers whose squares are not finite; 0, NaN (tied) and no bound are welcome."""
+    value = "fixed" if p.status == "fixed" else "start"
+    for key, number in ((value, p.start), ("lower", p.lower), ("upper", p.upper)):
+        bare = number == 0 or math.isnan(number) or (math.isinf(number) and key != value)
+        if not bare and not SMALLEST <= abs(number) <= LARGEST:
+            raise section.fail(
+                f"{p.name}.{key}",
+                f"= {number:g} is of no size that can be used, {SMALLEST:g} to {LARGEST:g}; "
+                "write another, or 0",
+            )
 
 
 def _check_value(entry: Section, key: str, value: float, role: str) -> None:

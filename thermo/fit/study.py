@@ -18,14 +18,16 @@ Every key of a study file (positions in lists count from 0; paths are relative t
                  header           true (default): the first row names the columns; or false
                  columns          required: temperature, value, uncertainty, field, each the
                                   header of a column or its number from 1; value is required
-                 temperature      of all rows, in K, instead of its column
-                 field            of all rows, in T, instead of its column; default 0, and
+                 temperature      of all rows, instead of its column
+                 field            of all rows, instead of its column; default 0, and
                                   required for a magnetization. Above 0 a susceptibility means
                                   M/B, at 0 the zero-field limit
-                 temperature_unit, field_unit    of the columns; default "K" and "T"
+                 temperature_unit, field_unit    of the columns, or of temperature and field
+                                  stated for all rows; default "K" and "T"
                  direction        of the field: "z", for a crystal measured along the model's z.
                                   Left out, a fit of an anisotropic model says what it assumed
-                 range            [lowest, highest] temperature to use, in K
+                 range            [lowest, highest] temperature to use, in K whatever
+                                  the temperature_unit
                  relative_uncertainty, absolute_uncertainty
                                   of all rows (a fraction; or in units) instead of a column;
                                   every set states its uncertainties, or none does
