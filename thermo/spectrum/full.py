@@ -2,12 +2,9 @@
 
 from __future__ import annotations
 
-import contextlib
 import functools
 import json
-import os
 import platform
-import threading
 from collections.abc import Callable, Iterator, Mapping
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
@@ -24,6 +21,7 @@ from thermo.model.traces import total_matrices
 from thermo.spectrum import lapack, planning
 from thermo.spectrum.memory import memory_limit
 from thermo.spectrum.tasks import run_tasks
+from thermo.spectrum.threads import blas_threads, thread_count
 from thermo.symmetry.sectors import MagneticSector, Sector, plan_symmetry
 
 if TYPE_CHECKING:
@@ -166,7 +164,8 @@ class FullSolver:
             if not group:
                 continue
             tasks = [
-                functools.partial(self._solve_block, s, magnetic, structure, tables) for s in group
+                functools.partial(self._solve_block, s, magnetic, structure, tables, blas)
+                for s in group
             ]
             with blas_threads(blas):
                 for index, energies in run_tasks(tasks, workers):
@@ -193,6 +192,7 @@ class FullSolver:
         magnetic: MagneticSector,
         structure: _Structure,
         tables: tuple[NDArray[np.complex128], NDArray[np.float64]],
+        threads: int,
     ) -> NDArray[np.float64]:
         n = sector.dimension
         block: NDArray[Any] = np.empty((n, n), np.float64 if sector.real else complex, order="F")
@@ -202,7 +202,7 @@ class FullSolver:
             self._encoding, structure.orbits, structure.links, self._moves, *tables,
             sector.phases, magnetic.elements.modulus, images, sector.real, block,
         )  # fmt: skip
-        return lapack.eigenvalues(block)
+        return lapack.eigenvalues(block, threads=threads)
 
     def _collect(
         self, found: dict[int, NDArray[np.float64]], shift: float, low: float, high: float
@@ -287,52 +287,6 @@ def energy_bounds(model: SpinModel) -> tuple[float, float]:
         ends = np.linalg.eigvalsh(np.einsum("xy,xab,ybc->ac", d, s, s))
         low, high = low + float(ends[0]), high + float(ends[-1])
     return low, high
-
-
-def thread_count() -> int:
-    """Threads to use: PARTITA_THREADS, else the cores this process may run on."""
-    text = os.environ.get("PARTITA_THREADS", "")
-    if text:
-        if not (text.isascii() and text.isdecimal() and len(text) <= 4 and int(text) > 0):
-            raise RangeError(
-                f"PARTITA_THREADS is {text[:40]!r}, not a number of threads; set a whole number "
-                "from 1 to 9999"
-            )
-        return int(text)
-    if hasattr(os, "sched_getaffinity"):
-        return len(os.sched_getaffinity(0))
-    return os.cpu_count() or 1
-
-
-@functools.cache
-def _thread_pools() -> Any:
-    import scipy.linalg  # noqa: F401  both OpenBLAS copies must be loaded to be found
-    import threadpoolctl
-
-    return threadpoolctl.ThreadpoolController()
-
-
-_blas_lock = threading.Lock()
-_blas_users: list[Any] = []
-
-
-@contextlib.contextmanager
-def blas_threads(count: int) -> Iterator[None]:
-    """Limit every BLAS of this process to ``count`` threads for a while.
-
-    The limit is the process's, so of concurrent users the last to come sets it and the last to
-    leave puts back what the first found.
-    """
-    with _blas_lock:
-        limiter = _thread_pools().limit(limits=count, user_api="blas")
-        _blas_users.append(_blas_users[0] if _blas_users else limiter)
-    try:
-        yield
-    finally:
-        with _blas_lock:
-            first = _blas_users.pop()
-            if not _blas_users:
-                first.restore_original_limits()
 
 
 def solve_full(

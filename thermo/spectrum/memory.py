@@ -30,7 +30,8 @@ def memory_limit(memory: int | float | str | None) -> int:
         unit = match.group(2).upper() if match else "?"
         if match is None or unit not in _UNITS:
             raise RangeError(
-                f"memory limit {memory[:40]!r} is not a size; write a number with a unit, e.g. '4 GiB'"
+                f"memory limit {memory[:40]!r} is not a size; write a number with a unit, "
+                "e.g. '4 GiB'"
             )
         memory = float(match.group(1)) * _UNITS[unit]
     if not 0 < memory < float("inf"):

@@ -12,11 +12,12 @@ import numpy as np
 from thermo.errors import MemoryLimitError, ModelError
 from thermo.model.spin_model import SpinModel
 from thermo.spectrum.memory import memory_limit, size_text
+from thermo.spectrum.threads import thread_count
 from thermo.symmetry.sectors import MagneticSector, SymmetryPlan, plan_symmetry
 
 # Seconds of one eigenvalue call as a n² + b n³ on the machine these were measured on (two
 # cores, tests/bench/test_lapack.py); survey rescales them by a short probe.
-_QUADRATIC, _CUBIC, _COMPLEX_FACTOR = 2.5e-8, 3.8e-11, 3.5
+_QUADRATIC, _CUBIC, _COMPLEX_FACTOR = 2.5e-8, 2.7e-11, 3.5
 _PROBE_SIZE, _PROBE_SECONDS = 500, 0.0085
 _LINK_SECONDS = 3e-9
 _START_SECONDS = 0.15
@@ -99,18 +100,18 @@ def block_bytes(dimension: int, real: bool) -> int:
     return item * dimension * (dimension + 120)
 
 
-def sector_bytes(magnetic: MagneticSector, moves: int, n_sites: int) -> int:
-    """Peak memory for all blocks of one M: orbits, links, the half lists, the largest block."""
+def sector_bytes(magnetic: MagneticSector, moves: int, n_sites: int, at_once: int) -> int:
+    """Peak memory for all blocks of one M: orbits, links, the half lists, the largest blocks."""
     orbits = magnetic.orbits * (_ORBIT_BYTES + moves * _LINK_BYTES)
     halves = 40 * int(magnetic.configurations**0.5 + 1) * n_sites
     blocks = sorted((block_bytes(s.dimension, s.real) for s in magnetic.sectors), reverse=True)
-    return orbits + halves + sum(blocks[:1])
+    return orbits + halves + sum(blocks[:at_once])
 
 
-def memory_needed(plan: SymmetryPlan) -> int:
-    """Peak memory of a full solution, bytes."""
+def memory_needed(plan: SymmetryPlan, at_once: int = 1) -> int:
+    """Peak memory of a full solution with so many blocks at once, bytes."""
     moves = move_count(plan)
-    peak = max(sector_bytes(m, moves, plan.terms.n_sites) for m in plan.magnetic)
+    peak = max(sector_bytes(m, moves, plan.terms.n_sites, at_once) for m in plan.magnetic)
     levels = 64 * sum(s.dimension for s in plan.sectors)
     return peak + levels + BASE_BYTES
 
@@ -190,7 +191,9 @@ def survey(model: SpinModel, memory: int | float | str | None = None) -> Plan:
     check_model(model, "survey")
     limit = memory_limit(memory)
     symmetry = plan_symmetry(model)
-    needed = memory_needed(symmetry)
+    needed = memory_needed(symmetry, thread_count())
+    if needed > limit:
+        needed = memory_needed(symmetry)  # then one block after the other
     seconds = time_needed(symmetry)
     notes = list(model.notes)
     method = "full"
