@@ -16,6 +16,7 @@ from thermo.fit import fit, read_study
 from thermo.fit.cautions import _groups
 from thermo.fit.forward import Forward, Points
 from thermo.fit.starts import further_starts, suspicious
+from thermo.numbers import with_uncertainty
 from thermo.spectrum.full import FullSolver
 
 T = np.geomspace(3.0, 200.0, 40)
@@ -239,3 +240,8 @@ def test_an_estimate_prints_as_it_is_quoted(tmp_path) -> None:
     assert str(tied) == "J = -42.00(16) cm-1 (= 2*x)"
     bare = dataclasses.replace(tied, standard_error=math.nan, reason="tied to fixed values")
     assert str(bare) == "J = -42 cm-1 (= 2*x; tied to fixed values)"
+
+
+def test_an_absurdly_small_error_does_not_print_a_hundred_digits() -> None:
+    assert len(with_uncertainty(41.25, 1e-90)) < 20
+    assert with_uncertainty(41.25, 1e-90) == "41.25"

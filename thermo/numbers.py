@@ -11,12 +11,15 @@ def with_uncertainty(value: float, error: float, digits: int = 2) -> str:
     """A value and its standard error in concise notation (GUM 7.2.2): 70.12(35), 1.20(3)×10⁻⁴.
 
     ``digits`` significant digits of the error are kept and the value is rounded alike. Without
-    a usable error (zero, NaN, infinite) the value alone, to six digits.
+    a usable error (zero, NaN, infinite) the value alone, to six digits; an error below the
+    value's own rounding is left out.
     """
     if not math.isfinite(value):
         return str(value)
     if not math.isfinite(error) or error <= 0:
         return plain(value)
+    if error < 1e-13 * abs(value):
+        return plain(value, 13)
     # Rounding the error first: 0.0996 becomes 0.10, which has its first digit one place higher.
     rounded = float(f"{error:.{digits - 1}e}")
     place = math.floor(math.log10(rounded)) - digits + 1

@@ -43,7 +43,7 @@ def draw_fit(fit: xr.Dataset, chosen: list[str], scale: str | None = None) -> An
         lower = figure.add_subplot(inner[1], sharex=upper)
         _draw_dataset(upper, lower, fit, index, names[index].replace("$", r"\$"), scale)
     lines = textwrap.wrap(
-        summary(fit), width=70 if columns == 1 else 150,
+        summary(fit), width=66 if columns == 1 else 135,
         break_long_words=False, break_on_hyphens=False,
     )  # fmt: skip
     figure.supxlabel(
