@@ -283,14 +283,16 @@ def test_notes_on_a_model_are_told(partita: Command, tmp_path: Path) -> None:
     assert done.stderr.count("partita: note: ") == len(done.stderr.splitlines()) >= 1
 
 
-@pytest.mark.skipif(not (DEMO / "study.toml").exists(), reason="no demo here")
-def test_demo_within_ten_seconds(partita: Command) -> None:
-    """The second run; the first may have to compile the kernels."""
+def test_demo_within_ten_seconds(partita: Command, tmp_path: Path) -> None:
+    """The second run; the first has to compile the kernels and may take 90 s."""
     arguments = ["fit", DEMO / "study.toml", "--picture", "fit.png"]
-    assert partita(*arguments).returncode == 0
-    started = time.perf_counter()
-    assert partita(*arguments).returncode == 0
-    assert time.perf_counter() - started < 10
+    fresh = {**os.environ, "XDG_CACHE_HOME": str(tmp_path / "cache")}
+    fresh.pop("NUMBA_CACHE_DIR", None)
+    for limit in (90, 10):
+        started = time.perf_counter()
+        assert partita(*arguments, env=fresh).returncode == 0
+        assert time.perf_counter() - started < limit
+    assert list((tmp_path / "cache").rglob("*.nbi"))  # the kernels were compiled here
 
 
 # ---------------------------------------------------------------- the streams

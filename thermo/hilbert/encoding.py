@@ -60,11 +60,6 @@ def encode(twice_spin: Ints) -> Encoding:
     )
 
 
-def digits(encoding: Encoding, configurations: Ints) -> Ints:
-    """Digits of each configuration, shape (..., N)."""
-    return (configurations[..., None] >> encoding.shift) & encoding.mask
-
-
 def element_tables(encoding: Encoding, permutations: Ints, reverse: NDArray[np.bool_]) -> Ints:
     """Images of every chunk value under each element, shape (G, chunks, 256 or more).
 
