@@ -159,7 +159,7 @@ def _write_netcdf(dataset: xr.Dataset, path: Path) -> None:
 
 
 def read_dataset(path: str | os.PathLike[str], kind: str | None = None) -> xr.Dataset:
-    """Read a file of the given kind (any of the three if None) into memory, checked.
+    """Read a file of the given kind (any kind if None) into memory, checked.
 
     Raises FileFormatError where the file is missing, damaged, foreign or of another kind.
     """

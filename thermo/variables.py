@@ -1,15 +1,16 @@
 """The registry of every variable in every file; it builds and checks the datasets.
 
-Three kinds of file: ``levels`` (a solved spectrum), ``curves`` (its thermodynamics) and ``fit``.
-Each holds CF-1.11 root attributes, and ``content`` = its kind. On disk molar quantities are SI:
-"cm3 mol-1" would read as 10⁻⁶ m³/mol to a units library, 4π wrong for a CGS susceptibility.
+Four kinds of file: ``levels`` (a solved spectrum), ``curves`` (its thermodynamics), ``fit`` and
+``comparison`` (rival candidates fitted to the same points); their tables are in
+``thermo.variable_tables``. Each holds CF-1.11 root attributes, and ``content`` = its kind. On
+disk molar quantities are SI: "cm3 mol-1" would read as 10⁻⁶ m³/mol to a units library, 4π wrong
+for a CGS susceptibility.
 """
 
 from __future__ import annotations
 
 import os
 from collections.abc import Mapping
-from dataclasses import dataclass
 from datetime import UTC, datetime
 from importlib import metadata
 from typing import Any
@@ -20,6 +21,8 @@ from numpy.typing import ArrayLike, NDArray
 
 from thermo import units
 from thermo.errors import FileFormatError, UnitsError
+from thermo.variable_tables import REGISTRY as REGISTRY
+from thermo.variable_tables import Variable
 
 CONVENTIONS = "CF-1.11"
 CONTENT_VERSION = 1
@@ -49,135 +52,25 @@ _SYSTEMS: dict[str, dict[str, str]] = {
 _PER_ENERGY = {"K": "K-1", "meV": "meV-1", "cm-1": "cm", "1": "1"}
 
 
-@dataclass(frozen=True)
-class Variable:
-    """One variable of a file: what it is called, how it is laid out, what it means.
-
-    ``units`` is a UDUNITS string, a rule ("@energy" …) or None where it has none (text, flags,
-    columns whose unit differs by row). ``finite`` forbids NaN and ±inf. ``label`` marks
-    auxiliary coordinates (CF §5, §6.1), named in the ``coordinates`` attribute of the others.
-    """
-
-    name: str
-    dims: tuple[str, ...]
-    dtype: str
-    units: str | None
-    long_name: str
-    note: str = ""
-    required: bool = True
-    finite: bool = True
-    label: bool = False
-    flags: tuple[tuple[int, str], ...] = ()
-    ancillary: str = ""
-
-
-def _v(name: str, dims: str, dtype: str, unit: str | None, long: str, **more: Any) -> Variable:
-    return Variable(name, tuple(dims.split()), dtype, unit, long, **more)
-
-
-_GRID = "temperature field"
-_OWN = "in the units that dataset_units gives for its dataset"
-_LEVELS = (
-    _v("energy", "level", "f8", "@model_energy", "energy of the level"),
-    _v("weight", "level", "f8", "1", "number of states the level stands for"),
-    _v("total_spin", "level", "f8", "1", "total spin S of the level", finite=False,
-       note="missing where not resolved; such a level counts all its 2S+1 states"),
-    _v("magnetic_number", "level", "f8", "1", "absolute magnetic quantum number |M| of the level",
-       finite=False, note="missing where not resolved; the weight counts both signs of M"),
-    _v("vector", "level", "i4", "1", "number of the random vector the level came from",
-       note="-1: an exact level"),
-    _v("sector", "level", "i4", "1", "index along block of the sector the level belongs to"),
-    _v("sector_dimension", "block", "i8", "1", "dimension of the sector's matrix"),
-    _v("sector_multiplicity", "block", "f8", "1", "number of equal sectors this one stands for"),
-    _v("sector_magnetic_number", "block", "f8", "1", "magnetic quantum number of the sector",
-       finite=False, note="missing where it is not conserved"),
-    _v("sector_real", "block", "i1", None, "arithmetic of the sector's matrix",
-       flags=((0, "complex"), (1, "real"))),
-)  # fmt: skip
-_CURVES = (
-    _v("temperature", "temperature", "f8", "@temperature", "temperature"),
-    _v("field", "field", "f8", "@field", "magnetic field B"),
-    _v("internal_energy", _GRID, "f8", "@energy", "internal energy", required=False),
-    _v("free_energy", _GRID, "f8", "@energy", "free energy", required=False),
-    _v("entropy", _GRID, "f8", "@entropy", "entropy", required=False),
-    _v("specific_heat", _GRID, "f8", "@entropy", "specific heat at constant field",
-       required=False),
-    _v("susceptibility", _GRID, "f8", "@susceptibility", "differential magnetic susceptibility",
-       required=False),
-    _v("magnetization", _GRID, "f8", "@moment", "magnetic moment along the field",
-       required=False),
-)  # fmt: skip
-_FIT = (
-    _v("parameter_name", "parameter", "str", None, "name of the parameter", label=True),
-    _v("parameter_units", "parameter", "str", None, "units of the parameter"),
-    _v("parameter_tie", "parameter", "str", None, "expression a tied parameter follows"),
-    _v("parameter_role", "parameter", "i1", None, "how the parameter took part",
-       flags=((0, "fixed"), (1, "free"), (2, "tied"))),
-    _v("value", "parameter", "f8", None, "fitted value",
-       note="in parameter_units", ancillary="standard_error at_bound"),
-    _v("standard_error", "parameter", "f8", None, "standard error of the fitted value",
-       finite=False, note="in parameter_units; missing for a fixed parameter"),
-    _v("start", "parameter", "f8", None, "start value", note="in parameter_units"),
-    _v("lower_bound", "parameter", "f8", None, "lower bound", finite=False,
-       note="in parameter_units; -inf: none"),
-    _v("upper_bound", "parameter", "f8", None, "upper bound", finite=False,
-       note="in parameter_units; inf: none"),
-    _v("at_bound", "parameter", "i1", None, "bound the fitted value sits at",
-       flags=((-1, "lower"), (0, "none"), (1, "upper"))),
-    _v("correlation", "parameter parameter_column", "f8", "1",
-       "correlation of the estimates of two parameters", finite=False,
-       note="the parameters run in the same order along both dimensions"),
-    _v("temperature", "point", "f8", "@temperature", "temperature of the point", label=True),
-    _v("field", "point", "f8", "@field", "magnetic field of the point", label=True),
-    _v("observed", "point", "f8", None, "measured value", note=_OWN,
-       ancillary="uncertainty"),
-    _v("uncertainty", "point", "f8", None, "standard uncertainty of the measured value",
-       finite=False, note=_OWN),
-    _v("predicted", "point", "f8", None, "fitted model's value", note=_OWN),
-    _v("residual", "point", "f8", None, "measured less predicted value", note=_OWN),
-    _v("point_dataset", "point", "i4", "1", "index along dataset of the point's dataset"),
-    _v("dataset_name", "dataset", "str", None, "name of the dataset", label=True),
-    _v("dataset_quantity", "dataset", "str", None, "quantity the dataset measures"),
-    _v("dataset_units", "dataset", "str", None, "units of the dataset's measured values",
-       note="in these, observed, uncertainty, predicted and residual of its points are given"),
-    _v("dataset_per", "dataset", "str", None, "per what molar values of the dataset are counted",
-       note="ion: magnetic ions (sites), formula: formula units", required=False),
-    _v("dataset_chi_square", "dataset", "f8", "1", "the dataset's share of chi square"),
-    _v("chi_square", "", "f8", "1", "sum of squared residuals over uncertainties"),
-    _v("reduced_chi_square", "", "f8", "1", "chi square per degree of freedom", finite=False),
-    _v("degrees_of_freedom", "", "i4", "1", "points less free parameters"),
-    _v("evaluations", "", "i4", "1", "number of times the model was evaluated"),
-    _v("converged", "", "i1", None, "whether the fit converged",
-       flags=((0, "no"), (1, "yes"))),
-    _v("curve_temperature", "curve_point", "f8", "@temperature",
-       "temperature along the fitted model's curve", required=False),
-    _v("curve_field", "curve_point", "f8", "@field",
-       "magnetic field along the fitted model's curve", required=False),
-    _v("curve_predicted", "curve_point", "f8", None, "fitted model's curve", note=_OWN,
-       required=False),
-    _v("curve_dataset", "curve_point", "i4", "1", "index along dataset of the curve's dataset",
-       required=False),
-)  # fmt: skip
-REGISTRY: dict[str, dict[str, Variable]] = {
-    kind: {v.name: v for v in table}
-    for kind, table in (("levels", _LEVELS), ("curves", _CURVES), ("fit", _FIT))
-}
 #: Root attributes a file of each kind cannot do without.
 REQUIRED_ATTRS: dict[str, tuple[str, ...]] = {
     "levels": ("energy_unit", "method", "resolved", "n_sites", "model_text", "model_digest"),
     "curves": ("energy_unit", "units_system", "per"),
     "fit": ("energy_unit",),
+    "comparison": ("energy_unit", "verdict", "conclusion"),
 }
 _TITLES = {
     "levels": "Energy levels of a spin cluster",
     "curves": "Thermodynamics of a spin cluster",
     "fit": "Fit of a spin cluster to measured curves",
+    "comparison": "Rival spin clusters fitted to the same measured points",
 }
 _COMMENTS = {
     "levels": "Each level stands for `weight` states of the whole cluster.",
     "curves": "Molar quantities are SI and per mole of what the attribute `per` names.",
     "fit": "Each dataset is given in its own units, which dataset_units names; "
     "temperatures are in K and fields in T unless the model is dimensionless.",
+    "comparison": "Each dataset is given in its own units, which dataset_units names.",
 }
 
 
@@ -231,6 +124,15 @@ def build_fit(arrays: Mapping[str, Any], attrs: Mapping[str, Any]) -> xr.Dataset
     curve_dataset.
     """
     return _build("fit", arrays, attrs)
+
+
+def build_comparison(arrays: Mapping[str, Any], attrs: Mapping[str, Any]) -> xr.Dataset:
+    """A comparison dataset; ``arrays`` maps the names in REGISTRY["comparison"] to arrays.
+
+    ``attrs`` needs energy_unit (that of the candidates, "K" where they differ), verdict (a
+    sentence) and conclusion ("preferred", "undecided", "none" or "single").
+    """
+    return _build("comparison", arrays, attrs)
 
 
 def _build(kind: str, arrays: Mapping[str, Any], attrs: Mapping[str, Any]) -> xr.Dataset:
