@@ -7,6 +7,8 @@ Every key of a model file (positions in lists count from 0):
     energy_unit                   required: "K", "meV", "cm-1", or "1" (dimensionless)
     bond_term                     required: "+J S.S", "-J S.S", "+2J S.S" or "-2J S.S"
     ions_per_formula = 1          magnetic ions in one formula unit
+    finite = false                true: the cluster is all there is (a molecule, a ring too), so no
+                                  temperature is too low for its size
     [couplings]  name = value     required; in the energy unit; a name is letters, digits and _
 
 and one of the three ways to state the cluster:
@@ -78,6 +80,7 @@ KEYS = (
     "energy_unit",
     "bond_term",
     "ions_per_formula",
+    "finite",
     "couplings",
     "site",
     "bond",
@@ -221,6 +224,13 @@ def build(data: dict[str, Any], text: str, source: str) -> SpinModel:
             f"{per_formula:g} is not positive; give the number of "
             "magnetic ions in one formula unit",
         )
+    finite = table.get("finite", False)
+    if not isinstance(finite, bool):
+        raise fault(
+            "finite",
+            f"{show(finite)} is neither true nor false; write true where the cluster is a "
+            "molecule, false where it stands for an endless lattice",
+        )
     couplings = read_couplings(
         table.need("couplings", "a table [couplings] with a line 'name = value' for each"),
         "couplings",
@@ -251,6 +261,9 @@ def build(data: dict[str, Any], text: str, source: str) -> SpinModel:
         notes=(*cluster.notes, *notes),
         ions_per_formula=per_formula,
         source=source,
+        finite=finite,
+        superlattice=cell.superlattice,
+        periodic=cell.periodic,
     )
 
 

@@ -61,6 +61,8 @@ class SpinModel:
     repetition suggests as symmetries; whoever uses one checks it first.
     ``notes`` are sentences the user should be told (a bond that meets its own image, a zero
     term). ``text`` is the model's source, from which ``read_model_text`` makes it again.
+    ``finite`` says that the cluster is all there is, a molecule; else ``superlattice`` (rows, in
+    cells) and ``periodic`` (one for each row) tell how a cell was repeated, empty without a cell.
     """
 
     title: str
@@ -75,6 +77,9 @@ class SpinModel:
     notes: tuple[str, ...] = ()
     ions_per_formula: float = 1.0
     source: str = field(default="mapping")
+    finite: bool = False
+    superlattice: tuple[tuple[int, ...], ...] = ()
+    periodic: tuple[bool, ...] = ()
 
     @property
     def spins(self) -> NDArray[np.float64]:
