@@ -474,3 +474,13 @@ def test_far_off_starts_and_data_end_in_a_result_or_a_sentence(tmp_path, starts:
             told(error)
         else:
             assert result.cautions
+
+
+@pytest.mark.parametrize("window", ["auto", "tell", "off"])
+def test_the_window_and_the_sets_with_a_stated_range_are_kept(tmp_path, window):
+    path = write_dimer(tmp_path)
+    text = path.read_text().replace('name = "heat"', 'name = "heat"\nrange = [2.0, 500.0]')
+    path.write_text(text.replace("format = 1", f'format = 1\nwindow = "{window}"', 1))
+    study = read_study(path)
+    assert study.window == window
+    assert study.ranged == {"heat"}

@@ -5,6 +5,9 @@ Every key of a study file (positions in lists count from 0; paths are relative t
     format = 1                    required
     title = "..."                 default: the file's name
     model                         required: the path of the model file
+    window                        "auto" (default): a data set without a range is fitted above the
+                                  temperature where the size of a periodic cluster shows in it;
+                                  "tell": that temperature is only told; "off": not looked for
 
     [[data]]     name             required; no two sets share one
                  file             required: a text table in UTF-8; lines that begin with # are
@@ -53,6 +56,9 @@ Units, in any usual spelling (emu mol-1, J/mol/K, A m^2 mol^-1, μB):
     field                         "T", "mT", "Oe", "kOe", "G", "kG"; taken as B, 1 Oe as 10⁻⁴ T
 
 A dimensionless model (energy_unit "1") takes "1" for all of them.
+
+Instead of one model a study may list rivals, to be compared with ``thermo.compare``; see
+``thermo.fit.candidates`` for the keys of [[candidate]] and [[instrument]].
 """
 
 from __future__ import annotations
@@ -73,11 +79,15 @@ from thermo.model import read_model
 from thermo.model.spin_model import SpinModel
 
 FORMAT = 1
+WINDOWS = ("auto", "tell", "off")
 
 
 @dataclass(frozen=True, eq=False)
 class Study:
-    """What to fit: a model, data sets (already read and in SI units) and parameters."""
+    """What to fit: a model, data sets (already read and in SI units) and parameters.
+
+    ``window`` is "auto", "tell" or "off"; ``ranged`` names the sets whose range the study states.
+    """
 
     title: str
     source: str
@@ -85,6 +95,8 @@ class Study:
     model: SpinModel
     sets: tuple[Measured, ...]
     parameters: Parameters
+    window: str = "auto"
+    ranged: frozenset[str] = frozenset()
 
     @property
     def reduced(self) -> bool:
@@ -110,17 +122,40 @@ def read_study(source: str | os.PathLike[str] | Mapping[str, object]) -> Study:
     UnitsError or ModelError, one sentence that leads with the file and the path to the key, and
     UnavailableError where the model cannot give what was measured.
     """
-    text = ""
+    content = load_content(source)
+    if "candidate" in content.table:
+        raise StudyError(
+            f"{content.name}: candidate lists rival models where one fit takes one model; use "
+            "compare (the command fit does by itself)"
+        )
+    return build_study(content)
+
+
+@dataclass(frozen=True)
+class Content:
+    """A study's table before it is checked: where it comes from, and the folder of its paths."""
+
+    table: Mapping[str, object]
+    name: str
+    folder: Path
+    text: str
+
+
+def load_content(source: str | os.PathLike[str] | Mapping[str, object]) -> Content:
+    """The table of a study file, or a mapping as it is; StudyError where there is none."""
     if isinstance(source, Mapping):
-        name, folder, content = "study", Path(), source
-    else:
-        name, folder = os.fspath(source), Path(source).parent
-        text = _load(Path(source))
-        try:
-            content = tomllib.loads(text)
-        except (tomllib.TOMLDecodeError, RecursionError) as error:
-            raise StudyError(f"{name}: this is not valid TOML ({error}); correct it") from None
-    section = Section(content, "", name)
+        return Content(source, "study", Path(), "")
+    name, text = os.fspath(source), _load(Path(source))
+    try:
+        return Content(tomllib.loads(text), name, Path(source).parent, text)
+    except (tomllib.TOMLDecodeError, RecursionError) as error:
+        raise StudyError(f"{name}: this is not valid TOML ({error}); correct it") from None
+
+
+def build_study(content: Content) -> Study:
+    """The study of one model, checked; errors as for ``read_study``."""
+    name, folder = content.name, content.folder
+    section = Section(content.table, "", name)
     version = section.raw("format", f"the version of the study format, {FORMAT}")
     if version != FORMAT or isinstance(version, bool):
         raise section.fail("format", f"= {version!r} is not known; this program reads {FORMAT}")
@@ -128,6 +163,7 @@ def read_study(source: str | os.PathLike[str] | Mapping[str, object]) -> Study:
     raw_model = section.raw("model", "the path of the model file, relative to the study")
     raw_data = section.raw("data", "at least one [[data]] table")
     raw_parameters = section.raw("parameters", "a [parameters] table")
+    window = section.word("window", WINDOWS, "auto")
     section.close()
 
     if isinstance(raw_model, SpinModel):
@@ -149,7 +185,10 @@ def read_study(source: str | os.PathLike[str] | Mapping[str, object]) -> Study:
     parameters = read_parameters(
         Section(raw_parameters, "parameters", name), model, per.pop() if len(per) == 1 else "ion"
     )
-    study = Study(title, name, text, model, sets, parameters)
+    ranged = frozenset(
+        data.name for data, item in zip(sets, raw_data, strict=True) if "range" in item
+    )
+    study = Study(title, name, content.text, model, sets, parameters, window, ranged)
     _check(study)
     return study
 
