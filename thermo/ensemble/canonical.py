@@ -46,7 +46,7 @@ class ClusterCurves:
 
 @dataclass(frozen=True, eq=False)
 class _Groups:
-    """Levels sorted by magnetic numbers.
+    """Levels sorted by magnetic numbers: ``order`` (L,) indexes the table.
 
     ``excess`` (L,) energies above the group's lowest, ``weight`` (L,) per state of the group;
     ``lowest`` (K,) each group's lowest above the ``ground`` level and ``lowest_weight`` (K,) the
@@ -64,6 +64,7 @@ class _Groups:
     tolerance: float
     m: Array
     owner: NDArray[np.int64]
+    order: NDArray[np.int64]
 
 
 def _group(table: LevelTable) -> _Groups:
@@ -101,7 +102,7 @@ def _group(table: LevelTable) -> _Groups:
     lowest_weight = np.add.reduceat(weight * (excess == 0), start)
     return _Groups(
         excess, weight, start, owner_of_level, lowest, lowest_weight, ground, tolerance,
-        np.array(m), np.array(owner),
+        np.array(m), np.array(owner), order,
     )  # fmt: skip
 
 

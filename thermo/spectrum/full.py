@@ -15,6 +15,8 @@ from numpy.typing import NDArray
 from thermo.errors import RangeError, SpectrumError, UnavailableError
 from thermo.hilbert import blocks, encoding, operators
 from thermo.hilbert.orbits import Links, Orbits, find_images, find_links, find_orbits
+from thermo.hilbert.slopes import block_slopes
+from thermo.model.level_slopes import SlopedLevels, check_slopes
 from thermo.model.level_table import LevelTable, check_levels, energy_scale
 from thermo.model.spin_model import SpinModel
 from thermo.model.traces import total_matrices
@@ -122,6 +124,34 @@ class FullSolver:
         self, couplings: Mapping[str, float] | None = None, progress: Progress | None = None
     ) -> tuple[LevelTable, NDArray[np.int64]]:
         """The checked levels and, for each, the index of its sector in ``plan.sectors``."""
+        table, sectors, _ = self._solve(couplings, progress, slopes=False)
+        return table, sectors
+
+    @property
+    def can_slope(self) -> bool:
+        """Whether ``sloped`` fits in memory: eigenvectors take three blocks where levels take
+        one."""
+        return planning.memory_needed(self.plan, slopes=True) <= self._limit
+
+    def sloped(
+        self, couplings: Mapping[str, float] | None = None, progress: Progress | None = None
+    ) -> SlopedLevels:
+        """The checked levels with their slopes by every coupling, for generic solvers.
+
+        Cost: 5 to 10 times that of the levels alone for large blocks (eigenvectors), one and a
+        half to 3 times for small ones. Raises MemoryLimitError where the eigenvectors do not fit.
+        """
+        if not self._generic:
+            raise UnavailableError("slopes by the couplings need a solver with generic symmetries")
+        planning.refuse_if_too_large(self.plan, self._limit, slopes=True)
+        table, _, slopes = self._solve(couplings, progress, slopes=True)
+        found = SlopedLevels(table, self.plan.terms.names, slopes)
+        check_slopes(found, self.model.with_couplings(couplings or {}))
+        return found
+
+    def _solve(
+        self, couplings: Mapping[str, float] | None, progress: Progress | None, slopes: bool
+    ) -> tuple[LevelTable, NDArray[np.int64], NDArray[np.float64]]:
         given = self.model.with_couplings(couplings or {})
         # Energies in units of the largest term, so that no power of ten is too large or small.
         unit = energy_scale(given) or 1.0
@@ -141,30 +171,31 @@ class FullSolver:
         found: dict[int, NDArray[np.float64]] = {}
         for magnetic in self.plan.magnetic:
             structure = self._structure(magnetic)
-            for sector, energies in self._blocks(magnetic, structure, tables):
+            for sector, energies in self._blocks(magnetic, structure, tables, slopes):
                 found[id(sector)] = energies
                 done += costs[id(sector)]
                 if progress is not None:
                     text = f"{len(found)} of {len(costs)} blocks"
                     progress(min(done / total, 1.0), text)
-        table, sectors = self._collect(found, shift, low, high)
+        table, sectors, by_coupling = self._collect(found, shift, low, high)
         check_levels(table, model)
-        return table.scaled(unit), sectors
+        return table.scaled(unit), sectors, by_coupling
 
     def _blocks(
         self,
         magnetic: MagneticSector,
         structure: _Structure,
         tables: tuple[NDArray[np.complex128], NDArray[np.float64]],
+        slopes: bool,
     ) -> Iterator[tuple[Sector, NDArray[np.float64]]]:
         ordered = sorted(magnetic.sectors, key=lambda s: -planning.block_cost(s.dimension, s.real))
         width = thread_count()
-        alone, together = self._schedule(ordered, structure, width)
+        alone, together = self._schedule(ordered, structure, width, slopes)
         for group, workers, blas in ((alone, 1, width), (together, width, 1)):
             if not group:
                 continue
             tasks = [
-                functools.partial(self._solve_block, s, magnetic, structure, tables, blas)
+                functools.partial(self._solve_block, s, magnetic, structure, tables, blas, slopes)
                 for s in group
             ]
             with blas_threads(blas):
@@ -172,7 +203,7 @@ class FullSolver:
                     yield group[index], energies
 
     def _schedule(
-        self, ordered: list[Sector], structure: _Structure, width: int
+        self, ordered: list[Sector], structure: _Structure, width: int, slopes: bool
     ) -> tuple[list[Sector], list[Sector]]:
         """Which blocks to solve alone with all threads, and which side by side with one each.
 
@@ -181,7 +212,9 @@ class FullSolver:
         thread: the surplus goes first, alone.
         """
         free = self._limit - planning.BASE_BYTES - structure.nbytes
-        fitting = [s for s in ordered if width * planning.block_bytes(s.dimension, s.real) <= free]
+        fitting = [
+            s for s in ordered if width * planning.block_bytes(s.dimension, s.real, slopes) <= free
+        ]
         surplus = sum(s.dimension >= ALONE_FROM for s in fitting) % width
         together = fitting[surplus:]
         return [s for s in ordered if s not in together], together
@@ -193,25 +226,32 @@ class FullSolver:
         structure: _Structure,
         tables: tuple[NDArray[np.complex128], NDArray[np.float64]],
         threads: int,
+        slopes: bool,
     ) -> NDArray[np.float64]:
+        """Row 0: the block's eigenvalues, ascending; with ``slopes`` then one row for each
+        coupling, (1 + P, n)."""
         n = sector.dimension
         block: NDArray[Any] = np.empty((n, n), np.float64 if sector.real else complex, order="F")
         p = sector.conjugating
         images = structure.images.get(p.tobytes()) if p is not None else None
-        blocks.dense_block(
-            self._encoding, structure.orbits, structure.links, self._moves, *tables,
-            sector.phases, magnetic.elements.modulus, images, sector.real, block,
-        )  # fmt: skip
-        return lapack.eigenvalues(block, threads=threads)
+        states = (self._encoding, structure.orbits, structure.links, self._moves)
+        phases, modulus = sector.phases, magnetic.elements.modulus
+        blocks.dense_block(*states, *tables, phases, modulus, images, sector.real, block)
+        if not slopes:
+            return lapack.eigenvalues(block, threads=threads)[None]
+        energies, vectors = lapack.eigensystem(block)
+        count = len(self.plan.terms.names)
+        by_coupling = block_slopes(*states, count, phases, modulus, images, sector.real, vectors)
+        return np.concatenate([energies[None], by_coupling])
 
     def _collect(
         self, found: dict[int, NDArray[np.float64]], shift: float, low: float, high: float
-    ) -> tuple[LevelTable, NDArray[np.int64]]:
+    ) -> tuple[LevelTable, NDArray[np.int64], NDArray[np.float64]]:
         energy, weight, twice_spin, twice_m, index = [], [], [], [], []
         resolved = self.plan.resolved
         casimir = float(np.sum(self.plan.terms.twice_spin * (self.plan.terms.twice_spin + 2)) / 4)
         for k, sector in enumerate(self.plan.sectors):
-            values = found[id(sector)]
+            values = found[id(sector)][0]
             count = np.full(len(values), float(sector.multiplicity))
             spin = np.full(len(values), -1, dtype=np.int64)
             m = np.full(len(values), -1, dtype=np.int64)
@@ -238,7 +278,8 @@ class FullSolver:
             resolved,
             self.plan.terms.n_sites,
         )
-        return table, np.concatenate(index)[order]
+        slopes = np.concatenate([found[id(s)][1:] for s in self.plan.sectors], axis=1)
+        return table, np.concatenate(index)[order], slopes[:, order]
 
 
 def _spin_by_window(

@@ -94,31 +94,38 @@ def move_count(plan: SymmetryPlan) -> int:
     return per_pair * len(plan.terms.pair) + 4 * len(plan.terms.ion)
 
 
-def block_bytes(dimension: int, real: bool) -> int:
-    """Memory of a dense block while its eigenvalues are computed."""
+def block_bytes(dimension: int, real: bool, slopes: bool = False) -> int:
+    """Memory of a dense block while its eigenvalues (and eigenvectors, for slopes) are found."""
     item = 8 if real else 16
+    if slopes:  # the block, and LAPACK's work of twice its size
+        return item * dimension * (3 * dimension + 120)
     return item * dimension * (dimension + 120)
 
 
-def sector_bytes(magnetic: MagneticSector, moves: int, n_sites: int, at_once: int) -> int:
+def sector_bytes(
+    magnetic: MagneticSector, moves: int, n_sites: int, at_once: int, slopes: bool = False
+) -> int:
     """Peak memory for all blocks of one M: orbits, links, the half lists, the largest blocks."""
     orbits = magnetic.orbits * (_ORBIT_BYTES + moves * _LINK_BYTES)
     halves = 40 * int(magnetic.configurations**0.5 + 1) * n_sites
-    blocks = sorted((block_bytes(s.dimension, s.real) for s in magnetic.sectors), reverse=True)
+    blocks = sorted(
+        (block_bytes(s.dimension, s.real, slopes) for s in magnetic.sectors), reverse=True
+    )
     return orbits + halves + sum(blocks[:at_once])
 
 
-def memory_needed(plan: SymmetryPlan, at_once: int = 1) -> int:
-    """Peak memory of a full solution with so many blocks at once, bytes."""
+def memory_needed(plan: SymmetryPlan, at_once: int = 1, slopes: bool = False) -> int:
+    """Peak memory of a full solution (with its slopes) with so many blocks at once, bytes."""
     moves = move_count(plan)
-    peak = max(sector_bytes(m, moves, plan.terms.n_sites, at_once) for m in plan.magnetic)
-    levels = 64 * sum(s.dimension for s in plan.sectors)
+    peak = max(sector_bytes(m, moves, plan.terms.n_sites, at_once, slopes) for m in plan.magnetic)
+    rows = 64 + (16 * len(plan.terms.names) if slopes else 0)
+    levels = rows * sum(s.dimension for s in plan.sectors)
     return peak + levels + BASE_BYTES
 
 
-def refuse_if_too_large(plan: SymmetryPlan, limit: int) -> None:
+def refuse_if_too_large(plan: SymmetryPlan, limit: int, slopes: bool = False) -> None:
     """Raise MemoryLimitError, before anything is allocated, when a full solution cannot fit."""
-    needed = memory_needed(plan)
+    needed = memory_needed(plan, slopes=slopes)
     if needed <= limit:
         return
     if needed < 2 * BASE_BYTES:

@@ -1,0 +1,84 @@
+"""Levels with their slopes by the couplings, and the check that every such table must pass."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from thermo.errors import SpectrumError
+from thermo.model.level_table import LevelTable, energy_scale
+from thermo.model.spin_model import SpinModel
+from thermo.model.traces import exact_traces
+
+# Relative misfit of the sums that rounding can cause; real faults are many orders larger.
+SLOPE_TOLERANCE = 1e-8
+
+
+@dataclass(frozen=True, eq=False)
+class SlopedLevels:
+    """Levels and ⟨n|H_p|n⟩ = ∂E_n/∂c_p for the P couplings ``names``, ``slopes`` (P, L).
+
+    Slopes are numbers without a unit (energy per coupling) in the order of ``table``. Within a
+    degenerate level the eigenvectors are arbitrary, so single slopes there mean nothing; sums
+    with equal weights over the level, which all canonical sums of slopes are, are exact:
+    d Tr f(H)/dc_p = Tr f′(H) H_p.
+    """
+
+    table: LevelTable
+    names: tuple[str, ...]
+    slopes: NDArray[np.float64]
+
+
+def check_slopes(found: SlopedLevels, model: SpinModel) -> None:
+    """Hold slopes against Σ c_p ∂E/∂c_p = E (Euler) and the traces of H_p and H·H_p.
+
+    Raises SpectrumError on a mismatch. Cost: a few passes over the levels and, for each
+    coupling, three sums over the bonds.
+    """
+    unit = energy_scale(model) or 1.0
+    table, c = found.table, np.array([model.couplings[name] for name in found.names]) / unit
+    energy = table.energy / unit
+    share = table.weight / table.weight.sum()
+    scale = max(float(np.abs(energy).max()), 1e-10)
+    # Eigenvectors of H, degenerate or not, give each level's own energy.
+    misfit = float(np.abs(c @ found.slopes - energy).max()) if len(c) else 0.0
+    if not misfit <= SLOPE_TOLERANCE * scale:
+        raise SpectrumError(_sentence("their sum with the couplings is", misfit / scale))
+    for name, slope in zip(found.names, found.slopes, strict=True):
+        mean, cross = _exact_moments(model, name, unit)
+        # A term may vanish to rounding: judged by what went into it.
+        own = max(float(np.abs(slope).max()), 1e-6 * _largest(model, name), 1e-100)
+        faults = (
+            abs(float(share @ slope) - mean) / own,
+            abs(float(share @ (slope * energy)) - cross) / (own * scale),
+        )
+        if not max(faults) <= SLOPE_TOLERANCE:
+            raise SpectrumError(_sentence(f"the traces of coupling {name} are", max(faults)))
+
+
+def _largest(model: SpinModel, name: str) -> float:
+    terms = [b.matrix for b in model.bonds if b.coupling == name]
+    terms += [ion.matrix for ion in model.ions if ion.coupling == name]
+    return max((float(np.abs(a).max()) for a in terms), default=0.0)
+
+
+def _exact_moments(model: SpinModel, name: str, unit: float) -> tuple[float, float]:
+    """Tr H_p / n and Tr(H H_p) / n, H in ``unit``: halves of differences of a square are exact."""
+    values: Mapping[str, float] = {key: c / unit for key, c in model.couplings.items()}
+
+    def traces(shift: float) -> tuple[float, float]:
+        _, mean, square = exact_traces(model.with_couplings({**values, name: values[name] + shift}))
+        return mean, square
+
+    (up, up2), (down, down2) = traces(1.0), traces(-1.0)
+    return (up - down) / 2, (up2 - down2) / 4
+
+
+def _sentence(what: str, size: float) -> str:
+    return (
+        f"the slopes of the levels fail their check against the model ({what} off by "
+        f"{size:.1e}); they are not a result, solve the model again"
+    )
