@@ -7,13 +7,14 @@ from __future__ import annotations
 
 import json
 import os
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING
 
 import numpy as np
 from numpy.typing import NDArray
 
 from thermo.errors import FileFormatError, PartitaError, SpectrumError
+from thermo.model.calibration import Sampling
 from thermo.model.spin_model import SpinModel
 from thermo.model.traces import exact_traces
 
@@ -31,7 +32,8 @@ class LevelTable:
     ``energy``, ``weight`` (number of states) have shape (L,). ``twice_spin`` (2S) and
     ``twice_m`` (2|M|) are −1 where not resolved; ``resolved`` says which holds for the table:
     "total_spin" (a level counts its 2S+1 states), "magnetic_number" (it counts both signs of
-    M), or "parity" / "none" (the magnetic moment is not known from the levels).
+    M), or "parity" / "none" (the magnetic moment is not known from the levels). ``sampling``
+    says where the levels of a sampled spectrum come from; None for a full one.
     """
 
     energy: NDArray[np.float64]
@@ -40,18 +42,24 @@ class LevelTable:
     twice_m: NDArray[np.int64]
     resolved: str
     n_sites: int
+    sampling: Sampling | None = None
 
     def scaled(self, factor: float) -> LevelTable:
         """The table of factor·H, factor > 0."""
         if not factor > 0:
             raise SpectrumError(f"levels cannot be scaled by {factor}; use a positive number")
-        return LevelTable(
-            self.energy * factor,
-            self.weight,
-            self.twice_spin,
-            self.twice_m,
-            self.resolved,
-            self.n_sites,
+        sampling = self.sampling.scaled(factor) if self.sampling is not None else None
+        return replace(self, energy=self.energy * factor, sampling=sampling)
+
+    def upside_down(self) -> LevelTable:
+        """The table of −H."""
+        return replace(
+            self,
+            energy=-self.energy[::-1],
+            weight=self.weight[::-1],
+            twice_spin=self.twice_spin[::-1],
+            twice_m=self.twice_m[::-1],
+            sampling=self.sampling.upside_down() if self.sampling is not None else None,
         )
 
 

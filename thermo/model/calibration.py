@@ -1,0 +1,157 @@
+"""Calibration: weights of sampled levels that give every known trace of H exactly.
+
+A random vector estimates Tr f(H) with noise, while Tr Hᵏ is known for small k. The weights of the
+sampled levels of one |M| are multiplied by 1 + q(x), x = (E − c)/w, q the polynomial of lowest
+degree with which exact and sampled levels together give all known traces: the regression
+estimator of survey statistics (Deville and Särndal, J. Am. Stat. Assoc. 87, 376 (1992)). The
+table of levels stays a table of levels, and its curves carry the cluster's high-temperature
+series through the order of the traces.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, replace
+from typing import TYPE_CHECKING
+
+import numpy as np
+from numpy.polynomial import chebyshev
+from numpy.typing import NDArray
+
+from thermo.errors import SpectrumError
+
+if TYPE_CHECKING:
+    from thermo.model.level_table import LevelTable
+
+# A polynomial this small at all sampled levels, relative to T_k, adds nothing new: there are no
+# more levels than lower degrees can fit.
+_DEPENDENT = 1e-9
+
+Array = NDArray[np.float64]
+Integers = NDArray[np.int64]
+
+
+@dataclass(frozen=True, eq=False)
+class Sampling:
+    """Where the levels of a sampled table come from, and what their weights must reproduce.
+
+    Of L levels: ``unit`` (L,) is the index of the random vector of one sector that a level came
+    from, −1 for an exact one; ``group`` (L,) the index of its |M|; ``raw_weight`` (L,) the number
+    of states it stands for before calibration (the weight itself for an exact level).
+    ``unit_sector`` (U,) gives each unit's sector. ``moments`` (G, K+1) are the exact traces of
+    xᵏ, k = 0 … K, over all states of a group (exact levels and both signs of M in them),
+    x = (E − center)/scale in the table's energy unit. ``orders`` (G,) is the highest order of
+    trace that the group's weights reproduce.
+    """
+
+    unit: Integers
+    group: Integers
+    raw_weight: Array
+    unit_sector: Integers
+    moments: Array
+    center: float
+    scale: float
+    orders: Integers
+
+    def scaled(self, factor: float) -> Sampling:
+        """The same for the levels of factor·H, factor > 0."""
+        return replace(self, center=self.center * factor, scale=self.scale * factor)
+
+    def upside_down(self) -> Sampling:
+        """The same for the levels of −H in reverse order."""
+        signs = (-1.0) ** np.arange(self.moments.shape[1])
+        return replace(
+            self,
+            unit=self.unit[::-1],
+            group=self.group[::-1],
+            raw_weight=self.raw_weight[::-1],
+            moments=self.moments * signs,
+            center=-self.center,
+        )
+
+
+def calibrate(
+    energy: Array,
+    raw_weight: Array,
+    is_sampled: NDArray[np.bool_],
+    moments: Array,
+    center: float,
+    scale: float,
+) -> tuple[Array, int]:
+    """Calibrated weights of one group's levels, and the degree of the polynomial.
+
+    ``energy``, ``raw_weight`` ≥ 0 and ``is_sampled`` have shape (L,); ``moments`` (K+1,) are the
+    exact traces of xᵏ over the group, x = (energy − center)/scale, which should lie in [−1, 1].
+    Only sampled weights change. Where a factor 1 + q would be negative at a level of positive
+    weight, or the levels are too few, the degree is the next lower one that serves: the traces
+    up to the returned degree then hold. −1: not even the number of states can be met (nothing is
+    changed). A group without sampled levels returns K. Cost: O(L K²).
+    """
+    weight = np.array(raw_weight, dtype=np.float64)
+    highest = len(moments) - 1
+    if not np.any(is_sampled):
+        return weight, highest
+    x = (energy - center) / scale
+    basis = chebyshev.chebvander(x, highest)
+    target = chebyshev_moments(moments)
+    total = float(np.abs(moments[0])) or 1.0
+    missing = (target - weight @ basis) / total
+    sampled = basis[is_sampled]
+    positive = weight[is_sampled] > 0
+    r = _triangle(np.sqrt(weight[is_sampled] / total)[:, None] * sampled)
+    # With T = P·R, the columns of P orthonormal under the raw weights, the coefficient of each
+    # follows from the traces up to its own degree alone: a lower degree is a shorter sum.
+    coefficients = np.linalg.solve(r.T, missing[: len(r)])
+    best: Array = np.ones(len(sampled))
+    degree = -1
+    for k in range(len(r)):
+        # Evaluated from x, as P itself is inaccurate where a weight is tiny.
+        q = sampled[:, : k + 1] @ np.linalg.solve(r[: k + 1, : k + 1], coefficients[: k + 1])
+        if not np.any(1 + q[positive] < 0):
+            best, degree = 1 + q, k
+    weight[is_sampled] *= best
+    return weight, degree
+
+
+def _triangle(rows: Array) -> Array:
+    """R of the QR of the leading columns that are linearly independent, (n, n)."""
+    norm = np.linalg.norm(rows, axis=0)
+    r: Array = np.asarray(np.linalg.qr(rows, mode="r"))
+    diagonal = np.abs(np.diag(r))
+    weak = np.flatnonzero(~(diagonal > _DEPENDENT * norm[: len(diagonal)]))
+    n = int(weak[0]) if len(weak) else len(diagonal)
+    return r[:n, :n]
+
+
+def chebyshev_moments(moments: Array) -> Array:
+    """Traces of T_k(x) from those of xᵏ, along the last axis."""
+    n = moments.shape[-1]
+    powers = np.zeros((n, n))
+    for k in range(n):
+        powers[k, : k + 1] = chebyshev.cheb2poly(np.eye(n)[k])[: k + 1]
+    return np.asarray(moments @ powers.T)
+
+
+def calibrated_table(table: LevelTable, sampling: Sampling) -> LevelTable:
+    """The table with calibrated weights and ``sampling``, its ``orders`` filled in.
+
+    ``table`` gives energies and labels; its weights are not looked at, nor ``sampling.orders``.
+    Raises SpectrumError where a group cannot even be given its number of states.
+    """
+    weight = np.array(sampling.raw_weight)
+    orders = np.zeros(len(sampling.moments), dtype=np.int64)
+    for g, moments in enumerate(sampling.moments):
+        mine = np.flatnonzero(sampling.group == g)
+        weight[mine], orders[g] = calibrate(
+            table.energy[mine],
+            sampling.raw_weight[mine],
+            sampling.unit[mine] >= 0,
+            moments,
+            sampling.center,
+            sampling.scale,
+        )
+        if orders[g] < 0:
+            raise SpectrumError(
+                f"the sampled levels of group {g} cannot be given {moments[0]:g} states in all; "
+                "they are not a result, solve the model again"
+            )
+    return replace(table, weight=weight, sampling=replace(sampling, orders=orders))
