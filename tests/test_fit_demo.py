@@ -41,6 +41,14 @@ def test_the_tables_are_those_of_the_script_and_say_they_are_invented(
         assert "invented" in (DEMO / name).read_text()
 
 
+def only_the_window(result):
+    """One caution: where the six rungs differ from eight, points were left out."""
+    (caution,) = result.cautions
+    assert "'susceptibility', below 24 K, were left out" in caution
+    assert "held against 16 sites" in caution
+    assert result.n_masked == result.window.excluded["susceptibility"].n_points == 16
+
+
 def test_a_false_minimum_is_left_by_another_start_and_else_told(tmp_path):
     """From a leg coupling of the wrong sign the fit ends in another valley, and is led out of it;
     without further starts it says so."""
@@ -58,14 +66,14 @@ def test_a_false_minimum_is_left_by_another_start_and_else_told(tmp_path):
     good = fit(DEMO / "study.toml")
     for name in good.free_names:
         assert result[name].value == pytest.approx(good[name].value, rel=1e-5)
-    assert result.cautions == ()
+    only_the_window(result)
     assert result.n_starts == 7
     assert "7 starts were tried" in result.message
     assert "this minimum is lower" in result.message
     assert result.n_solves > false.n_solves
-    # A good first minimum costs nothing more.
+    # A good first minimum costs nothing more than the fit above the window's edge.
     assert good.n_starts == 1
-    assert good.n_solves <= 16
+    assert good.n_solves <= 32
     assert "start" not in good.message
 
 
@@ -90,7 +98,7 @@ def test_the_fit_finds_what_went_in(script, tmp_path, start):
     (tmp_path / "study.toml").write_text(text)
     result = fit(tmp_path / "study.toml")
     assert result.trustworthy
-    assert result.cautions == ()
+    only_the_window(result)
     assert 0.8 < result.reduced_chi_square < 1.25
     for name, true in script.TRUE.items():
         assert abs(result[name].value - true) < 3 * result[name].standard_error, name

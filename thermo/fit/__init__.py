@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import os
 from collections.abc import Callable, Mapping
+from dataclasses import replace
 
 from thermo.errors import RangeError
 from thermo.fit.forward import Forward, Points, Solver, check_available
@@ -12,8 +13,9 @@ from thermo.fit.parameters import CHI0
 from thermo.fit.result import Estimate, FitResult, SetResult, make_result
 from thermo.fit.starts import FURTHER_STARTS
 from thermo.fit.study import Study, read_study
+from thermo.fit.trust import Window, fit_in_window, without_edge
 
-__all__ = ["Estimate", "FitResult", "SetResult", "Study", "fit", "read_study"]
+__all__ = ["Estimate", "FitResult", "SetResult", "Study", "Window", "fit", "read_study"]
 
 
 def fit(
@@ -31,26 +33,45 @@ def fit(
     tried, and only where the first minimum looks like a false one: a parameter at its bound,
     reduced χ² above 2, residuals of one sign in long runs, or no convergence.
 
+    A periodic cluster that is not ``finite`` is held against another size of its lattice, and by
+    default (``window`` of the study) data sets without a stated range are fitted only above the
+    temperature where its size shows; see ``thermo.fit.trust``. With a ``solver`` it is not.
+
     Cost: one diagonalisation for each new direction of the couplings. Changing only their common
     scale, g, χ0 or the paramagnetic fraction needs none; k independent couplings take k an
     iteration, and one alone takes one in all. Further starts take one each and those of the
     iterations of the best three, in doubt some times as many as the first minimum took.
 
-    Raises RangeError, StudyError, DataError, UnitsError, ModelError for the input,
-    UnavailableError where the model cannot give what was measured, MemoryLimitError where a block
-    is too large.
+    Raises RangeError, StudyError (no data inside the window of trust, too), DataError, UnitsError,
+    ModelError for the input, UnavailableError where the model cannot give what was measured,
+    MemoryLimitError where a block is too large.
     """
     if isinstance(starts, bool) or not isinstance(starts, int) or not 0 <= starts <= 1000:
         raise RangeError(f"starts = {starts!r} must be a whole number from 0 to 1000")
     study = study if isinstance(study, Study) else read_study(study)
-    if solver is None:
-        from thermo.spectrum.full import FullSolver
+    if solver is not None:  # whose levels no other cluster is known to share
+        return replace(_fit_once(study, solver, progress, starts), window=without_edge(study))
+    full = full_solver(study, memory)
+    return fit_in_window(
+        study, lambda s, again: _fit_once(s, full, progress, 0 if again else starts), memory
+    )
 
-        full = FullSolver(study.model, memory)
-        for data in study.sets:  # before hours are spent on a spectrum that cannot serve
-            points = Points(data.quantity, data.temperature, data.field, data.per)
-            check_available(points, full.plan.resolved)
-        solver = full
+
+def full_solver(study: Study, memory: int | float | str | None = None) -> Solver:
+    """The full diagonalisation of a study's model, held first against what was measured."""
+    from thermo.spectrum.full import FullSolver
+
+    full = FullSolver(study.model, memory)
+    for data in study.sets:  # before hours are spent on a spectrum that cannot serve
+        points = Points(data.quantity, data.temperature, data.field, data.per)
+        check_available(points, full.plan.resolved)
+    return full
+
+
+def _fit_once(
+    study: Study, solver: Solver, progress: Callable[[float, str], None] | None, starts: int
+) -> FitResult:
+    """One fit of all the study's points."""
     forward = Forward(study.model, solver, study.parameters.by_name[CHI0].to_si)
     problem = make_problem(study, forward, progress)
     return make_result(study, problem, minimise(problem, starts))

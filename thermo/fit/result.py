@@ -26,6 +26,8 @@ from thermo.units import quantity_factor
 if TYPE_CHECKING:
     import xarray as xr
 
+    from thermo.fit.trust import Window
+
 Vector = NDArray[np.float64]
 
 CURVE_POINTS = 240
@@ -116,6 +118,7 @@ class FitResult:
     n_evaluations: int
     forward: Forward
     values: Values
+    window: Window | None = None
 
     def __repr__(self) -> str:
         """Values with errors, χ² and cautions, a line each."""
