@@ -246,3 +246,13 @@ def canonical_in_field(spins, bonds, ions, temperature, field):
         moment_variance=float(p @ second - (p @ first) ** 2),
         log_partition=float(np.log(z) - energy[0] / temperature),
     )
+
+
+def power_traces(matrix, center, scale, order):
+    """Tr ((H - center)/scale)^k for k = 0 ... order, by multiplying dense matrices."""
+    shifted = (matrix - center * np.eye(len(matrix))) / scale
+    power, traces = np.eye(len(matrix), dtype=complex), []
+    for _ in range(order + 1):
+        traces.append(np.trace(power).real)
+        power = power @ shifted
+    return np.array(traces)
