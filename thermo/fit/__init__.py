@@ -13,7 +13,7 @@ from thermo.fit.parameters import CHI0
 from thermo.fit.result import Estimate, FitResult, SetResult, make_result
 from thermo.fit.starts import FURTHER_STARTS
 from thermo.fit.study import Study, read_study
-from thermo.fit.trust import Window, fit_in_window, without_edge
+from thermo.fit.trust import FitOnce, Window, fit_in_window, without_edge
 
 __all__ = ["Estimate", "FitResult", "SetResult", "Study", "Window", "fit", "read_study"]
 
@@ -52,9 +52,7 @@ def fit(
     if solver is not None:  # whose levels no other cluster is known to share
         return replace(_fit_once(study, solver, progress, starts), window=without_edge(study))
     full = full_solver(study, memory)
-    return fit_in_window(
-        study, lambda s, again: _fit_once(s, full, progress, 0 if again else starts), memory
-    )
+    return fit_in_window(study, single_fit(full, progress, starts), memory)
 
 
 def full_solver(study: Study, memory: int | float | str | None = None) -> Solver:
@@ -66,6 +64,13 @@ def full_solver(study: Study, memory: int | float | str | None = None) -> Solver
         points = Points(data.quantity, data.temperature, data.field, data.per)
         check_available(points, full.plan.resolved)
     return full
+
+
+def single_fit(
+    solver: Solver, progress: Callable[[float, str], None] | None, starts: int
+) -> FitOnce:
+    """Fits of one model's studies by one solver; the second and later ones start once."""
+    return lambda study, again: _fit_once(study, solver, progress, 0 if again else starts)
 
 
 def _fit_once(

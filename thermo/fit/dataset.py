@@ -59,7 +59,7 @@ def fit_dataset(result: FitResult) -> xr.Dataset:
         "dataset_per": [d.per for d in data],
         "dataset_chi_square": [item.chi_square for item in sets],
     }
-    lines = [(k, d, points) for k, d in enumerate(data) for points in _lines(d)]
+    lines = [(k, d, points) for k, d in enumerate(data) for points in fine_lines(d)]
     arrays |= {
         "curve_temperature": np.concatenate([p.temperature for _, _, p in lines]),
         "curve_field": np.concatenate([p.field for _, _, p in lines]),
@@ -79,7 +79,7 @@ def _correlation(result: FitResult, shown: list[Estimate]) -> Vector:
     return full
 
 
-def _lines(data: Measured) -> list[Points]:
+def fine_lines(data: Measured) -> list[Points]:
     """Fine grids that follow a set: over temperature at its fields, or over field."""
     fields, temperatures = np.unique(data.field), np.unique(data.temperature)
     over_temperature = len(fields) <= len(temperatures)

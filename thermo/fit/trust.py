@@ -10,7 +10,7 @@ fitted parameter can then be off by more than its own standard error for want of
 from __future__ import annotations
 
 import math
-from collections.abc import Callable, Mapping
+from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass, fields, replace
 from typing import Any
 
@@ -182,6 +182,60 @@ def find_relative(model: SpinModel, memory: int | float | str | None = None) -> 
             continue
         return Relative(found, Forward(found, solver))
     return None
+
+
+def cut_alike(
+    names: Sequence[str],
+    studies: Sequence[Study],
+    results: Sequence[FitResult],
+    fits: Sequence[FitOnce],
+) -> tuple[list[FitResult], list[str]]:
+    """Rival fits brought to the same points, those that every one's window leaves, with cautions.
+
+    All studies hold the same data sets. Raises StudyError where no points are left.
+    """
+    windows = [result.window or without_edge(s) for result, s in zip(results, studies, strict=True)]
+    cut, told = {}, []
+    for data in studies[0].sets:
+        cuts = [window.cut[data.name] for window in windows]
+        cut[data.name] = max(cuts)
+        lost = int(np.count_nonzero(data.temperature < max(cuts)))
+        if lost:
+            below = f", below {_kelvin(max(cuts), windows[0].unit)},"
+            told.append(
+                f"{lost} of {data.n_points} points of {data.name!r}"
+                + (below if math.isfinite(max(cuts)) else "")
+                + " were left out for all candidates: there the size of the cluster of "
+                f"{names[cuts.index(max(cuts))]!r} shows"
+            )
+    found = []
+    for study, result, window, fit_once in zip(studies, results, windows, fits, strict=True):
+        if dict(window.cut) == cut:
+            found.append(result)
+            continue
+        keep = {data.name: data.temperature >= cut[data.name] for data in study.sets}
+        left = sum(int(np.count_nonzero(mask)) for mask in keep.values())
+        if left <= len(study.parameters.free):
+            raise StudyError(
+                f"{study.source}: the windows of trust of all candidates together leave {left} "
+                f"points for {len(study.parameters.free)} parameters; take larger clusters, or "
+                'set window = "tell"'
+            )
+        excluded = {
+            data.name: select(data, ~keep[data.name])
+            for data in study.sets
+            if not keep[data.name].all()
+        }
+        fitted = again(masked(study, keep), result, result, fit_once)
+        kept = (str(window),) if window.status == "unknown" else ()
+        found.append(
+            replace(
+                fitted,
+                window=replace(window, cut=cut, excluded=excluded),
+                cautions=(*fitted.cautions, *kept),
+            )
+        )
+    return found, told
 
 
 def find_edges(study: Study, result: FitResult, relative: Relative) -> dict[str, float]:
