@@ -90,26 +90,34 @@ def calibrate(
     highest = len(moments) - 1
     if not np.any(is_sampled):
         return weight, highest
-    x = (energy - center) / scale
-    basis = chebyshev.chebvander(x, highest)
-    target = chebyshev_moments(moments)
-    total = float(np.abs(moments[0])) or 1.0
-    missing = (target - weight @ basis) / total
+    basis = chebyshev.chebvander((energy - center) / scale, highest)
     sampled = basis[is_sampled]
     positive = weight[is_sampled] > 0
-    r = _triangle(np.sqrt(weight[is_sampled] / total)[:, None] * sampled)
-    # With T = P·R, the columns of P orthonormal under the raw weights, the coefficient of each
-    # follows from the traces up to its own degree alone: a lower degree is a shorter sum.
-    coefficients = np.linalg.solve(r.T, missing[: len(r)])
+    r, coefficients = orthonormal(basis, weight, is_sampled, moments)
     best: Array = np.ones(len(sampled))
     degree = -1
     for k in range(len(r)):
         # Evaluated from x, as P itself is inaccurate where a weight is tiny.
         q = sampled[:, : k + 1] @ np.linalg.solve(r[: k + 1, : k + 1], coefficients[: k + 1])
         if not np.any(1 + q[positive] < 0):
-            best, degree = 1 + q, k
+            best, degree = np.asarray(1 + q, dtype=np.float64), k
     weight[is_sampled] *= best
     return weight, degree
+
+
+def orthonormal(
+    basis: Array, raw_weight: Array, is_sampled: NDArray[np.bool_], moments: Array
+) -> tuple[Array, Array]:
+    """Polynomials orthonormal under a group's sampled weights, and the q that calibrates them.
+
+    Returns r (n, n), upper triangular, and b (n,), n ≤ K+1 (fewer where the levels are too few):
+    with ``basis`` (L, K+1) = T_k(x), the columns of P = basis·r⁻¹ are orthonormal under the
+    sampled levels' raw weights and q = P·b. Each b_k follows from the traces up to k alone, so a
+    lower degree is a shorter sum.
+    """
+    missing = chebyshev_moments(moments) - raw_weight @ basis
+    r = _triangle(np.sqrt(raw_weight[is_sampled])[:, None] * basis[is_sampled])
+    return r, np.linalg.solve(r.T, missing[: len(r)])
 
 
 def _triangle(rows: Array) -> Array:
