@@ -17,15 +17,15 @@ NETWORKS = {
     },
     "uniform chain": {
         "couplings": {"J": 60.0},
-        "lattice": {"name": "chain", "size": [10], "couplings": {"nearest": "J"}},
+        "lattice": {"name": "chain", "size": [12], "couplings": {"nearest": "J"}},
     },
     "alternating chain": {
         "couplings": {"J": 60.0, "K": 30.0},
-        "lattice": {"name": "chain", "size": [10], "couplings": {"strong": "J", "weak": "K"}},
+        "lattice": {"name": "chain", "size": [12], "couplings": {"strong": "J", "weak": "K"}},
     },
     "ladder": {
         "couplings": {"J": 60.0, "K": 30.0},
-        "lattice": {"name": "ladder", "size": [4], "couplings": {"rung": "J", "leg": "K"}},
+        "lattice": {"name": "ladder", "size": [6], "couplings": {"rung": "J", "leg": "K"}},
     },
 }
 

@@ -21,6 +21,7 @@ from thermo.errors import MemoryLimitError, StudyError
 from thermo.fit.forward import Forward, Points
 from thermo.fit.measured import Measured
 from thermo.fit.parameters import Parameters
+from thermo.fit.residual_tests import chance
 from thermo.fit.result import FitResult
 from thermo.fit.study import Study
 from thermo.model.resizing import can_resize, larger, smaller
@@ -40,6 +41,8 @@ TURNS = 5
 WORTH_ANOTHER = 0.05
 # Without stated uncertainties: no scatter counts as smaller than this share of the mean.
 LEAST_SCATTER = 1e-3
+# A χ² this improbable rules a candidate out whatever its rivals do.
+HOPELESS = 1e-9
 
 
 @dataclass(frozen=True, eq=False)
@@ -192,12 +195,17 @@ def cut_alike(
 ) -> tuple[list[FitResult], list[str]]:
     """Rival fits brought to the same points, those that every one's window leaves, with cautions.
 
-    All studies hold the same data sets. Raises StudyError where no points are left.
+    A rival whose χ² in its own window is beyond all chance has fallen already, and takes no points
+    from the others, as long as another has not. All studies hold the same data sets. Raises
+    StudyError where no points are left.
     """
     windows = [result.window or without_edge(s) for result, s in zip(results, studies, strict=True)]
+    alive = [not chance(r.chi_square, r.degrees_of_freedom) < HOPELESS or r.error_basis != "stated"
+             for r in results]  # fmt: skip
+    counted = [k for k, lives in enumerate(alive) if lives] or list(range(len(results)))
     cut, told = {}, []
     for data in studies[0].sets:
-        cuts = [window.cut[data.name] for window in windows]
+        cuts = [windows[k].cut[data.name] for k in counted]
         cut[data.name] = max(cuts)
         lost = int(np.count_nonzero(data.temperature < max(cuts)))
         if lost:
@@ -206,7 +214,7 @@ def cut_alike(
                 f"{lost} of {data.n_points} points of {data.name!r}"
                 + (below if math.isfinite(max(cuts)) else "")
                 + " were left out for all candidates: there the size of the cluster of "
-                f"{names[cuts.index(max(cuts))]!r} shows"
+                f"{names[counted[cuts.index(max(cuts))]]!r} shows"
             )
     found = []
     for study, result, window, fit_once in zip(studies, results, windows, fits, strict=True):

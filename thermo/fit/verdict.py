@@ -137,7 +137,7 @@ def _chi(c: Candidate) -> str:
 
 def _less_likely(gap: float) -> str:
     factor = math.exp(min(gap, 60.0) / 2)
-    much = f"{plain(factor, 2)} times" if factor < 1e4 else "more than 10 000 times"
+    much = f"{factor:.0f} times" if factor < 1e4 else "more than 10 000 times"
     return f"{much} less likely than the best"
 
 
