@@ -9,6 +9,7 @@ from numpy.typing import NDArray
 
 from thermo.fit.forward import Points
 from thermo.fit.measured import Measured
+from thermo.fit.provenance import check_arrays, check_attributes
 from thermo.fit.result import CURVE_POINTS, Estimate, FitResult
 from thermo.variables import build_fit
 
@@ -68,7 +69,8 @@ def fit_dataset(result: FitResult) -> xr.Dataset:
         ),
         "curve_dataset": np.concatenate([np.full(len(p.field), k) for k, _, p in lines]),
     }
-    return build_fit(arrays, result.attributes())
+    arrays |= check_arrays(result)
+    return build_fit(arrays, {**result.attributes(), **check_attributes(result)})
 
 
 def _correlation(result: FitResult, shown: list[Estimate]) -> Vector:
