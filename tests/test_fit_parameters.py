@@ -246,7 +246,7 @@ def test_slopes_against_differences_of_whole_predictions(tmp_path, parameters, f
                          "specific_heat_over_T")
     ]  # fmt: skip
     p = study.parameters
-    found = forward.jacobian(sets, p.values(p.start), 1e-4, central=True)
+    found = forward.jacobian(sets, p.values(p.start))
 
     def whole(theta):
         return np.concatenate([forward.predict(points, p.values(theta)) for points in sets])

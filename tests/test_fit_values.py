@@ -13,7 +13,8 @@ from tests import fitting
 from tests.fitting import CURIE, MODEL, MU_B, TRUE, R, dimer_chi, dimer_heat, write_csv, write_dimer
 from thermo import errors
 from thermo.fit import fit, read_study
-from thermo.fit.forward import Forward, Points, _free_moments
+from thermo.fit.forward import Forward, Points
+from thermo.fit.surroundings import free_ions
 from thermo.spectrum.full import FullSolver
 
 
@@ -142,6 +143,12 @@ def test_every_quantity_at_field_against_four_levels(tmp_path, quantity, per):
         np.testing.assert_allclose(
             zero, n * emu * dimer_chi(T, 42.5, 2.13, -1.7e-4, rho), rtol=1e-8
         )
+
+
+def _free_moments(shares, T, zeeman):
+    """(C/k_B, <M>, its slope by the field times T) of the mean free ion."""
+    found = free_ions(shares, T, zeeman, 0.0)
+    return found.value.heat, found.value.moment, found.by_field.moment * T
 
 
 def test_free_ions_of_mixed_spins_follow_curie_and_saturate():

@@ -7,9 +7,8 @@ from collections.abc import Callable, Mapping
 from dataclasses import replace
 
 from thermo.errors import RangeError
-from thermo.fit.forward import Forward, Points, Solver, check_available
+from thermo.fit.forward import Solver, check_available, make_forward, set_points
 from thermo.fit.minimise import make_problem, minimise
-from thermo.fit.parameters import CHI0
 from thermo.fit.result import Estimate, FitResult, SetResult, make_result
 from thermo.fit.starts import FURTHER_STARTS
 from thermo.fit.study import Study, read_study
@@ -61,8 +60,7 @@ def full_solver(study: Study, memory: int | float | str | None = None) -> Solver
 
     full = FullSolver(study.model, memory)
     for data in study.sets:  # before hours are spent on a spectrum that cannot serve
-        points = Points(data.quantity, data.temperature, data.field, data.per)
-        check_available(points, full.plan.resolved)
+        check_available(set_points(data), full.plan.resolved)
     return full
 
 
@@ -77,6 +75,6 @@ def _fit_once(
     study: Study, solver: Solver, progress: Callable[[float, str], None] | None, starts: int
 ) -> FitResult:
     """One fit of all the study's points."""
-    forward = Forward(study.model, solver, study.parameters.by_name[CHI0].to_si)
+    forward = make_forward(study, solver)
     problem = make_problem(study, forward, progress)
     return make_result(study, problem, minimise(problem, starts))

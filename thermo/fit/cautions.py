@@ -79,7 +79,7 @@ def _of_direction(study: Study, resolved: str) -> list[str]:
 
 def _of_size(study: Study, minimum: Minimum, scale: float) -> list[str]:
     """What χ² says of the model and of the uncertainties."""
-    dof = study.n_points - len(study.parameters.free)
+    dof = study.degrees_of_freedom
     if not study.weighted:
         return [
             "no uncertainties were stated: each set was weighted by its mean magnitude, the "

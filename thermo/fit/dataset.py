@@ -2,12 +2,13 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
 from numpy.typing import NDArray
 
-from thermo.fit.forward import Points
+from thermo.fit.forward import Points, set_points
 from thermo.fit.measured import Measured
 from thermo.fit.provenance import check_arrays, check_attributes
 from thermo.fit.result import CURVE_POINTS, Estimate, FitResult
@@ -92,8 +93,8 @@ def fine_lines(data: Measured) -> list[Points]:
         fixed = np.full(CURVE_POINTS, common)
         if over_temperature:
             grid = np.geomspace(x.min(), x.max(), CURVE_POINTS)
-            lines.append(Points(data.quantity, grid, fixed, data.per))
+            lines.append(replace(set_points(data), temperature=grid, field=fixed))
         else:
             grid = np.linspace(x.min(), x.max(), CURVE_POINTS)
-            lines.append(Points(data.quantity, fixed, grid, data.per))
+            lines.append(replace(set_points(data), temperature=fixed, field=grid))
     return lines

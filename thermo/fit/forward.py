@@ -1,124 +1,135 @@
-"""From parameters to predicted points and their slopes, with as few diagonalisations as possible.
+"""From parameters to predicted points and their exact slopes, one diagonalisation for each new
+direction of the couplings.
 
-Multiplying all couplings by λ multiplies all energies by λ, so a spectrum is found once for each
-*direction* of the couplings and used at T/λ; a reversed direction only turns it upside down. Of
-the k slopes by k couplings, the one along the couplings themselves comes from the temperature
-alone (Euler's theorem on homogeneous functions), so k − 1 take solves.
-
-Per mole of ions, with ρ the paramagnetic fraction:
-    χ = χ0 + (1−ρ) χ_spins(T; c, g) + ρ C_imp/T,    C = (1−ρ) C_spins + ρ C_imp_spins(T, B),
-    M = χ0 B/μ0 + (1−ρ) M_spins + ρ M_imp,
-where the impurities are free ions like the model's own, each kind with its share: at B = 0 their
-Curie constant is that of the mean S(S+1), in a field they follow Brillouin functions.
+Per mole of ions, with ρ the share of paramagnetic impurities and s the set's scale:
+    χ/s = χ0 + (1−ρ) χ_spins(T; c, g) + ρ C_imp/(T−θ),
+    M/s = χ0 B/μ0 + (1−ρ) M_spins + ρ M_imp,
+    C/s = (1−ρ) C_spins + ρ C_imp_spins(T, B) + C_lattice,
+where the impurities are free ions like the model's own (each kind with its share) or of a stated
+spin: at B = 0 their Curie constant is that of the mean S(S+1), in a field they follow Brillouin
+functions. The spins may feel the mean field of neighbouring clusters (fit/surroundings.py).
 Susceptibility measured at a field above zero is M/B.
 """
 
 from __future__ import annotations
 
-from collections.abc import Callable, Mapping, Sequence
-from dataclasses import dataclass, replace
-from typing import Protocol
+import dataclasses
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass
+from typing import TYPE_CHECKING
 
 import numpy as np
 from numpy.typing import NDArray
 
 from thermo import units
-from thermo.ensemble import cluster_curves
+from thermo.ensemble.slopes import PointSums
 from thermo.errors import UnavailableError
-from thermo.fit.measured import MAGNETIC
-from thermo.fit.parameters import CHI0, FRACTION, G, Values
-from thermo.model.level_table import LevelTable
+from thermo.fit.differences import DifferenceSums
+from thermo.fit.measured import MAGNETIC, Measured
+from thermo.fit.parameters import Values
+from thermo.fit.roles import (
+    CHI0,
+    DEBYE,
+    FRACTION,
+    IMPURITY_G,
+    INTERCLUSTER,
+    WEISS,
+    G,
+    einstein_names,
+)
+from thermo.fit.spectra import Solver, SpectrumCache
+from thermo.fit.surroundings import (
+    Natural,
+    Response,
+    coupled_clusters,
+    debye,
+    einstein,
+    free_ions,
+    lone_clusters,
+)
 from thermo.model.spin_model import SpinModel
+from thermo.model.terms import BOND_TERMS
+
+if TYPE_CHECKING:
+    from thermo.fit.study import Study
+
+__all__ = ["Forward", "Points", "Solver", "check_available", "make_forward", "set_points"]
 
 Vector = NDArray[np.float64]
-
-# Directions closer than this are the same: far above rounding, far below any step taken.
-SAME_DIRECTION = 1e-13
-# Tables kept at once, counted in levels; some 16 MiB per million and array.
-MAX_LEVELS_KEPT = 8_000_000
-# Five-point differences in the scale and in g cost no solve: error about step^4.
-SMOOTH_STEP = 1e-3
-
-
-class Solver(Protocol):
-    """What finds levels for given couplings."""
-
-    def table(self, couplings: Mapping[str, float] | None = None) -> LevelTable:
-        """All levels of the cluster."""
-
-
-@dataclass(frozen=True)
-class _Known:
-    direction: Vector
-    table: LevelTable
-
-
-class SpectrumCache:
-    """Levels by the direction of the couplings; ``n_solves`` counts real diagonalisations."""
-
-    def __init__(self, solver: Solver, names: Sequence[str]) -> None:
-        self.solver = solver
-        self.names = tuple(names)
-        self.n_solves = 0
-        self.resolved = ""  # what the last table found resolves, as in a LevelTable
-        self._known: list[_Known] = []
-
-    def levels(self, couplings: Vector) -> tuple[LevelTable, float]:
-        """The table for the couplings' direction, and the scale λ its energies are to be
-        multiplied by (largest |coupling|; 1 where all vanish)."""
-        scale = float(np.abs(couplings).max(initial=0.0))
-        if scale == 0:
-            # Without couplings all energies vanish: any table serves, with its energies at zero.
-            some = self._known[0].table if self._known else self._solve(couplings)
-            return replace(some, energy=np.zeros_like(some.energy)), 1.0
-        direction = couplings / scale
-        for k, known in enumerate(self._known):
-            if np.abs(known.direction - direction).max(initial=0.0) <= SAME_DIRECTION:
-                self._known.insert(0, self._known.pop(k))
-                return known.table, scale
-        for known in self._known:
-            if np.abs(known.direction + direction).max(initial=0.0) <= SAME_DIRECTION:
-                flipped = _upside_down(known.table)
-                self._keep(_Known(direction, flipped))
-                return flipped, scale
-        table = self._solve(direction)
-        self._keep(_Known(direction, table))
-        return table, scale
-
-    def _solve(self, couplings: Vector) -> LevelTable:
-        self.n_solves += 1
-        table = self.solver.table(
-            {name: float(c) for name, c in zip(self.names, couplings, strict=True)}
-        )
-        self.resolved = table.resolved
-        return table
-
-    def _keep(self, known: _Known) -> None:
-        self._known.insert(0, known)
-        while len(self._known) > 1 and (
-            sum(len(k.table.energy) for k in self._known) > MAX_LEVELS_KEPT or len(self._known) > 64
-        ):
-            self._known.pop()
 
 
 @dataclass(frozen=True, eq=False)
 class Points:
-    """Where one quantity is wanted: temperatures [K] and fields [T] of shape (n,), and ``per``."""
+    """Where one quantity is wanted: temperatures [K] and fields [T] of shape (n,), and ``per``.
+
+    ``names`` maps roles ("chi0", "weiss_temperature" …) to the parameters that play them for
+    these points, where those are not called like the role; ``scales`` are the parameters that
+    multiply the points.
+    """
 
     quantity: str
     temperature: Vector
     field: Vector
     per: str
+    names: Mapping[str, str] = dataclasses.field(default_factory=dict)
+    scales: tuple[str, ...] = ()
+
+
+def set_points(data: Measured) -> Points:
+    """The points of a data set."""
+    return Points(
+        data.quantity, data.temperature, data.field, data.per, data.parameter_names, data.scales
+    )
+
+
+def make_forward(study: Study, solver: Solver, cache: str | None = None) -> Forward:
+    """The forward model of a study; ``cache`` names a folder that keeps its spectra."""
+    p = study.parameters.by_name
+    return Forward(
+        study.model,
+        solver,
+        p[CHI0].to_si,
+        to_si={name: q.to_si for name, q in p.items() if q.role == CHI0},
+        impurity_spin={name: q.spin for name, q in p.items() if q.role == FRACTION},
+        lattice_atoms=study.lattice_atoms,
+        cache=cache,
+    )
+
+
+@dataclass(frozen=True, eq=False)
+class Prediction:
+    """Points with their derivatives: ``value`` (n,), ``slopes`` (n, n_free); where asked for,
+    the ``parts`` of the value, each (n,), and the points that lie where the model's clusters
+    or impurities would order, ``beyond``."""
+
+    value: Vector
+    slopes: Vector
+    parts: Mapping[str, Vector]
+    beyond: NDArray[np.bool_]
 
 
 class Forward:
     """Predictions of a model, in SI (or as they are for a dimensionless model)."""
 
-    def __init__(self, model: SpinModel, solver: Solver, chi0_to_si: float = 1.0) -> None:
-        """``chi0_to_si`` takes the values' chi0 to SI per mole of ions."""
+    def __init__(
+        self,
+        model: SpinModel,
+        solver: Solver,
+        chi0_to_si: float = 1.0,
+        *,
+        to_si: Mapping[str, float] | None = None,
+        impurity_spin: Mapping[str, float] | None = None,
+        lattice_atoms: float = 0.0,
+        cache: str | None = None,
+    ) -> None:
+        """``chi0_to_si`` takes the values' chi0 to SI per mole of ions, ``to_si`` those of other
+        names; ``impurity_spin`` gives fractions' spins by name (NaN: the model's ions);
+        ``lattice_atoms`` the atoms per ion of the lattice's heat."""
         self.model = model
-        self.chi0_to_si = chi0_to_si
-        self.cache = SpectrumCache(solver, tuple(model.couplings))
+        self.chi0_to_si = {CHI0: chi0_to_si, **(to_si or {})}
+        self.impurity_spin = dict(impurity_spin or {})
+        self.lattice_atoms = lattice_atoms
+        self.cache = SpectrumCache(solver, tuple(model.couplings), model, cache)
         unit = model.energy_unit
         self.kelvin = units.kelvin_per(unit)
         self.tesla = units.tesla_to_energy(unit)
@@ -131,6 +142,7 @@ class Forward:
         self.mu_0 = 1.0 if reduced else units.MU_0_EMU
         spins, count = np.unique(model.spins, return_counts=True)
         self.spin_shares = tuple(zip(spins.tolist(), (count / count.sum()).tolist(), strict=True))
+        self.bond_factor = BOND_TERMS[model.bond_term]
 
     def couplings(self, values: Values) -> Vector:
         """The couplings among the values, in the model's order, shape (P,)."""
@@ -138,109 +150,63 @@ class Forward:
 
     def predict(self, points: Points, values: Values) -> Vector:
         """The quantity at the points, shape (n,)."""
-        table, scale = self.cache.levels(self.couplings(values))
-        g, chi0, fraction = self._nuisance(values)
-        spins, free = self._parts(points, table, scale, g)
-        return self._mix(points, spins, free, chi0, fraction)
+        return self.evaluate(points, values, slopes=False).value
 
-    def jacobian(
-        self, sets: Sequence[Points], values: Values, step: float, central: bool
-    ) -> Vector:
-        """Slopes of all sets' points, one after the other, by the free parameters: (N, n_free).
+    def jacobian(self, sets: Sequence[Points], values: Values) -> Vector:
+        """Exact slopes of all sets' points, one after the other, by the free parameters:
+        (N, n_free)."""
+        return np.concatenate([self.evaluate(points, values).slopes for points in sets])
 
-        ``step`` is the relative step for the directions of the couplings that need solves, taken
-        on one side, or on both (``central``) at twice the solves.
-        """
-        names = tuple(self.model.couplings)
-        c = self.couplings(values)
-        tangents = np.array([values.slope[name] for name in names], dtype=np.float64)
-        n_free = tangents.shape[1] if names else len(values.slope[G])
-        table, scale = self.cache.levels(c)
-        g, chi0, fraction = self._nuisance(values)
-        n = sum(len(p.temperature) for p in sets)
-        along = np.zeros((n, n_free))
-        by_scale, rest = np.zeros(n), np.zeros((n, n_free))
-        base = np.zeros(n)
-        for rows, points in _rows(sets):
-            spins, free = self._parts(points, table, scale, g)
-            base[rows] = self._mix(points, spins, free, chi0, fraction)
+    def evaluate(self, points: Points, values: Values, slopes: bool = True) -> Prediction:
+        """The quantity at the points with its exact slopes (none without ``slopes``)."""
+        known = _Known(points, values)
+        n_free = len(next(iter(values.slope.values()))) if values.slope else 0
+        tangents = self._tangents(values, n_free) if slopes else np.empty((len(values.value), 0))
+        moving = np.flatnonzero(tangents.any(axis=0)) if slopes else np.empty(0, dtype=np.int64)
+        out = np.zeros((len(points.temperature), n_free if slopes else 0))
 
-            def shifted(ds: float, dg: float, points: Points = points) -> Vector:
-                s, f = self._parts(points, table, scale * (1 + ds), g * (1 + dg))
-                return self._mix(points, s, f, 0.0, fraction)
+        def add(name: str, slope: Vector) -> None:
+            if slopes and name in values.slope:
+                out[:] += np.outer(slope, values.slope[name])
 
-            if np.any(tangents):
-                by_scale[rows] = _five_point(shifted, 1.0, 0.0)
-            for name, slope in (
-                (CHI0, self.chi0_part(points)),
-                (FRACTION, free - spins),
-            ):
-                rest[rows] += np.outer(slope, values.slope[name])
-            # At g = 0 every quantity is at its least and the slope vanishes.
-            if np.any(values.slope[G]) and g != 0:
-                by_g = (
-                    _five_point(shifted, 0.0, 1.0)
-                    if np.any(points.field > 0)
-                    else _zero_field_power(points) * self._mix(points, spins, free, 0.0, fraction)
-                ) / g
-                rest[rows] += np.outer(by_g, values.slope[G])
-        self._along_couplings(sets, values, c, tangents, by_scale, base, step, central, along)
-        return along + rest
-
-    def _along_couplings(
-        self,
-        sets: Sequence[Points],
-        values: Values,
-        c: Vector,
-        tangents: Vector,
-        by_scale: Vector,
-        base: Vector,
-        step: float,
-        central: bool,
-        out: Vector,
-    ) -> None:
-        """Fill ``out`` (N, n_free) with the slopes through the couplings."""
-        size = float(np.abs(c).max(initial=0.0))
-        moving = [k for k in range(tangents.shape[1]) if np.any(tangents[:, k])]
-        if not moving:
-            return
-        saved, weight = _saved(c, tangents, moving)
-        for k in moving:
-            if k == saved:
-                continue
-            d = tangents[:, k]
-            length = step * (size or 1.0) / float(np.abs(d).max())
-            ahead = self._all(sets, values, c + length * d)
-            if central:
-                out[:, k] = (ahead - self._all(sets, values, c - length * d)) / (2 * length)
-            else:
-                out[:, k] = (ahead - base) / length
-        if saved is not None:
-            others = sum((weight[k] * out[:, k] for k in moving if k != saved), np.zeros(len(base)))
-            out[:, saved] = (by_scale - others) / weight[saved]
-
-    def _all(self, sets: Sequence[Points], values: Values, c: Vector) -> Vector:
-        table, scale = self.cache.levels(c)
-        g, chi0, fraction = self._nuisance(values)
-        parts = []
-        for points in sets:
-            spins, free = self._parts(points, table, scale, g)
-            parts.append(self._mix(points, spins, free, chi0, fraction))
-        return np.concatenate(parts)
-
-    def _nuisance(self, values: Values) -> tuple[float, float, float]:
-        g = values.value[G]
-        # Without a common g only zero-field specific heat is fitted, where g plays no part.
-        return (g if np.isfinite(g) else 0.0, values.value[CHI0], values.value[FRACTION])
-
-    def _mix(
-        self, points: Points, spins: Vector, free: Vector, chi0: float, fraction: float
-    ) -> Vector:
-        return (1 - fraction) * spins + fraction * free + chi0 * self.chi0_part(points)
+        spins, imp = _Part(), _Part()
+        beyond = self._spins(points, known, tangents[:, moving] if slopes else None, spins)
+        rho, chi0 = known(FRACTION), known(CHI0)
+        if rho != 0 or known.moves(FRACTION):
+            self._impurities(points, known, imp)
+            beyond = beyond | (points.temperature <= known(WEISS))
+        constant = self.chi0_part(points)
+        lattice, by_lattice = self._lattice(points, known)
+        parts = {
+            "spins": (1 - rho) * spins.value,
+            "impurities": rho * imp.value + np.zeros(len(out)),
+            "chi0": chi0 * constant,
+            "lattice": lattice,
+        }
+        bare = sum(parts.values(), np.zeros(len(out)))
+        if slopes:
+            out[:, moving] += (1 - rho) * spins.along.T
+            for role, slope in spins.slopes.items():
+                add(known.name(role), (1 - rho) * slope)
+            for role, slope in imp.slopes.items():
+                add(known.name(role), rho * slope)
+            add(known.name(FRACTION), imp.value - spins.value)
+            add(known.name(CHI0), constant)
+            for name, slope in by_lattice.items():
+                add(name, slope)
+        scale = known.scale
+        if slopes:
+            out *= scale
+            for name in points.scales:
+                add(name, bare * (scale / values.value[name]))
+        return Prediction(
+            bare * scale, out, {name: part * scale for name, part in parts.items()}, beyond
+        )
 
     def chi0_part(self, points: Points) -> Vector:
         """The quantity that chi0 = 1, in the unit of the parameter, makes."""
-        per = self._per(points) * self.chi0_to_si
+        name = points.names.get(CHI0, CHI0)
+        per = self._per(points) * self.chi0_to_si.get(name, self.chi0_to_si[CHI0])
         if points.quantity == "susceptibility":
             return np.full(len(points.temperature), per)
         if points.quantity == "chi_T":
@@ -252,38 +218,144 @@ class Forward:
     def _per(self, points: Points) -> float:
         return self.per_formula if points.per == "formula" else 1.0
 
-    def _parts(
-        self, points: Points, table: LevelTable, scale: float, g: float
-    ) -> tuple[Vector, Vector]:
-        """The quantity if all ions were in clusters, and if all were free; each (n,)."""
-        check_available(points, table.resolved)
-        temperature = points.temperature / self.kelvin
-        zeeman = g * self.tesla * points.field
-        cluster = _cluster_moments(table, temperature / scale, zeeman / scale)
-        ions = _free_moments(self.spin_shares, temperature, zeeman)
-        return (
-            self._natural_to_si(points, cluster, g),
-            self._natural_to_si(points, ions, g),
-        )
+    def _tangents(self, values: Values, n_free: int) -> Vector:
+        """∂c_p/∂θ_k, (P, n_free)."""
+        names = tuple(self.model.couplings)
+        if not names:
+            return np.empty((0, n_free))
+        return np.array([values.slope[name] for name in names], dtype=np.float64)
 
-    def _natural_to_si(self, points: Points, natural: Sequence[Vector], g: float) -> Vector:
-        """From (C/k_B, ⟨M⟩, variance of M) per ion to the quantity per mole."""
-        heat, moment, variance = natural
+    def _spins(
+        self, points: Points, known: _Known, tangents: Vector | None, out: _Part
+    ) -> NDArray[np.bool_]:
+        """The part of the clusters' spins; where they would order."""
+        c = self.couplings(known.values)
+        t = points.temperature / self.kelvin
+        sums = self._sums(c, tangents, t)
+        check_available(points, self.cache.resolved)
+        g, a = known(G), self.bond_factor * known(INTERCLUSTER)
+        h = g * self.tesla * points.field
+        n = len(self.model.sites)
+        ordered = np.zeros(len(t), dtype=bool)
+        if a != 0 or known.moves(INTERCLUSTER):
+            largest = float(self.model.spins.mean())
+            found, ordered = coupled_clusters(sums.at, t, h, n, a, largest)
+        else:
+            found = lone_clusters(sums.at(h), t, n)
+        self._to_si(points, found, g, G, out)
+        if known.moves(INTERCLUSTER):
+            by_a = self._quantity(points, found.by_extra, g)
+            out.slopes[INTERCLUSTER] = self.bond_factor * by_a
+        return ordered
+
+    def _sums(self, c: Vector, tangents: Vector | None, t: Vector) -> PointSums | DifferenceSums:
+        if tangents is not None and tangents.size and not self.cache.exact:
+            return DifferenceSums(self.cache, c, tangents, t)
+        found, scale = self.cache.spectrum(c)
+        table = found.scaled(scale)
+        if tangents is None or not tangents.size or found.slopes is None:
+            return PointSums(table, t)
+        return PointSums(table, t, tangents.T @ found.slopes)
+
+    def _impurities(self, points: Points, known: _Known, out: _Part) -> None:
+        role = IMPURITY_G if known.has(IMPURITY_G) else G
+        g = known(role)
+        spin = self.impurity_spin.get(known.name(FRACTION), np.nan)
+        shares = self.spin_shares if np.isnan(spin) else ((spin, 1.0),)
+        t = points.temperature / self.kelvin
+        h = g * self.tesla * points.field
+        found = free_ions(shares, t, h, known(WEISS) / self.kelvin)
+        self._to_si(points, found, g, role, out)
+        out.slopes[WEISS] = self._quantity(points, found.by_extra, g) / self.kelvin
+
+    def _to_si(self, points: Points, found: Response, g: float, role: str, out: _Part) -> None:
+        """From natural values per ion to the quantity per mole, with its slopes along the
+        couplings and by g, directly and through the field's energy."""
+        out.value = self._quantity(points, found.value, g)
+        out.along = self._quantity(points, found.along, g)
+        through = self._quantity(points, found.by_field, g) * (self.tesla * points.field)
+        # M ∝ g·m, and χ ∝ g² at zero field.
+        direct = np.zeros(len(points.field))
+        if points.quantity == "magnetization":
+            direct = self._quantity(points, found.value, 1.0)
+        elif points.quantity in MAGNETIC:
+            power = np.where(points.field > 0, 1.0, 2.0 * g)
+            direct = power * self._quantity(points, found.value, 1.0)
+        out.slopes[role] = through + direct
+
+    def _quantity(self, points: Points, natural: Natural, g: float) -> Vector:
+        """SI per mole from natural values; linear in them, so slopes go the same way."""
         T, B, per = points.temperature, points.field, self._per(points)
         if points.quantity == "specific_heat":
-            return per * self.gas * heat
+            return per * self.gas * natural.heat
         if points.quantity == "specific_heat_over_T":
-            return per * self.gas * heat / T
+            return per * self.gas * natural.heat / T
         if points.quantity == "magnetization":
-            return per * self.moment * g * moment
+            return per * self.moment * g * natural.moment
         in_field = B > 0
         safe = np.where(in_field, B, 1.0)
         chi = np.where(
             in_field,
-            self.mu_0 * self.moment * g * moment / safe,
-            self.curie * g**2 * variance / T,
+            self.mu_0 * self.moment * g * natural.moment / safe,
+            self.curie * g**2 * natural.chi / self.kelvin,
         )
         return per * (chi * T if points.quantity == "chi_T" else chi)
+
+    def _lattice(self, points: Points, known: _Known) -> tuple[Vector, dict[str, Vector]]:
+        """The lattice's heat and its slopes by Debye and Einstein temperatures and shares."""
+        T = points.temperature
+        zero = np.zeros(len(T))
+        if self.lattice_atoms == 0 or not points.quantity.startswith("specific_heat"):
+            return zero, {}
+        size = 3 * self.lattice_atoms * self.gas * self._per(points)
+        weight = size / T if points.quantity == "specific_heat_over_T" else size + zero
+        smooth, by_debye = debye(T, known(DEBYE))
+        rest, value, slopes = 1.0, zero, {}
+        for temperature, share in einstein_names(known.values.value):
+            f = known(share)
+            mode, by_mode = einstein(T, known(temperature))
+            value = value + f * mode
+            slopes[temperature] = weight * f * by_mode
+            slopes[share] = weight * (mode - smooth)
+            rest -= f
+        slopes[DEBYE] = weight * rest * by_debye
+        return weight * (value + rest * smooth), slopes
+
+
+class _Known:
+    """The values of the roles at one set of points."""
+
+    def __init__(self, points: Points, values: Values) -> None:
+        self.points, self.values = points, values
+
+    def name(self, role: str) -> str:
+        return self.points.names.get(role, role)
+
+    def has(self, role: str) -> bool:
+        return self.name(role) in self.values.value
+
+    def __call__(self, role: str) -> float:
+        value = self.values.value.get(self.name(role), 0.0)
+        # Without a common g only zero-field specific heat is fitted, where g plays no part.
+        return value if np.isfinite(value) else 0.0
+
+    def moves(self, role: str) -> bool:
+        """Whether the role depends on a free parameter."""
+        slope = self.values.slope.get(self.name(role))
+        return slope is not None and bool(np.any(slope))
+
+    @property
+    def scale(self) -> float:
+        return float(np.prod([self.values.value[name] for name in self.points.scales]))
+
+
+class _Part:
+    """A part of the quantity: value (n,), slopes along the couplings (k, n) and by roles (n,)."""
+
+    def __init__(self) -> None:
+        self.value: Vector = np.zeros(1)
+        self.along: Vector = np.empty((0, 1))
+        self.slopes: dict[str, Vector] = {}
 
 
 def check_available(points: Points, resolved: str) -> None:
@@ -297,94 +369,3 @@ def check_available(points: Points, resolved: str) -> None:
             f"{points.quantity}{where} needs a magnetic moment that is conserved along the field, "
             "and this model does not conserve M; fit zero-field specific heat only"
         )
-
-
-def _upside_down(table: LevelTable) -> LevelTable:
-    """The levels of −H, in ascending order if they were."""
-    return replace(
-        table,
-        energy=-table.energy[::-1],
-        weight=table.weight[::-1],
-        twice_spin=table.twice_spin[::-1],
-        twice_m=table.twice_m[::-1],
-    )
-
-
-def _rows(sets: Sequence[Points]) -> list[tuple[slice, Points]]:
-    ends = np.cumsum([len(p.temperature) for p in sets])
-    return [
-        (slice(int(end) - len(p.temperature), int(end)), p)
-        for end, p in zip(ends, sets, strict=True)
-    ]
-
-
-def _saved(c: Vector, tangents: Vector, moving: Sequence[int]) -> tuple[int | None, Vector]:
-    """Which slope the scale gives for free: if c = Σ a_k tangent_k, that with the largest share.
-
-    Returns its index (None where c is not in the span) and the a_k, shape (n_free,).
-    """
-    weight = np.zeros(tangents.shape[1])
-    size = float(np.linalg.norm(c))
-    if size == 0:
-        return None, weight
-    D = tangents[:, moving]
-    length = np.linalg.norm(D, axis=0)
-    a = np.linalg.lstsq(D / length, c, rcond=1e-10)[0]
-    if np.linalg.norm((D / length) @ a - c) > 1e-12 * size:
-        return None, weight
-    weight[list(moving)] = a / length
-    return moving[int(np.argmax(np.abs(a)))], weight
-
-
-def _zero_field_power(points: Points) -> int:
-    """The power of g in the spins' part at B = 0 (a moment at B = 0 vanishes)."""
-    return 2 if points.quantity in MAGNETIC else 0
-
-
-def _five_point(shifted: Callable[[float, float], Vector], s: float, g: float) -> Vector:
-    """d/dx of shifted(s·x, g·x) at x = 0 for a smooth function, error about SMOOTH_STEP**4."""
-    h = SMOOTH_STEP
-    near = shifted(s * h, g * h) - shifted(-s * h, -g * h)
-    far = shifted(2 * s * h, 2 * g * h) - shifted(-2 * s * h, -2 * g * h)
-    return (8 * near - far) / (12 * h)
-
-
-def _cluster_moments(
-    table: LevelTable, temperature: Vector, zeeman: Vector
-) -> tuple[Vector, Vector, Vector]:
-    """(C/k_B, ⟨M⟩, variance of M) per ion at the points (T, h), in the table's energy unit."""
-    n = len(temperature)
-    heat, moment, variance = np.zeros(n), np.zeros(n), np.zeros(n)
-    fields, temperatures = np.unique(zeeman), np.unique(temperature)
-    # One call per field or per temperature, whichever are fewer.
-    by_field = len(fields) <= len(temperatures)
-    for common in fields if by_field else temperatures:
-        at = np.flatnonzero((zeeman if by_field else temperature) == common)
-        fixed = np.array([common])
-        grid = (temperature[at], fixed) if by_field else (fixed, zeeman[at])
-        curves = cluster_curves(table, *grid)
-        heat[at] = np.ravel(curves.specific_heat)
-        if curves.moment is not None and curves.moment_variance is not None:
-            moment[at] = np.ravel(curves.moment)
-            variance[at] = np.ravel(curves.moment_variance)
-    return heat / table.n_sites, moment / table.n_sites, variance / table.n_sites
-
-
-def _free_moments(
-    shares: Sequence[tuple[float, float]], temperature: Vector, zeeman: Vector
-) -> tuple[Vector, Vector, Vector]:
-    """(C/k_B, ⟨M⟩, variance of M) of a mean free ion, each (n,), by the sum over its states."""
-    heat, moment, variance = (np.zeros(len(temperature)) for _ in range(3))
-    x = zeeman / temperature
-    for spin, share in shares:
-        m = np.arange(round(2 * spin) + 1) - spin
-        exponent = m[:, None] * x
-        boltzmann = np.exp(exponent - exponent.max(axis=0))  # of either sign of g
-        p = boltzmann / boltzmann.sum(axis=0)
-        mean = m @ p
-        # About the mean, so that nothing cancels where the ion is saturated.
-        spread = np.sum((m[:, None] - mean) ** 2 * p, axis=0)
-        moment += share * mean
-        variance += share * spread
-        heat += share * spread * x**2
-    return heat, moment, variance

@@ -3,8 +3,10 @@
 from __future__ import annotations
 
 import csv
+import dataclasses
 import math
 import os
+import re
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from pathlib import Path
@@ -13,6 +15,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from thermo.errors import DataError, UnitsError
+from thermo.fit.masks import read_masks
 from thermo.fit.strict import Section, did_you_mean
 from thermo.units import quantity_factor, unit_name
 
@@ -36,6 +39,9 @@ class Measured:
     per mole of ``per``] have shape (n,), as has ``line``, the line of each point in the file.
     ``uncertainty`` is None where the study states none. ``to_si`` takes the file's unit to SI.
     ``direction`` of the field in the model's axes is "z", or "" where the study states none.
+    ``sample`` is the word for what was measured, "" where the study states none; ``scale_error``
+    the relative error all points share (mass), None for none. ``parameter_names`` and ``scales``
+    say which parameters play which roles for the set (fit/roles.py).
     """
 
     name: str
@@ -51,11 +57,25 @@ class Measured:
     n_masked: int
     to_si: float
     direction: str = ""
+    sample: str = ""
+    scale_error: float | None = None
+    parameter_names: Mapping[str, str] = dataclasses.field(default_factory=dict)
+    scales: tuple[str, ...] = ()
 
     @property
     def n_points(self) -> int:
         """Number of points that enter the fit."""
         return len(self.value)
+
+    @property
+    def word(self) -> str:
+        """The set's name as a word, for names of parameters: "chi (run 2)" is "chi_run_2"."""
+        return re.sub(r"\W+", "_", self.name).strip("_")
+
+    @property
+    def own_scale(self) -> str:
+        """The name its own scale would have."""
+        return f"scale_{self.word}"
 
     @property
     def feels_direction(self) -> bool:
@@ -100,7 +120,7 @@ def read_measured(section: Section, folder: Path, reduced: bool) -> Measured:
         section.source,
     )
     roles = {"temperature": "the temperature", "value": "the measured values"}
-    for optional in ("uncertainty", "field"):
+    for optional in ("uncertainty", "field", "flag"):
         if columns.has(optional):
             roles[optional] = f"the {optional}"
     fixed_temperature = section.optional_number(
@@ -133,11 +153,20 @@ def read_measured(section: Section, folder: Path, reduced: bool) -> Measured:
     for key, number in (("relative_uncertainty", relative), ("absolute_uncertainty", absolute)):
         if number is not None and number <= 0:
             raise section.fail(key, f"= {number:g} must be above zero")
-    window = section.interval("range", "[lowest, highest] temperature in K")
+    masks = read_masks(section, "flag" in roles)
+    sample = section.identifier("sample", "a word for the sample, such as A or crystal_2")
+    scale_error = section.optional_number("scale_error", "a fraction such as 0.02")
+    if scale_error is not None and not 0 < scale_error < 1:
+        raise section.fail(
+            "scale_error", f"= {scale_error:g} is no fraction between 0 and 1; give e.g. 0.02"
+        )
     section.close()
 
     rows = _read_rows(folder / file, DELIMITERS[delimiter], header, stated)
-    numbers = {role: _numbers(rows, where, role) for role, where in wanted.items()}
+    numbers = {
+        role: _numbers(rows, where, role) for role, where in wanted.items() if role != "flag"
+    }
+    flags = _texts(rows, wanted["flag"], "flag") if "flag" in wanted else None
     n = len(rows.lines)
     line = np.array(rows.lines, dtype=np.int64)
     value = numbers["value"]
@@ -171,15 +200,7 @@ def read_measured(section: Section, folder: Path, reduced: bool) -> Measured:
             )
     if uncertainty is not None:
         _check_size(rows.path, line, uncertainty * to_si, "uncertainty", "SI units", zero=False)
-    keep = np.ones(n, dtype=bool)
-    if window is not None:
-        keep = (temperature >= window[0]) & (temperature <= window[1])
-        if not keep.any():
-            raise DataError(
-                f"{rows.path}: no overlap of the data, {temperature.min():g} to "
-                f"{temperature.max():g} K, with {section.at('range')} = [{window[0]:g}, "
-                f"{window[1]:g}] K; change the range"
-            )
+    keep = masks.keep(rows.path, temperature, field, flags)
     return Measured(
         name=name,
         file=rows.path,
@@ -194,6 +215,8 @@ def read_measured(section: Section, folder: Path, reduced: bool) -> Measured:
         n_masked=int(n - keep.sum()),
         to_si=to_si,
         direction=direction,
+        sample=sample,
+        scale_error=scale_error,
     )
 
 
@@ -288,25 +311,15 @@ def _split(line: str, delimiter: str, path: str, number: int) -> list[str]:
     return [cell.strip() for cell in row]
 
 
+def _texts(rows: _Rows, where: str | int, role: str) -> list[str]:
+    """One column as it stands, (n,)."""
+    index = _index(rows, where, role)
+    return [row[index] for row in rows.cells]
+
+
 def _numbers(rows: _Rows, where: str | int, role: str) -> Vector:
     """One column as finite numbers, shape (n,)."""
-    width = len(rows.cells[0])
-    if isinstance(where, str):
-        names = rows.header or []
-        if where not in names:
-            shown = ", ".join(repr(name) for name in names[:8]) + ", ..." * (len(names) > 8)
-            raise DataError(
-                f"{rows.path}: there is no column {where!r} for the {role} among {shown}; "
-                + _header_hint(where, names, rows.delimiter)
-            )
-        index = names.index(where)
-    else:
-        index = where
-        if index >= width:
-            raise DataError(
-                f"{rows.path}: column {index + 1} is asked for the {role}, but there are {width}; "
-                "columns count from 1"
-            )
+    index = _index(rows, where, role)
     label = rows.header[index] if rows.header else f"{index + 1}"
     return np.array(
         [
@@ -314,6 +327,26 @@ def _numbers(rows: _Rows, where: str | int, role: str) -> Vector:
             for row, line in zip(rows.cells, rows.lines, strict=True)
         ]
     )
+
+
+def _index(rows: _Rows, where: str | int, role: str) -> int:
+    """Where a column stands, counted from 0."""
+    width = len(rows.cells[0])
+    if isinstance(where, int):
+        if where >= width:
+            raise DataError(
+                f"{rows.path}: column {where + 1} is asked for the {role}, but there are {width}; "
+                "columns count from 1"
+            )
+        return where
+    names = rows.header or []
+    if where not in names:
+        shown = ", ".join(repr(name) for name in names[:8]) + ", ..." * (len(names) > 8)
+        raise DataError(
+            f"{rows.path}: there is no column {where!r} for the {role} among {shown}; "
+            + _header_hint(where, names, rows.delimiter)
+        )
+    return names.index(where)
 
 
 def _header_hint(where: str, names: Sequence[str], delimiter: str) -> str:

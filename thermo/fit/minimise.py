@@ -11,17 +11,15 @@ from numpy.typing import NDArray
 from scipy.optimize import least_squares
 
 from thermo.errors import DataError, StudyError
-from thermo.fit.forward import Forward, Points
+from thermo.fit.forward import Forward, Points, set_points
 from thermo.fit.measured import MAGNETIC
-from thermo.fit.parameters import CHI0, Parameters
+from thermo.fit.parameters import Parameters
+from thermo.fit.roles import CHI0
 from thermo.fit.starts import FOLLOWED, further_starts, suspicious
 from thermo.fit.study import Study
 
 Vector = NDArray[np.float64]
 
-# Relative steps of the couplings' differences: one-sided on the way, two-sided at the end.
-STEP_ON_THE_WAY = 1e-6
-STEP_AT_THE_END = 1e-4
 MAX_EVALUATIONS = 300
 # Relative tolerances of cost, step and gradient: tight, since an evaluation without a solve is
 # cheap and rounding in the levels is about 1e-14.
@@ -46,7 +44,8 @@ SINGULAR = 1e-6
 
 @dataclass(eq=False)
 class Problem:
-    """Residuals (observed less predicted, over the uncertainty) of a study."""
+    """Residuals (observed less predicted, over the uncertainty) of a study's N points, then
+    those of its priors (what was known less the value, over its error)."""
 
     parameters: Parameters
     forward: Forward
@@ -58,46 +57,55 @@ class Problem:
     progress: Callable[[float, str], None] | None = None
     stage: str = ""
     _first: bool = field(default=True, repr=False)
-
-    def predict(self, theta: Vector) -> Vector:
-        """All points of all sets in SI, shape (N,)."""
-        self.n_evaluations += 1
-        values = self.parameters.values(theta)
-        return np.concatenate([self.forward.predict(points, values) for points in self.sets])
+    _last: tuple[bytes, Vector, Vector, bool] | None = field(default=None, repr=False)
 
     def residuals(self, theta: Vector) -> Vector:
-        """(observed − predicted)/σ, shape (N,)."""
-        if not np.all(np.isfinite(theta)) or np.abs(theta).max(initial=0.0) > FINITE:
-            raise self.ran_away(theta)
-        try:
-            found = (self.observed - self.predict(theta)) / self.sigma
-        except OverflowError:
-            raise self.ran_away(theta) from None
-        if not (np.abs(found) < FINITE).all():
-            raise self.ran_away(theta)
-        if self.progress is not None:
-            # The number of steps is not known beforehand; this creeps towards the end.
-            done = 1 - 1 / (1 + self.n_evaluations / 10)
-            solves = self.forward.cache.n_solves
-            text = f"chi square {float(found @ found):.6g}, {solves} spectra"
-            self.progress(done, self.stage + text)
-        return found
+        """(observed − predicted)/σ of points and priors, shape (N + priors,)."""
+        return self._at(theta, slopes=self.forward.cache.exact)[0]
 
-    def slopes(self, theta: Vector, final: bool = False) -> Vector:
-        """Derivatives of the residuals by the free parameters, (N, n_free)."""
-        values = self.parameters.values(theta)
-        step = STEP_AT_THE_END if final else STEP_ON_THE_WAY
-        try:
-            jacobian = -self.forward.jacobian(self.sets, values, step, central=final)
-        except OverflowError:
-            raise self.ran_away(theta) from None
-        jacobian /= self.sigma[:, None]
+    def slopes(self, theta: Vector) -> Vector:
+        """Exact derivatives of the residuals by the free parameters, (N + priors, n_free)."""
+        jacobian = self._at(theta, slopes=True)[1]
         if not (np.abs(jacobian) < FINITE).all():
             raise self.ran_away(theta)
         if self._first:
             self._first = False
             self._refuse_idle(theta, jacobian)
         return jacobian
+
+    def _at(self, theta: Vector, slopes: bool) -> tuple[Vector, Vector]:
+        """Residuals and slopes, worked out together (these cost no more solves, if they are
+        exact) and kept for the next question."""
+        key = theta.tobytes()
+        if self._last is not None and self._last[0] == key and not (slopes and not self._last[3]):
+            return self._last[1], self._last[2]
+        if not np.all(np.isfinite(theta)) or np.abs(theta).max(initial=0.0) > FINITE:
+            raise self.ran_away(theta)
+        values = self.parameters.values(theta)
+        try:
+            found = [self.forward.evaluate(points, values, slopes) for points in self.sets]
+        except OverflowError:
+            raise self.ran_away(theta) from None
+        residuals = (self.observed - np.concatenate([f.value for f in found])) / self.sigma
+        jacobian = -np.concatenate([f.slopes for f in found]) / self.sigma[:, None]
+        for p in self.parameters.priors:
+            if p.prior is not None:
+                known, error = p.prior
+                residuals = np.append(residuals, (known - values.value[p.name]) / error)
+                slope = values.slope[p.name][None] / error
+                jacobian = np.vstack([jacobian, -slope[:, : jacobian.shape[1]]])
+        if not (np.abs(residuals) < FINITE).all():
+            raise self.ran_away(theta)
+        if self._last is None or self._last[0] != key:
+            self.n_evaluations += 1
+        self._last = (key, residuals, jacobian, slopes)
+        if self.progress is not None:
+            # The number of steps is not known beforehand; this creeps towards the end.
+            done = 1 - 1 / (1 + self.n_evaluations / 10)
+            solves = self.forward.cache.n_solves
+            text = f"chi square {float(residuals @ residuals):.6g}, {solves} spectra"
+            self.progress(done, self.stage + text)
+        return residuals, jacobian
 
     def ran_away(self, theta: Vector) -> StudyError:
         """The error where the model's points, or their slopes, are no longer usable numbers."""
@@ -120,8 +128,8 @@ class Problem:
         """By how much each free parameter could at all differ, (n_free,); NaN where any size may.
 
         A coupling by itself, its start, the largest coupling or the highest temperature; an
-        auxiliary parameter by what changes a coupling so; χ0 and ρ, which the data depend on
-        linearly, cannot run away.
+        auxiliary parameter by what changes a coupling so; χ0, ρ and their like, which the data
+        depend on linearly or which have limits, cannot run away.
         """
         p = self.parameters
         now, then = p.values(theta), p.values(p.start)
@@ -130,7 +138,11 @@ class Problem:
         found = np.maximum(np.abs(theta), np.abs(p.start))
         names = list(self.forward.model.couplings)
         for k, parameter in enumerate(p.free):
-            if parameter.role in ("chi0", "paramagnetic_fraction"):
+            if parameter.role == "weiss_temperature":
+                found[k] = max(found[k], self.hottest * self.forward.kelvin)
+            elif parameter.role == "intercluster_coupling":
+                found[k] = max(found[k], scale)
+            elif parameter.role not in ("coupling", "auxiliary", "g"):
                 found[k] = math.nan
             elif parameter.role != "g":
                 steep = max((abs(float(now.slope[name][k])) for name in names), default=0.0)
@@ -147,7 +159,7 @@ class Problem:
         values = self.parameters.values(theta)
         largest = float(np.abs(self.forward.couplings(values)).max(initial=0.0))
         for k, parameter in enumerate(self.parameters.free):
-            if parameter.role == "chi0":
+            if parameter.role not in ("coupling", "g", "paramagnetic_fraction", "auxiliary"):
                 continue  # whether it matters was known from the quantities
             reach = max(abs(float(theta[k])), largest if parameter.role == "coupling" else 1.0)
             moved = float(np.linalg.norm(jacobian[:, k])) * reach
@@ -205,7 +217,7 @@ def make_problem(
         else np.full(data.n_points, np.mean(np.abs(data.value)))
         for data in study.sets
     ]
-    sets = tuple(Points(d.quantity, d.temperature, d.field, d.per) for d in study.sets)
+    sets = tuple(set_points(data) for data in study.sets)
     _refuse_negative(study, forward, sets)
     observed = np.concatenate([data.value for data in study.sets])
     return Problem(
@@ -222,10 +234,11 @@ def make_problem(
 def _refuse_negative(study: Study, forward: Forward, sets: tuple[Points, ...]) -> None:
     """Spins have no negative χ, C or M: data below zero throughout need a free χ0."""
     values = study.parameters.values(study.parameters.start)
-    if np.any(values.slope[CHI0]):
-        return
-    chi0 = values.value[CHI0]
     for data, points in zip(study.sets, sets, strict=True):
+        name = points.names.get(CHI0, CHI0)
+        if np.any(values.slope[name]):
+            continue
+        chi0 = values.value[name]
         spins = data.value - chi0 * forward.chi0_part(points)
         error = 0.0 if data.uncertainty is None else 3 * data.uncertainty
         if np.all(spins + error < 0):
@@ -247,7 +260,7 @@ def minimise(problem: Problem, starts: int) -> Minimum:
 def _minimise(problem: Problem, starts: int) -> Minimum:
     end, n_starts, message = _lowest(problem, starts)
     theta, bound, residuals = end.theta, end.bound, end.residuals
-    jacobian = problem.slopes(theta, final=True)
+    jacobian = problem.slopes(theta)
     inside = np.flatnonzero(bound == 0)
     covariance = np.full((len(theta), len(theta)), np.nan)
     part, weak = _covariance(jacobian[:, inside])

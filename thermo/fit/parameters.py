@@ -1,20 +1,32 @@
 """The parameters of a fit: what is free, fixed or tied, and their values with exact slopes.
 
 A fit has the model's couplings (in the model's energy unit), the common ``g``, ``chi0`` and
-``paramagnetic_fraction``, and auxiliary names that exist only to be used in ties (a ratio, say).
+``paramagnetic_fraction``, where the study names them what else surrounds the spins (fit/roles.py),
+and auxiliary names that exist only to be used in ties (a ratio, say).
 """
 
 from __future__ import annotations
 
 import math
-from collections.abc import Iterable, Mapping
+from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
 
 from thermo.errors import StudyError, UnitsError
-from thermo.fit.measured import LARGEST, SMALLEST
+from thermo.fit.measured import LARGEST, SMALLEST, Measured
+from thermo.fit.roles import (
+    CHI0,
+    FRACTION,
+    NUISANCE,
+    check_names,
+    limits_of,
+    natural_value,
+    role_of,
+    unit_of,
+    usual_prior,
+)
 from thermo.fit.strict import Section, did_you_mean
 from thermo.fit.ties import Dual, Tie, order_ties, parse_tie
 from thermo.model.spin_model import SpinModel
@@ -22,17 +34,17 @@ from thermo.units import quantity_factor, unit_name
 
 Vector = NDArray[np.float64]
 
-G, CHI0, FRACTION = "g", "chi0", "paramagnetic_fraction"
-NUISANCE = (G, CHI0, FRACTION)
-
 
 @dataclass(frozen=True)
 class Parameter:
     """One parameter of a study.
 
-    ``role`` is "coupling", "g", "chi0", "paramagnetic_fraction" or "auxiliary"; ``status`` is
-    "free", "fixed" or "tied". ``start`` is the start or fixed value (NaN where tied), in ``unit``.
-    ``to_si`` takes it to SI per mole of ions (chi0 only, whose unit names its mole; 1 otherwise).
+    ``role`` is "coupling", "g", "chi0", "paramagnetic_fraction", another of fit/roles.py, or
+    "auxiliary"; ``status`` is "free", "fixed" or "tied". ``start`` is the start or fixed value
+    (NaN where tied), in ``unit``. ``to_si`` takes it to SI per mole of ions (chi0 only, whose unit
+    names its mole; 1 otherwise). ``prior`` is what is known of it beforehand, (value, error), and
+    ``usual`` says that the study does not state it; ``spin`` is that of the impurities it counts
+    (NaN: the model's ions).
     """
 
     name: str
@@ -44,6 +56,9 @@ class Parameter:
     upper: float = math.inf
     expression: str = ""
     to_si: float = 1.0
+    prior: tuple[float, float] | None = None
+    usual: bool = False
+    spin: float = math.nan
 
 
 @dataclass(frozen=True, eq=False)
@@ -84,6 +99,11 @@ class Parameters:
             raise StudyError(f"{source}: {error}") from None
 
     @property
+    def priors(self) -> tuple[Parameter, ...]:
+        """The parameters that have a prior and are not fixed."""
+        return tuple(p for p in self.all if p.prior is not None and p.status != "fixed")
+
+    @property
     def start(self) -> Vector:
         """Start values of the free parameters, shape (n_free,)."""
         return np.array([p.start for p in self.free], dtype=np.float64)
@@ -111,77 +131,133 @@ class Parameters:
         )
 
 
-def read_parameters(section: Section, model: SpinModel, chi0_per: str = "ion") -> Parameters:
+def read_parameters(
+    section: Section, model: SpinModel, chi0_per: str = "ion", sets: Sequence[Measured] = ()
+) -> Parameters:
     """Read the ``[parameters]`` table; what it does not name stays at the model's value.
 
     ``chi0_per`` is what a mole of chi0 counts, "ion" or "formula", where the table does not say.
+    ``sets`` are the data the parameters serve: their samples and names make names of parameters.
     """
-    names = [*model.couplings, *(name for name in NUISANCE if name not in model.couplings)]
-    for name in NUISANCE:
-        if name in model.couplings:
-            raise StudyError(
-                f"{section.source}: the model has a coupling {name!r}, which is the name of a "
-                "fit parameter; rename the coupling in the model file"
-            )
+    check_names(section, model, sets)
+    names = [*model.couplings, *NUISANCE]
+    names += [d.own_scale for d in sets if d.scale_error is not None]
     names += [name for name in section.content if name not in names]
+    reader = _Reader(model, chi0_per, sets)
     found = []
     for name in names:
         if section.has(name):
             entry = Section(section.content[name], section.at(name), section.source)
-            found.append(_read_one(entry, name, model, chi0_per))
+            found.append(reader.read(entry, name))
         else:
-            found.append(_default(name, model, chi0_per))
+            found.append(reader.default(name))
         _check_sizes(section, found[-1])
     return Parameters(found, section.source)
 
 
-def _default(name: str, model: SpinModel, chi0_per: str) -> Parameter:
-    role = _role(name, model)
-    unit, to_si = _chi0_unit(None, model, chi0_per) if role == CHI0 else (_unit(role, model), 1.0)
-    return Parameter(name, role, "fixed", unit, _natural(name, model), to_si=to_si)
+class _Reader:
+    """Reads one parameter after the other, knowing the model and the data."""
+
+    def __init__(self, model: SpinModel, chi0_per: str, sets: Sequence[Measured]) -> None:
+        self.model, self.chi0_per, self.sets = model, chi0_per, sets
+        self.weighted = all(d.uncertainty is not None for d in sets)
+
+    def default(self, name: str) -> Parameter:
+        """A parameter that the table does not name."""
+        role = role_of(name, self.model, self.sets)
+        unit, to_si = self._unit(None, role)
+        errors = [d.scale_error for d in self.sets if d.own_scale == name]
+        if role == "scale" and errors and errors[0] is not None:
+            return Parameter(
+                name, role, "free", unit, 1.0, *limits_of(role, self.sets), prior=(1.0, errors[0])
+            )
+        start = natural_value(name, role, self.model)
+        return Parameter(name, role, "fixed", unit, start, to_si=to_si)
+
+    def _unit(self, entry: Section | None, role: str) -> tuple[str, float]:
+        if role == CHI0:
+            return _chi0_unit(entry, self.model, self.chi0_per)
+        return unit_of(role, self.model), 1.0
+
+    def read(self, entry: Section, name: str) -> Parameter:
+        """A parameter from its table."""
+        role = role_of(name, self.model, self.sets)
+        unit, to_si = self._unit(entry, role)
+        spin = _spin(entry) if role == FRACTION else math.nan
+        prior = _prior(entry)
+        statuses = [key for key in ("fixed", "tied") if entry.has(key)]
+        bounds = [key for key in ("start", "lower", "upper") if entry.has(key)]
+        if len(statuses) > 1 or (statuses and bounds):
+            keys = [*statuses, *bounds]
+            raise entry.fail(
+                keys[1],
+                f"does not go with {keys[0]}; give fixed, or tied, or start with its bounds",
+            )
+        if statuses == ["tied"]:
+            expression = entry.text("tied", 'an expression such as "0.5*J1"')
+            entry.close()
+            return Parameter(
+                name, role, "tied", unit, math.nan, expression=expression, to_si=to_si,
+                prior=prior, spin=spin,
+            )  # fmt: skip
+        if statuses == ["fixed"]:
+            value = entry.number("fixed", "its value")
+            entry.close()
+            if prior:
+                raise entry.fail("prior", "does not go with fixed; leave one of them out")
+            _check_value(entry, "fixed", value, role)
+            return Parameter(name, role, "fixed", unit, value, to_si=to_si, spin=spin)
+        natural = prior[0] if prior else natural_value(name, role, self.model)
+        default = None if role == "auxiliary" or math.isnan(natural) else natural
+        start = entry.number("start", "a value to start from", default)
+        low, high = limits_of(role, self.sets)
+        lower = entry.number("lower", "a lower bound", low)
+        upper = entry.number("upper", "an upper bound", high)
+        entry.close()
+        usual = None
+        silent = not entry.has("prior") and not {"lower", "upper"} & set(bounds)
+        if silent and self.weighted:
+            usual = usual_prior(role, self.model)
+        if lower < low or upper > high:
+            key, value = ("lower", lower) if lower < low else ("upper", upper)
+            limit = f"{low:g} to {high:g}" if math.isfinite(high) else f"{low:g} upwards"
+            limit = limit if math.isfinite(low) else f"{high:g} downwards"
+            raise entry.fail(key, f"= {value:g} lies outside what {name} can be, {limit}")
+        if lower >= upper:
+            raise entry.fail(
+                "lower", f"= {lower:g} is not below upper = {upper:g}; change one of them"
+            )
+        if not lower <= start <= upper:
+            stated = "start" in entry.content or not bounds
+            raise entry.fail(
+                ("prior" if prior and "start" not in bounds else "start") if stated else "lower",
+                f"puts the start {start:g} outside its bounds, {lower:g} to {upper:g}; "
+                "move the start or the bound",
+            )
+        _check_value(entry, "start", start, role)
+        return Parameter(
+            name, role, "free", unit, start, lower, upper,
+            to_si=to_si, prior=prior or usual, usual=usual is not None, spin=spin,
+        )  # fmt: skip
 
 
-def _read_one(entry: Section, name: str, model: SpinModel, chi0_per: str) -> Parameter:
-    role = _role(name, model)
-    unit, to_si = _chi0_unit(entry, model, chi0_per) if role == CHI0 else (_unit(role, model), 1.0)
-    statuses = [key for key in ("fixed", "tied") if entry.has(key)]
-    bounds = [key for key in ("start", "lower", "upper") if entry.has(key)]
-    if len(statuses) > 1 or (statuses and bounds):
-        keys = [*statuses, *bounds]
-        raise entry.fail(
-            keys[1], f"does not go with {keys[0]}; give fixed, or tied, or start with its bounds"
-        )
-    if statuses == ["tied"]:
-        expression = entry.text("tied", 'an expression such as "0.5*J1"')
-        entry.close()
-        return Parameter(name, role, "tied", unit, math.nan, expression=expression, to_si=to_si)
-    if statuses == ["fixed"]:
-        value = entry.number("fixed", "its value")
-        entry.close()
-        _check_value(entry, "fixed", value, role)
-        return Parameter(name, role, "fixed", unit, value, to_si=to_si)
-    natural = _natural(name, model)
-    default = None if role == "auxiliary" or math.isnan(natural) else natural
-    start = entry.number("start", "a value to start from", default)
-    low = {"g": 0.0, "paramagnetic_fraction": 0.0}.get(role, -math.inf)
-    high = {"paramagnetic_fraction": 1.0}.get(role, math.inf)
-    lower = entry.number("lower", "a lower bound", low)
-    upper = entry.number("upper", "an upper bound", high)
-    entry.close()
-    if lower < low or upper > high:
-        key, value = ("lower", lower) if lower < low else ("upper", upper)
-        limit = f"{low:g} to {high:g}" if math.isfinite(high) else f"{low:g} upwards"
-        raise entry.fail(key, f"= {value:g} lies outside what {name} can be, {limit}")
-    if lower >= upper:
-        raise entry.fail("lower", f"= {lower:g} is not below upper = {upper:g}; change one of them")
-    if not lower <= start <= upper:
-        raise entry.fail(
-            "start" if "start" in entry.content else "lower",
-            f"puts the start {start:g} outside its bounds, {lower:g} to {upper:g}; "
-            "move the start or the bound",
-        )
-    _check_value(entry, "start", start, role)
-    return Parameter(name, role, "free", unit, start, lower, upper, to_si=to_si)
+def _prior(entry: Section) -> tuple[float, float] | None:
+    """[value, error], None where the study says nothing, or false."""
+    if not entry.has("prior") or entry.content["prior"] is False:
+        return None
+    pair = entry.pair("prior", "[value, error], or false for none")
+    if pair[1] <= 0:
+        raise entry.fail("prior", f"has the error {pair[1]:g}, which is not above zero")
+    return pair
+
+
+def _spin(entry: Section) -> float:
+    spin = entry.optional_number("spin", "the impurities' spin, such as 2.5")
+    if spin is None:
+        return math.nan
+    if not 0.5 <= spin <= 10 or 2 * spin != round(2 * spin):
+        raise entry.fail("spin", f"= {spin:g} is no spin of an ion; give 0.5, 1, 1.5 and so on")
+    return spin
 
 
 def _check_sizes(section: Section, p: Parameter) -> None:
@@ -198,30 +274,14 @@ def _check_sizes(section: Section, p: Parameter) -> None:
 
 
 def _check_value(entry: Section, key: str, value: float, role: str) -> None:
-    if role == "g" and value <= 0:
+    if role in ("g", "impurity_g") and value <= 0:
         raise entry.fail(key, f"= {value:g} is no g factor; give one above zero")
+    if role in ("scale", "debye_temperature", "einstein_temperature") and value <= 0:
+        raise entry.fail(key, f"= {value:g} must be above zero")
+    if role == "einstein_share" and not 0 <= value <= 1:
+        raise entry.fail(key, f"= {value:g} is no share of the lattice's modes; give 0 to 1")
     if role == "paramagnetic_fraction" and not 0 <= value <= 1:
         raise entry.fail(key, f"= {value:g} is no fraction; give one from 0 to 1")
-
-
-def _role(name: str, model: SpinModel) -> str:
-    if name in model.couplings:
-        return "coupling"
-    return name if name in NUISANCE else "auxiliary"
-
-
-def _unit(role: str, model: SpinModel) -> str:
-    return model.energy_unit if role == "coupling" else "1"
-
-
-def _natural(name: str, model: SpinModel) -> float:
-    """The value a parameter has if the study says nothing of it."""
-    if name in model.couplings:
-        return float(model.couplings[name])
-    if name == G:
-        g = model.common_g
-        return math.nan if g is None else g
-    return 0.0
 
 
 def _chi0_unit(entry: Section | None, model: SpinModel, per: str) -> tuple[str, float]:

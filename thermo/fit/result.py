@@ -39,7 +39,8 @@ class Estimate:
 
     ``status`` "free", "fixed" or "tied" (then ``expression``); ``at_bound`` −1, 0, 1 for lower,
     none, upper. ``standard_error`` is NaN for a fixed parameter and wherever it would mean
-    nothing; ``reason`` then says why.
+    nothing; ``reason`` then says why. ``prior`` (value, error) is what was known beforehand, and
+    ``usual_prior`` that this is the program's supposition, not the study's.
     """
 
     name: str
@@ -54,6 +55,8 @@ class Estimate:
     at_bound: int
     expression: str
     reason: str
+    prior: tuple[float, float] | None = None
+    usual_prior: bool = False
 
     def __str__(self) -> str:
         """Like "J = -42.00(16) cm-1", with what else there is to know in brackets."""
@@ -173,8 +176,10 @@ class FitResult:
         field: ArrayLike = 0.0,
         per: str = "ion",
         units: str | None = None,
+        sample: str = "",
     ) -> Vector:
-        """The fitted model's curve, χ0 and impurities included.
+        """The fitted model's curve, with all that surrounds the spins (of ``sample``, where the
+        study has several), but no scale error of a measurement.
 
         ``temperature`` [K, above zero] and ``field`` [T, from zero] broadcast against each
         other; the result has their common shape, in ``units`` (default SI) per mole of ``per``
@@ -201,8 +206,17 @@ class FitResult:
         factor = 1.0
         if units is not None:
             factor = quantity_factor(quantity, units, reduced=self.study.reduced)
-        points = Points(quantity, np.ravel(T), np.ravel(B), per)
+        points = Points(quantity, np.ravel(T), np.ravel(B), per, self._names_of(sample))
         return self.forward.predict(points, self.values).reshape(T.shape) / factor
+
+    def _names_of(self, sample: str) -> Mapping[str, str]:
+        for data in self.study.sets:
+            if data.sample == sample:
+                return data.parameter_names
+        if not sample:
+            return {}
+        known = sorted({data.sample for data in self.study.sets if data.sample})
+        raise RangeError(f"sample {sample!r} is unknown; {did_you_mean(sample, known)}")
 
     def to_dataset(self) -> xr.Dataset:
         """The result as a ``fit`` dataset (see thermo.variables), with smooth curves to draw."""
@@ -238,7 +252,7 @@ def make_result(study: Study, problem: Problem, minimum: Minimum) -> FitResult:
     theta, free = minimum.theta, study.parameters.free
     values = study.parameters.values(theta)
     chi_square = float(minimum.residuals @ minimum.residuals)
-    n_points, dof = study.n_points, study.n_points - len(free)
+    n_points, dof = study.n_points, study.degrees_of_freedom
     weighted = study.weighted
     # Without stated uncertainties the weights are only relative: their scale is the scatter.
     scale = 1.0 if weighted else math.sqrt(chi_square / dof)
@@ -266,6 +280,8 @@ def make_result(study: Study, problem: Problem, minimum: Minimum) -> FitResult:
                 at_bound=0 if k is None else int(minimum.bound[k]),
                 expression=p.expression,
                 reason=reason,
+                prior=p.prior if p.status != "fixed" else None,
+                usual_prior=p.usual,
             )
         )
     sets, first = [], 0

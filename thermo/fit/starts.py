@@ -14,7 +14,8 @@ import numpy as np
 from numpy.typing import NDArray
 
 from thermo.fit.forward import Points
-from thermo.fit.parameters import FRACTION, Parameter, Parameters
+from thermo.fit.parameters import Parameter, Parameters
+from thermo.fit.roles import FRACTION
 
 Vector = NDArray[np.float64]
 

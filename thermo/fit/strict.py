@@ -94,6 +94,53 @@ class Section:
             raise self.fail(key, f"= [{low:g}, {high:g}] is not ascending; give {what}")
         return low, high
 
+    def intervals(self, key: str, what: str) -> tuple[tuple[float, float], ...]:
+        """A list of ascending pairs, or a single one; empty where the key is not given."""
+        if not self.has(key):
+            return ()
+        value = self.content[key]
+        if not isinstance(value, Sequence) or isinstance(value, str):
+            raise self.fail(key, f"= {value!r} is not a list; give {what}")
+        items = value if value and all(isinstance(v, Sequence) for v in value) else [value]
+        found = []
+        for item in items:
+            one = Section({key: item}, self.path, self.source).interval(key, what)
+            found += [one] if one is not None else []
+        return tuple(found)
+
+    def words(self, key: str, what: str) -> tuple[str, ...] | None:
+        """A list of texts (or one), None where the key is not given."""
+        if not self.has(key):
+            return None
+        value = self.content[key]
+        items = [value] if isinstance(value, str) else value
+        if (
+            not isinstance(items, Sequence)
+            or not items
+            or not all(isinstance(item, str) for item in items)
+        ):
+            raise self.fail(key, f"= {value!r} is not a list of texts; give {what}")
+        return tuple(str(item).strip() for item in items)
+
+    def identifier(self, key: str, what: str) -> str:
+        """A word of letters, digits and _ that begins with a letter; "" where it is not given."""
+        if not self.has(key):
+            return ""
+        word = self.text(key, what)
+        if not word.isidentifier() or word.startswith("_"):
+            raise self.fail(
+                key, f"= {word!r} is not a word of letters, digits and underscores; give {what}"
+            )
+        return word
+
+    def pair(self, key: str, what: str) -> tuple[float, float]:
+        """Two finite numbers in any order; required."""
+        value = self.raw(key, what)
+        if not isinstance(value, Sequence) or isinstance(value, str) or len(value) != 2:
+            raise self.fail(key, f"= {value!r} is not a pair of numbers; give {what}")
+        first, second = (self._finite(key, item, what) for item in value)
+        return first, second
+
     def close(self) -> None:
         """Refuse whatever key was never asked for."""
         known = sorted(set(self.known))

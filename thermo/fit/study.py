@@ -19,8 +19,8 @@ Every key of a study file (positions in lists count from 0; paths are relative t
                                   (default), or "formula", which holds ions_per_formula of them
                  delimiter        "," (default), ";", "tab", "space" (any number of them)
                  header           true (default): the first row names the columns; or false
-                 columns          required: temperature, value, uncertainty, field, each the
-                                  header of a column or its number from 1; value is required
+                 columns          required: temperature, value, uncertainty, field, flag, each
+                                  the header of a column or its number from 1; value is required
                  temperature      of all rows, instead of its column
                  field            of all rows, instead of its column; default 0, and
                                   required for a magnetization. Above 0 a susceptibility means
@@ -31,19 +31,52 @@ Every key of a study file (positions in lists count from 0; paths are relative t
                                   Left out, a fit of an anisotropic model says what it assumed
                  range            [lowest, highest] temperature to use, in K whatever
                                   the temperature_unit
+                 field_range      [lowest, highest] field to use, in T
+                 leave_out        [[from, to], ...] temperatures not to use, in K
+                 flags            the flags of rows to use, where columns names a flag column;
+                                  left out: rows whose flag is empty or 0
+                 sample           a word; parameters named after it (g_A, chi0_A,
+                                  paramagnetic_fraction_A, weiss_temperature_A, impurity_g_A,
+                                  scale_A) are those of the sets of sample A
+                 scale_error      a relative error that all points share (mass, holder): the set's
+                                  parameter scale_NAME, started at 1 with that error as its prior
                  relative_uncertainty, absolute_uncertainty
                                   of all rows (a fraction; or in units) instead of a column;
                                   every set states its uncertainties, or none does
 
-    [parameters] the model's couplings, g, chi0, paramagnetic_fraction, and names of your own
-                 that ties use. What is left out is fixed at the model's value, or at 0. Each is
+    [parameters] the model's couplings, g, chi0, paramagnetic_fraction, what else surrounds the
+                 spins (below), and names of your own that ties use. What is left out is fixed at
+                 the model's value, or at 0. Each is
                  a table with the keys start, lower, upper: free, from the model's value where
                                   no start is given, without bounds where none are
                  fixed            its value, or
                  tied             an expression of + - * / ( ), numbers and other parameters
+                 prior            [value, error]: what is known beforehand of a free or tied
+                                  parameter (g from resonance); needs stated uncertainties.
+                                  false: not even the usual one (below)
+                 spin             of paramagnetic_fraction only: the impurities' spin; left out,
+                                  they are free ions of the model's own kinds
                  unit             of chi0 only: a unit of susceptibility, default "emu/mol"
                  per              of chi0 only: "ion" or "formula", default that of the magnetic
                                   data sets if they agree, else "ion"
+
+    [lattice_heat]  adds the lattice to specific heats
+                 atoms            required: the fixed number of atoms
+                 per              of which mole: "formula" (default) or "ion"
+
+    profile      names of parameters whose profile intervals are wanted in any case
+
+Parameters of what surrounds the spins; free, without prior and bounds, some have a usual prior:
+
+    weiss_temperature             θ of the impurities, C/(T−θ), in K; usual prior 0 ± 5 K
+    impurity_g                    their g, where it is not the common one; usual prior 2.0 ± 0.1
+    intercluster_coupling         zJ′, the couplings of one ion to those of other clusters added
+                                  up, in the model's energy unit and with its bond_term: these act
+                                  as a mean field (above any order only)
+    scale_NAME                    multiplies the set or sample of that name; usual prior 1 ± 0.05
+    debye_temperature             of [lattice_heat], in K, required with it
+    einstein_temperature, einstein_share; einstein_temperature_2, einstein_share_2; ...
+                                  modes taken from Debye's: their temperature in K and share of all
 
 Units, in any usual spelling (emu mol-1, J/mol/K, A m^2 mol^-1, μB):
 
@@ -66,15 +99,15 @@ from __future__ import annotations
 import os
 import tomllib
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from pathlib import Path
 
-import numpy as np
-
-from thermo.errors import DataError, StudyError, UnavailableError
+from thermo.errors import StudyError
 from thermo.fit.measured import MAGNETIC, Measured, read_measured
-from thermo.fit.parameters import CHI0, G, Parameters, read_parameters
+from thermo.fit.parameters import Parameters, read_parameters
+from thermo.fit.roles import names_for, scales_for
 from thermo.fit.strict import Section
+from thermo.fit.study_checks import check_study
 from thermo.model import read_model
 from thermo.model.spin_model import SpinModel
 
@@ -87,6 +120,8 @@ class Study:
     """What to fit: a model, data sets (already read and in SI units) and parameters.
 
     ``window`` is "auto", "tell" or "off"; ``ranged`` names the sets whose range the study states.
+    ``lattice_atoms`` is the number of atoms per magnetic ion whose lattice has heat, 0 for none;
+    ``asked`` names the parameters whose profile intervals are asked for.
     """
 
     title: str
@@ -97,6 +132,8 @@ class Study:
     parameters: Parameters
     window: str = "auto"
     ranged: frozenset[str] = frozenset()
+    lattice_atoms: float = 0.0
+    asked: tuple[str, ...] = ()
 
     @property
     def reduced(self) -> bool:
@@ -112,6 +149,12 @@ class Study:
     def weighted(self) -> bool:
         """Whether the data state their uncertainties."""
         return all(data.uncertainty is not None for data in self.sets)
+
+    @property
+    def degrees_of_freedom(self) -> int:
+        """Points and priors less free parameters."""
+        parameters = self.parameters
+        return self.n_points + len(parameters.priors) - len(parameters.free)
 
 
 def read_study(source: str | os.PathLike[str] | Mapping[str, object]) -> Study:
@@ -164,6 +207,8 @@ def build_study(content: Content) -> Study:
     raw_data = section.raw("data", "at least one [[data]] table")
     raw_parameters = section.raw("parameters", "a [parameters] table")
     window = section.word("window", WINDOWS, "auto")
+    lattice = section.raw("lattice_heat", "a table") if section.has("lattice_heat") else None
+    asked = section.words("profile", "names of parameters") or ()
     section.close()
 
     if isinstance(raw_model, SpinModel):
@@ -183,14 +228,35 @@ def build_study(content: Content) -> Study:
     # χ0 counts the moles the data do, unless they differ or its own table says otherwise.
     per = {data.per for data in sets if data.quantity in MAGNETIC}
     parameters = read_parameters(
-        Section(raw_parameters, "parameters", name), model, per.pop() if len(per) == 1 else "ion"
+        Section(raw_parameters, "parameters", name),
+        model,
+        per.pop() if len(per) == 1 else "ion",
+        sets,
+    )
+    known = parameters.by_name
+    sets = tuple(
+        replace(data, parameter_names=names_for(data, known), scales=scales_for(data, known))
+        for data in sets
     )
     ranged = frozenset(
         data.name for data, item in zip(sets, raw_data, strict=True) if "range" in item
     )
-    study = Study(title, name, content.text, model, sets, parameters, window, ranged)
-    _check(study)
+    atoms = 0.0 if lattice is None else _atoms(Section(lattice, "lattice_heat", name), model)
+    study = Study(
+        title, name, content.text, model, sets, parameters, window, ranged, atoms, tuple(asked)
+    )
+    check_study(study)
     return study
+
+
+def _atoms(section: Section, model: SpinModel) -> float:
+    """Atoms per magnetic ion that take part in the lattice's heat."""
+    atoms = section.number("atoms", "the number of atoms per ion or formula unit")
+    per = section.word("per", ("ion", "formula"), "formula")
+    section.close()
+    if not 0 < atoms <= 1e6:
+        raise section.fail("atoms", f"= {atoms:g} is no number of atoms; give one above zero")
+    return atoms / (model.ions_per_formula if per == "formula" else 1.0)
 
 
 def _load(path: Path) -> str:
@@ -203,56 +269,3 @@ def _load(path: Path) -> str:
     except (OSError, ValueError) as error:
         reason = getattr(error, "strerror", None) or "its name is not valid"
         raise StudyError(f"{path}: the study cannot be read ({reason})") from None
-
-
-def _check(study: Study) -> None:
-    """What can be known to be wrong before anything is solved."""
-    name, sets, free = study.source, study.sets, study.parameters.free
-    names = [data.name for data in sets]
-    for repeated in (n for n in names if names.count(n) > 1):
-        raise StudyError(f"{name}: two data sets are called {repeated!r}; rename one of them")
-    if not free:
-        raise StudyError(
-            f"{name}: no parameter is free, so there is nothing to fit; "
-            "give at least one a start and bounds instead of a fixed value"
-        )
-    stated = [data.name for data in sets if data.uncertainty is not None]
-    silent = [data.name for data in sets if data.uncertainty is None]
-    if stated and silent:
-        raise StudyError(
-            f"{name}: data set {stated[0]!r} states its uncertainties and {silent[0]!r} does not, "
-            "so they cannot be weighed against each other; give both or neither"
-        )
-    if study.n_points < len(free):
-        raise DataError(
-            f"{name}: {study.n_points} points are in use for {len(free)} free parameters; "
-            "widen the range or fix parameters"
-        )
-    if not study.weighted:
-        for data in sets:
-            if not np.any(data.value):
-                raise DataError(
-                    f"{data.file}: all values are zero, which fixes no scale; "
-                    "state an absolute_uncertainty in every data set"
-                )
-        if study.n_points == len(free):
-            raise DataError(
-                f"{name}: {study.n_points} points without uncertainties leave none to judge the "
-                f"errors of {len(free)} parameters by; give uncertainties or fix a parameter"
-            )
-    magnetic = [data for data in sets if data.quantity in MAGNETIC]
-    felt = [data for data in sets if data.feels_direction]
-    if study.model.common_g is None and felt:
-        raise UnavailableError(
-            f"{name}: data set {felt[0].name!r} needs one g common to all sites and directions, "
-            "but the model's g differs; give the model one g, or fit zero-field specific heat only"
-        )
-    slopes = study.parameters.values(study.parameters.start).slope
-    unfelt = {n for n, by in ((G, felt), (CHI0, magnetic)) if not by}
-    unfelt |= {p.name for p in study.parameters.all if p.role == "auxiliary"}
-    for k, parameter in enumerate(free):
-        if not any(slope[k] for n, slope in slopes.items() if n not in unfelt):
-            raise StudyError(
-                f"{name}: parameters.{parameter.name} is free, but nothing in the data depends "
-                "on it; fix it, or add data that do"
-            )

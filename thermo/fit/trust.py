@@ -18,7 +18,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from thermo.errors import MemoryLimitError, StudyError
-from thermo.fit.forward import Forward, Points
+from thermo.fit.forward import Forward, set_points
 from thermo.fit.measured import Measured
 from thermo.fit.parameters import Parameters
 from thermo.fit.residual_tests import chance
@@ -254,7 +254,7 @@ def find_edges(study: Study, result: FitResult, relative: Relative) -> dict[str,
     relative.forward.chi0_to_si = result.forward.chi0_to_si
     edges = {}
     for data in study.sets:
-        points = Points(data.quantity, data.temperature, data.field, data.per)
+        points = set_points(data)
         own = result.forward.predict(points, result.values)
         other = relative.forward.predict(points, result.values)
         edges[data.name] = lower_edge(data.temperature, (own - other) / error_of(data, result))
