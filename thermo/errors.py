@@ -54,6 +54,10 @@ class FileFormatError(PartitaError):
     exit_code = 4
 
 
+class CheckpointError(FileFormatError):
+    """A checkpoint is another run's, in use, damaged, foreign, or cannot be written."""
+
+
 class MemoryLimitError(PartitaError):
     """The work needs more memory than is allowed; nothing was allocated."""
 
@@ -64,3 +68,9 @@ class SpectrumError(PartitaError):
     """A computed or stored spectrum fails its own check; it is not a result."""
 
     exit_code = 6
+
+
+class WorkerError(PartitaError):
+    """A scheduler or its workers do not answer, or died over the same piece of work."""
+
+    exit_code = 7

@@ -2,10 +2,9 @@
 
 from __future__ import annotations
 
-import math
 import re
 
-from thermo.numbers import SUPERSCRIPTS, plain, with_uncertainty
+from thermo.numbers import SUPERSCRIPTS, duration, plain, with_uncertainty
 
 __all__ = ["duration", "grouped", "plain", "size", "typeset", "with_uncertainty"]
 
@@ -25,27 +24,6 @@ def size(n_bytes: float) -> str:
             return f"{amount:.0f} {unit}" if unit == "B" or amount >= 10 else f"{amount:.1f} {unit}"
         amount /= 1024
     return "far beyond any machine"
-
-
-def duration(seconds: float) -> str:
-    """An estimate of time, rounded as an estimate deserves: about 2 min."""
-    if not math.isfinite(seconds):
-        return "unknown"
-    if seconds < 1:
-        return "under 1 s"
-    years = seconds / (365.25 * 86400)
-    if years > 1000:
-        return "over 1000 years"
-    for limit, step, unit in (
-        (90, 1, "s"),
-        (90 * 60, 60, "min"),
-        (36 * 3600, 3600, "h"),
-        (730 * 86400, 86400, "days"),
-    ):
-        if seconds < limit:
-            amount = seconds / step
-            return f"about {amount:.1f} {unit}" if amount < 3 else f"about {amount:.0f} {unit}"
-    return f"about {years:.1f} years" if years < 3 else f"about {years:.0f} years"
 
 
 def typeset(text: str) -> str:

@@ -1,0 +1,216 @@
+"""Pieces of work through dask.distributed: on other machines, or in processes of this one.
+
+A piece is sent by name (a function of a module and plain arguments), is done again when its
+worker dies, and sets its own number of threads, since a worker's own settings do not reach them.
+"""
+
+from __future__ import annotations
+
+import contextlib
+import logging
+import os
+import shutil
+import signal
+import sys
+import tempfile
+import time
+from collections.abc import Callable, Generator, Iterator, Mapping, Sequence
+from typing import TYPE_CHECKING, Any
+
+from numpy.typing import NDArray
+
+from thermo.errors import PartitaError, UnavailableError, WorkerError
+from thermo.spectrum.threads import blas_threads, thread_count
+
+if TYPE_CHECKING:
+    from thermo.spectrum.executors import Distributed
+
+CONNECT_SECONDS = 10
+CLOSE_SECONDS = 5
+_POLL = 0.1
+_LOOK = 2.0  # seconds between looks at who is working
+
+
+def in_cluster(
+    pieces: Sequence[Any],
+    solve: Callable[[Any], Mapping[str, NDArray[Any]]],
+    executor: Distributed,
+    beat: Callable[[str], None],
+) -> Generator[tuple[int, Mapping[str, NDArray[Any]]], None, None]:
+    """(index, arrays) as pieces finish; ``beat(note)`` is called several times a second.
+
+    Raises UnavailableError without the library, WorkerError where no scheduler answers, it is
+    lost, or a piece takes worker after worker with it.
+    """
+    from thermo.variables import software_version
+
+    _require_library()
+    with _quiet(), _client(executor) as (client, threads):
+        futures, version = {}, software_version()
+        for index, piece in enumerate(pieces):
+            future = client.submit(
+                _task, solve, piece, threads, version, pure=False, priority=-index
+            )
+            futures[future] = index
+        try:
+            for future in _finished(client, futures, beat):
+                index = futures.pop(future)
+                yield index, _result(future, pieces[index].label)
+        finally:
+            with contextlib.suppress(Exception):
+                client.cancel(list(futures))
+
+
+def _task(
+    solve: Callable[[Any], Mapping[str, NDArray[Any]]],
+    piece: Any,
+    threads: int | None,
+    version: str,
+) -> dict[str, NDArray[Any]]:
+    """What a worker does for one piece."""
+    from thermo.variables import software_version
+
+    installed = software_version()
+    if version != installed:
+        import platform
+
+        raise WorkerError(
+            f"a worker on {platform.node()} has version {installed} of this program and "
+            f"{version} asks; install the same version everywhere"
+        )
+    with piece_threads(threads):
+        return dict(solve(piece))
+
+
+@contextlib.contextmanager
+def piece_threads(threads: int | None) -> Iterator[None]:
+    """Bound all thread pools inside a worker; None: its own PARTITA_THREADS, else one."""
+    if threads is None:
+        threads = thread_count() if os.environ.get("PARTITA_THREADS") else 1
+    os.environ["PARTITA_THREADS"] = str(threads)
+    numba = sys.modules.get("numba")
+    if numba is None:
+        os.environ["NUMBA_NUM_THREADS"] = str(threads)
+    else:
+        numba.set_num_threads(min(threads, numba.config.NUMBA_NUM_THREADS))
+    with blas_threads(threads):
+        yield
+
+
+def _require_library() -> None:
+    try:
+        import distributed  # noqa: F401
+    except ImportError:
+        raise UnavailableError(
+            "work beyond this process needs the library dask.distributed, which is not here; "
+            "install partita with its extra: pip install 'partita[distributed]'"
+        ) from None
+
+
+@contextlib.contextmanager
+def _quiet() -> Iterator[None]:
+    """The library's running commentary kept off the terminal; faults arrive as exceptions."""
+    logger = logging.getLogger("distributed")
+    level = logger.level
+    logger.setLevel(logging.CRITICAL + 1)
+    try:
+        yield
+    finally:
+        logger.setLevel(level)
+
+
+@contextlib.contextmanager
+def _client(executor: Distributed) -> Iterator[tuple[Any, int | None]]:
+    """A connected client, and the threads for each piece (None: left to the worker)."""
+    from distributed import Client, LocalCluster
+
+    with contextlib.ExitStack() as stack:
+        threads = None
+        address: Any = executor.address
+        if executor.workers is not None:
+            threads = max(1, thread_count() // executor.workers)
+            # Not in the directory of the user, and gone afterwards.
+            folder = tempfile.mkdtemp(prefix="partita-workers-")
+            stack.callback(shutil.rmtree, folder, ignore_errors=True)
+            address = LocalCluster(
+                n_workers=executor.workers,
+                threads_per_worker=1,
+                processes=True,
+                host="127.0.0.1",
+                dashboard_address=None,
+                local_directory=folder,
+                memory_limit=0,  # planned before the run; a killed worker would only try again
+                silence_logs=logging.CRITICAL + 1,
+            )
+            stack.callback(address.close, timeout=CLOSE_SECONDS)
+        elif "://" not in address:
+            address = f"tcp://{address}"
+        try:
+            client = Client(address, timeout=CONNECT_SECONDS, set_as_default=False)
+        except (OSError, TimeoutError, ValueError) as fault:
+            raise WorkerError(
+                f"no scheduler answers at {executor.address} within {CONNECT_SECONDS} s; check "
+                "the address, and that the scheduler runs and can be reached from here"
+            ) from fault
+        stack.callback(client.close, timeout=CLOSE_SECONDS)
+        if executor.workers is not None:
+            client.register_plugin(_plugin())
+        yield client, threads
+
+
+def _plugin() -> Any:
+    from distributed import WorkerPlugin
+
+    class Uninterrupted(WorkerPlugin):  # type: ignore[misc]
+        """Ctrl-C in a terminal reaches every process; the workers leave it to ours."""
+
+        name = "partita-uninterrupted"
+
+        def setup(self, worker: Any) -> None:
+            signal.signal(signal.SIGINT, signal.SIG_IGN)
+
+    return Uninterrupted()
+
+
+def _finished(
+    client: Any, futures: Mapping[Any, int], beat: Callable[[str], None]
+) -> Iterator[Any]:
+    """Futures as they finish, with a heartbeat while none does."""
+    from distributed import as_completed
+
+    waiting, left = as_completed(list(futures), loop=client.loop), len(futures)
+    looked, note = time.monotonic(), ""
+    while left:
+        batch = waiting.next_batch(block=False)
+        for future in batch:
+            left -= 1
+            yield future
+        if batch:
+            continue
+        if time.monotonic() - looked > _LOOK:
+            looked = time.monotonic()
+            note = "" if client.nthreads() else "no worker has come yet"
+        beat(note)
+        time.sleep(_POLL)
+
+
+def _result(future: Any, label: str) -> Mapping[str, NDArray[Any]]:
+    from distributed import KilledWorker
+
+    if future.status == "finished":
+        result: Mapping[str, NDArray[Any]] = future.result()
+        return result
+    if future.status == "error":
+        fault = future.exception()
+        if isinstance(fault, KilledWorker):
+            raise WorkerError(
+                f"the piece {label} ended {fault.allowed_failures + 1} workers one after the "
+                "other, most likely for lack of memory; run fewer of them on a machine"
+            ) from None
+        if isinstance(fault, ImportError) and not isinstance(fault, PartitaError):
+            raise WorkerError(
+                f"a worker cannot load what it needs ({fault}); install this program, in the same "
+                "version, where the workers run"
+            ) from None
+        raise fault
+    raise WorkerError("the connection to the scheduler was lost; start it again")
