@@ -90,7 +90,7 @@ def calibrate(
     highest = len(moments) - 1
     if not np.any(is_sampled):
         return weight, highest
-    basis = chebyshev.chebvander((energy - center) / scale, highest)
+    basis = chebyshev_values((energy - center) / scale, highest)
     sampled = basis[is_sampled]
     positive = weight[is_sampled] > 0
     r, coefficients = orthonormal(basis, weight, is_sampled, moments)
@@ -117,7 +117,7 @@ def orthonormal(
     """
     missing = chebyshev_moments(moments) - raw_weight @ basis
     r = _triangle(np.sqrt(raw_weight[is_sampled])[:, None] * basis[is_sampled])
-    return r, np.linalg.solve(r.T, missing[: len(r)])
+    return r, np.asarray(np.linalg.solve(r.T, missing[: len(r)]), dtype=np.float64)
 
 
 def _triangle(rows: Array) -> Array:
@@ -128,6 +128,11 @@ def _triangle(rows: Array) -> Array:
     weak = np.flatnonzero(~(diagonal > _DEPENDENT * norm[: len(diagonal)]))
     n = int(weak[0]) if len(weak) else len(diagonal)
     return r[:n, :n]
+
+
+def chebyshev_values(x: Array, highest: int) -> Array:
+    """T_k(x) for k = 0 … highest, (L, highest + 1)."""
+    return np.asarray(chebyshev.chebvander(x, highest), dtype=np.float64)
 
 
 def chebyshev_moments(moments: Array) -> Array:
