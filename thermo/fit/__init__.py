@@ -23,6 +23,7 @@ def fit(
     memory: int | float | str | None = None,
     solver: Solver | None = None,
     starts: int = FURTHER_STARTS,
+    cache: str | os.PathLike[str] | None = None,
 ) -> FitResult:
     """Fit a study: a ``Study``, or what ``read_study`` takes.
 
@@ -30,16 +31,17 @@ def fit(
     limits the diagonalisation, in bytes. ``solver`` replaces the full diagonalisation by anything
     with a ``table(couplings) -> LevelTable`` method. ``starts`` is how many further starts may be
     tried, and only where the first minimum looks like a false one: a parameter at its bound,
-    reduced χ² above 2, residuals of one sign in long runs, or no convergence.
+    reduced χ² above 2, residuals of one sign in long runs, or no convergence. ``cache`` names a
+    folder that keeps every spectrum found, for this fit and later ones of the same cluster.
 
     A periodic cluster that is not ``finite`` is held against another size of its lattice, and by
     default (``window`` of the study) data sets without a stated range are fitted only above the
     temperature where its size shows; see ``thermo.fit.trust``. With a ``solver`` it is not.
 
-    Cost: one diagonalisation for each new direction of the couplings. Changing only their common
-    scale, g, χ0 or the paramagnetic fraction needs none; k independent couplings take k an
-    iteration, and one alone takes one in all. Further starts take one each and those of the
-    iterations of the best three, in doubt some times as many as the first minimum took.
+    Cost: one diagonalisation (with eigenvectors, for the exact slopes) for each new direction of
+    the couplings, and none for their slopes, or for a change of their common scale, g or anything
+    else that surrounds the spins. Further starts take one each and those of the iterations of the
+    best three. A ``solver`` without slopes takes two more for each independent coupling and step.
 
     Raises RangeError, StudyError (no data inside the window of trust, too), DataError, UnitsError,
     ModelError for the input, UnavailableError where the model cannot give what was measured,
@@ -49,9 +51,10 @@ def fit(
         raise RangeError(f"starts = {starts!r} must be a whole number from 0 to 1000")
     study = study if isinstance(study, Study) else read_study(study)
     if solver is not None:  # whose levels no other cluster is known to share
-        return replace(_fit_once(study, solver, progress, starts), window=without_edge(study))
+        found = _fit_once(study, solver, progress, starts, cache)
+        return replace(found, window=without_edge(study))
     full = full_solver(study, memory)
-    return fit_in_window(study, single_fit(full, progress, starts), memory)
+    return fit_in_window(study, single_fit(full, progress, starts, cache), memory)
 
 
 def full_solver(study: Study, memory: int | float | str | None = None) -> Solver:
@@ -65,16 +68,23 @@ def full_solver(study: Study, memory: int | float | str | None = None) -> Solver
 
 
 def single_fit(
-    solver: Solver, progress: Callable[[float, str], None] | None, starts: int
+    solver: Solver,
+    progress: Callable[[float, str], None] | None,
+    starts: int,
+    cache: str | os.PathLike[str] | None = None,
 ) -> FitOnce:
     """Fits of one model's studies by one solver; the second and later ones start once."""
-    return lambda study, again: _fit_once(study, solver, progress, 0 if again else starts)
+    return lambda study, again: _fit_once(study, solver, progress, 0 if again else starts, cache)
 
 
 def _fit_once(
-    study: Study, solver: Solver, progress: Callable[[float, str], None] | None, starts: int
+    study: Study,
+    solver: Solver,
+    progress: Callable[[float, str], None] | None,
+    starts: int,
+    cache: str | os.PathLike[str] | None,
 ) -> FitResult:
     """One fit of all the study's points."""
-    forward = make_forward(study, solver)
+    forward = make_forward(study, solver, cache)
     problem = make_problem(study, forward, progress)
     return make_result(study, problem, minimise(problem, starts))

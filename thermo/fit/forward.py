@@ -14,6 +14,7 @@ Susceptibility measured at a field above zero is M/B.
 from __future__ import annotations
 
 import dataclasses
+import os
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from typing import TYPE_CHECKING
@@ -82,7 +83,9 @@ def set_points(data: Measured) -> Points:
     )
 
 
-def make_forward(study: Study, solver: Solver, cache: str | None = None) -> Forward:
+def make_forward(
+    study: Study, solver: Solver, cache: str | os.PathLike[str] | None = None
+) -> Forward:
     """The forward model of a study; ``cache`` names a folder that keeps its spectra."""
     p = study.parameters.by_name
     return Forward(
@@ -120,7 +123,7 @@ class Forward:
         to_si: Mapping[str, float] | None = None,
         impurity_spin: Mapping[str, float] | None = None,
         lattice_atoms: float = 0.0,
-        cache: str | None = None,
+        cache: str | os.PathLike[str] | None = None,
     ) -> None:
         """``chi0_to_si`` takes the values' chi0 to SI per mole of ions, ``to_si`` those of other
         names; ``impurity_spin`` gives fractions' spins by name (NaN: the model's ions);

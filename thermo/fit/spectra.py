@@ -162,7 +162,10 @@ class _Disk:
         """A kept spectrum, checked against the model like a fresh one; None where there is none
         that is whole, right and has what is asked for."""
         try:
-            with np.load(self._path(direction), allow_pickle=False) as kept:
+            with (
+                self._path(direction).open("rb") as file,
+                np.load(file, allow_pickle=False) as kept,
+            ):
                 kept_direction = kept["direction"]
                 if np.abs(kept_direction - direction).max(initial=0.0) > SAME_DIRECTION:
                     return None
