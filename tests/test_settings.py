@@ -13,7 +13,7 @@ from thermo.spectrum.settings import Settings, check_sampling
 
 
 def test_defaults() -> None:
-    assert check_sampling() == Settings(2, 200, 1, None, None, 6, None)
+    assert check_sampling() == Settings(None, 200, 1, None, None, 6, None)
 
 
 def test_whole_numbers_of_any_library() -> None:
@@ -28,7 +28,7 @@ def test_whole_numbers_of_any_library() -> None:
         ("vectors", 0, "out of range"),
         ("vectors", 2.0, "2.0, which is not a whole number"),
         ("vectors", True, "True"),
-        ("vectors", None, "None"),
+        ("steps", None, "None"),
         ("steps", 1, "1"),
         ("steps", "200", "'200'"),
         ("seed", -1, "-1"),
