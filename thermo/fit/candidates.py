@@ -232,7 +232,7 @@ def compare(
     """Fit every candidate of a study to the same points and say what the data decide.
 
     ``progress``, ``memory`` and ``starts`` as for ``fit``. Cost: one or two fits for each
-    candidate, and two diagonalisations for each free coupling of those left standing.
+    candidate, and two diagonalisations for each left standing.
     Raises what ``fit`` raises, with the candidate's name.
     """
     if isinstance(starts, bool) or not isinstance(starts, int) or not 0 <= starts <= 1000:

@@ -9,7 +9,6 @@ passed over.
 
 from __future__ import annotations
 
-import math
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from itertools import combinations
@@ -23,15 +22,13 @@ from thermo.fit.measured import QUANTITIES
 from thermo.fit.result import FitResult
 from thermo.fit.strict import Section
 from thermo.fit.study import Content
-from thermo.fit.trust import find_relative
+from thermo.fit.trust import find_relative, slopes_of
 from thermo.numbers import plain
 from thermo.units import quantity_factor, unit_name
 
 Vector = NDArray[np.float64]
 
 N_TEMPERATURES, N_FIELDS = 48, 8
-# Differences for the predictions' own uncertainty are taken over this share of a standard error.
-STEP = 0.05
 # Below this many uncertainties no single point decides.
 ENOUGH = 3.0
 # Without a stated one, an instrument's precision is that of the data, but not below this share.
@@ -204,9 +201,9 @@ def propose(
 
     ``standing``: names and fits of two or more candidates. An instrument whose quantity a
     candidate cannot give (a susceptibility without a conserved moment) is passed over.
-    Cost: two diagonalisations for each free coupling, one of each cluster's other size.
+    Cost: one diagonalisation of each cluster and of its other size.
     """
-    relatives = [find_relative(result.study.model, memory) for _, result in standing]
+    relatives = [find_relative(result.study, memory) for _, result in standing]
     found = []
     for instrument in instruments:
         points = instrument.grid()
@@ -219,7 +216,6 @@ def propose(
         trusted = np.ones(len(precision), dtype=bool)
         for (_, result), relative, own in zip(standing, relatives, predicted, strict=True):
             if relative is not None:
-                relative.forward.chi0_to_si = result.forward.chi0_to_si
                 other = relative.forward.predict(points, result.values)
                 trusted &= np.abs(other - own) <= precision
         pairs = list(combinations(range(len(standing)), 2))
@@ -255,20 +251,7 @@ def propose(
 
 def _spread(points: Points, result: FitResult) -> Vector:
     """The standard uncertainty of a fit's prediction, (n,) in SI; held parameters add nothing."""
-    free = result.free_names
-    theta = np.array([result[name].value for name in free])
+    slopes = slopes_of(points, result)
     covariance = np.nan_to_num(result.covariance, nan=0.0)
-    error = np.sqrt(np.diag(covariance))
-    slopes = np.zeros((len(points.temperature), len(free)))
-    for k, width in enumerate(error):
-        step = STEP * float(width)
-        if step == 0 or not math.isfinite(step):
-            continue
-        ends = []
-        for sign in (1, -1):
-            moved = theta.copy()
-            moved[k] += sign * step
-            ends.append(result.forward.predict(points, result.study.parameters.values(moved)))
-        slopes[:, k] = (ends[0] - ends[1]) / (2 * step)
-    variance = np.einsum("ni,ij,nj->n", slopes, covariance, slopes)
+    variance: Vector = np.einsum("ni,ij,nj->n", slopes, covariance, slopes)
     return np.sqrt(np.maximum(variance, 0.0))

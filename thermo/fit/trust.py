@@ -2,9 +2,11 @@
 
 A finite cluster follows the infinite lattice down to where its size shows. The same lattice is
 therefore solved on another cluster as well (a larger one where that is cheap, else a smaller one)
-and both are held against the data: at and above a set's lower edge their predictions differ by so
-little that all its points together notice less than one standard deviation, Σ(Δ/σ)² ≤ 1. No
-fitted parameter can then be off by more than its own standard error for want of size.
+and both are held against the data. At and above a set's lower edge
+- their predictions agree within each point's uncertainty, and
+- all their differences together would move no fitted parameter by more than its standard error:
+  to first order the shift is (JᵀJ)⁻¹Jᵀd, with J the slopes and d the differences, both
+  over the uncertainties. Differences far below the uncertainties still add up.
 """
 
 from __future__ import annotations
@@ -18,15 +20,15 @@ import numpy as np
 from numpy.typing import NDArray
 
 from thermo.errors import MemoryLimitError, StudyError
-from thermo.fit.forward import Forward, set_points
+from thermo.fit.forward import Forward, Points, make_forward, set_points
 from thermo.fit.measured import Measured
 from thermo.fit.parameters import Parameters
 from thermo.fit.residual_tests import chance
 from thermo.fit.result import FitResult
 from thermo.fit.study import Study
+from thermo.fit.window import Window, kelvin, lower_edges, shifts, window_cautions
 from thermo.model.resizing import can_resize, larger, smaller
 from thermo.model.spin_model import SpinModel
-from thermo.numbers import plain
 
 Vector = NDArray[np.float64]
 #: Fits a study; the flag says that it starts where an earlier fit ended.
@@ -45,79 +47,26 @@ LEAST_SCATTER = 1e-3
 HOPELESS = 1e-9
 
 
-@dataclass(frozen=True, eq=False)
-class Window:
-    """Where a fit's cluster can be trusted.
-
-    ``status``: "checked"; "finite" (a molecule), "open" or "listed" (a cluster that is no period
-    of a lattice), all three without an edge; "unknown" (no other size to compare with); "off".
-    ``lower`` [K] holds each data set's edge: 0 where the size shows at no point of it, inf where
-    at all, NaN where not known. ``cut`` [K] is where the fit's points begin because of it, 0
-    where nothing was left out. ``sites`` are those of the cluster fitted and ``other`` those of
-    the one compared with. ``excluded`` holds the points left out, by the name of their set.
-    """
-
-    status: str
-    lower: Mapping[str, float]
-    cut: Mapping[str, float]
-    sites: int
-    other: int
-    excluded: Mapping[str, Measured]
-    unit: str = "K"
-
-    def __str__(self) -> str:
-        """In one or two sentences."""
-        return f"{self._how()} {self._where()}".strip()
-
-    def _how(self) -> str:
-        if self.status == "checked":
-            kind = "larger" if self.other > self.sites else "smaller"
-            return f"The {self.sites}-site cluster was held against a {kind} one of {self.other}."
-        return {
-            "finite": f"The model is a finite molecule of {self.sites} ions: no temperature is "
-            "too low for its size.",
-            "open": f"The {self.sites}-site cluster is open, so it was taken as all there is.",
-            "listed": f"The {self.sites} sites are listed one by one, so the cluster was taken "
-            "as all there is.",
-            "unknown": f"Whether the size of the {self.sites}-site cluster shows is not known: "
-            "the same lattice has no other cluster to compare with.",
-            "off": "Whether the cluster's size shows was not looked at.",
-        }[self.status]
-
-    def _where(self) -> str:
-        if self.status != "checked":
-            return ""
-        told = []
-        for name, edge in self.lower.items():
-            if edge == 0:
-                told.append(f"its size shows at no point of {name!r}")
-            elif math.isinf(edge):
-                told.append(f"its size shows at every point of {name!r}")
-            else:
-                told.append(f"{name!r} can be trusted from {_kelvin(edge, self.unit)} on")
-        text = "; ".join(told)
-        return text[:1].upper() + text[1:] + "."
-
-
 def fit_in_window(study: Study, fit_once: FitOnce, memory: int | float | str | None) -> FitResult:
     """Fit a study above its window's lower edge (``window`` "auto"), or only find that edge.
 
     Raises StudyError where no data are left, and whatever ``fit_once`` raises.
     """
-    relative = None if study.window == "off" else find_relative(study.model, memory)
+    relative = None if study.window == "off" else find_relative(study, memory)
     if relative is None:
         result, window = fit_once(study, False), without_edge(study)
         told = (str(window),) if window.status == "unknown" else ()
         return replace(result, window=window, cautions=(*result.cautions, *told))
     keep = {data.name: np.ones(data.n_points, dtype=bool) for data in study.sets}
     edges: Mapping[str, float] = {}
+    moved: Mapping[str, float] = {}
     first: FitResult | None = None
     for turn in range(TURNS):
         if first is None:
             first = result = fit_once(study, False)
         else:
             result = again(masked(study, keep), result, first, fit_once)
-        edges = find_edges(study, result, relative)
+        edges, moved = find_edges(study, result, relative)
         if study.window != "auto":
             break
         wanted = {
@@ -134,8 +83,10 @@ def fit_in_window(study: Study, fit_once: FitOnce, memory: int | float | str | N
             break
         refuse_if_nothing_is_left(study, wanted, edges, relative.model)
         keep = wanted
-    window = _window(study, keep, edges, relative.model)
-    return replace(result, window=window, cautions=(*result.cautions, *_cautions(study, window)))
+    window = _window(study, keep, edges, moved, relative.model)
+    return replace(
+        result, window=window, cautions=(*result.cautions, *window_cautions(study, window))
+    )
 
 
 def again(study: Study, last: FitResult, first: FitResult, fit_once: FitOnce) -> FitResult:
@@ -166,15 +117,15 @@ class Relative:
     forward: Forward
 
 
-def find_relative(model: SpinModel, memory: int | float | str | None = None) -> Relative | None:
+def find_relative(study: Study, memory: int | float | str | None = None) -> Relative | None:
     """A larger cluster of the lattice where that is cheap, else a smaller one; None for neither."""
     from thermo.spectrum.full import FullSolver
     from thermo.spectrum.planning import time_needed
 
-    if not can_resize(model):
+    if not can_resize(study.model):
         return None
-    bigger = larger(model, CHEAP_STATES)
-    for found in (bigger, smaller(model)):
+    bigger = larger(study.model, CHEAP_STATES)
+    for found in (bigger, smaller(study.model)):
         if found is None:
             continue
         try:
@@ -183,7 +134,7 @@ def find_relative(model: SpinModel, memory: int | float | str | None = None) -> 
             continue
         if found is bigger and time_needed(solver.plan) > CHEAP_SECONDS:
             continue
-        return Relative(found, Forward(found, solver))
+        return Relative(found, make_forward(replace(study, model=found), solver))
     return None
 
 
@@ -209,7 +160,7 @@ def cut_alike(
         cut[data.name] = max(cuts)
         lost = int(np.count_nonzero(data.temperature < max(cuts)))
         if lost:
-            below = f", below {_kelvin(max(cuts), windows[0].unit)},"
+            below = f", below {kelvin(max(cuts), windows[0].unit)},"
             told.append(
                 f"{lost} of {data.n_points} points of {data.name!r}"
                 + (below if math.isfinite(max(cuts)) else "")
@@ -246,19 +197,29 @@ def cut_alike(
     return found, told
 
 
-def find_edges(study: Study, result: FitResult, relative: Relative) -> dict[str, float]:
-    """Each set's lower edge in K at the fitted parameters; see ``Window.lower``.
+def find_edges(
+    study: Study, result: FitResult, relative: Relative
+) -> tuple[dict[str, float], dict[str, float]]:
+    """Each set's lower edge in K at the fitted parameters, and the parameters' shifts by what
+    size is left at and above these edges; see ``Window``.
 
     Cost: one diagonalisation of the other cluster.
     """
-    relative.forward.chi0_to_si = result.forward.chi0_to_si
-    edges = {}
+    temperature, deviation, slopes = [], [], []
     for data in study.sets:
         points = set_points(data)
+        error = error_of(data, result)
         own = result.forward.predict(points, result.values)
         other = relative.forward.predict(points, result.values)
-        edges[data.name] = lower_edge(data.temperature, (own - other) / error_of(data, result))
-    return edges
+        temperature.append(data.temperature)
+        deviation.append((own - other) / error)
+        slopes.append(slopes_of(points, result) / error[:, None])
+    edges = lower_edges(temperature, deviation, slopes)
+    keep = [t >= edge for t, edge in zip(temperature, edges, strict=True)]
+    d = np.concatenate([x[m] for x, m in zip(deviation, keep, strict=True)])
+    J = np.concatenate([x[m] for x, m in zip(slopes, keep, strict=True)])
+    moved = {n: float(x) for n, x in zip(result.free_names, shifts(J, d), strict=True)}
+    return dict(zip((data.name for data in study.sets), edges, strict=True)), moved
 
 
 def error_of(data: Measured, result: FitResult) -> Vector:
@@ -271,15 +232,14 @@ def error_of(data: Measured, result: FitResult) -> Vector:
     return np.full(data.n_points, max(scatter, LEAST_SCATTER) * size)
 
 
-def lower_edge(temperature: Vector, deviation: Vector) -> float:
-    """The lowest temperature from which on upwards Σ deviation² ≤ 1; 0 for all, inf for none."""
-    steps, index = np.unique(temperature, return_inverse=True)
-    share = np.bincount(index, weights=deviation**2)
-    total = np.cumsum(share[::-1])[::-1]
-    good = total <= 1
-    if good.all():
-        return 0.0
-    return float(steps[good][0]) if good.any() else math.inf
+def slopes_of(points: Points, result: FitResult) -> Vector:
+    """Exact slopes of a fit's prediction (SI) by its free parameters, (n, n_free).
+
+    0 for a parameter without a standard error, at a bound say.
+    """
+    known = np.array([math.isfinite(result[name].standard_error) for name in result.free_names])
+    slopes = result.forward.evaluate(points, result.values).slopes
+    return np.where(known, slopes, 0.0)
 
 
 def masked(study: Study, keep: Mapping[str, NDArray[np.bool_]]) -> Study:
@@ -295,10 +255,10 @@ def select(data: Measured, mask: NDArray[np.bool_]) -> Measured:
     if mask.all():
         return data
     changed: dict[str, Any] = {}
-    for field in fields(data):
-        value = getattr(data, field.name)
+    for entry in fields(data):
+        value = getattr(data, entry.name)
         if isinstance(value, np.ndarray) and value.shape[:1] == mask.shape:
-            changed[field.name] = value[mask]
+            changed[entry.name] = value[mask]
     lost = int(mask.size - np.count_nonzero(mask))
     return replace(data, **changed, n_masked=data.n_masked + lost)
 
@@ -316,7 +276,7 @@ def refuse_if_nothing_is_left(
     finite = [edge for edge in edges.values() if math.isfinite(edge)]
     sites, unit = len(study.model.sites), study.model.energy_unit
     what = (
-        f"only {left} of {study.n_points} points lie above the {_kelvin(max(finite), unit)}"
+        f"only {left} of {study.n_points} points lie above the {kelvin(max(finite), unit)}"
         if left and finite
         else "all data lie outside the window of trust, at temperatures"
     )
@@ -349,6 +309,7 @@ def _window(
     study: Study,
     keep: Mapping[str, NDArray[np.bool_]],
     edges: Mapping[str, float],
+    moved: Mapping[str, float],
     other: SpinModel,
 ) -> Window:
     excluded = {
@@ -365,32 +326,5 @@ def _window(
     edges = {name: max(edge, cut[name]) for name, edge in edges.items()}
     unit = "" if study.reduced else "K"
     return Window(
-        "checked", edges, cut, len(study.model.sites), len(other.sites), excluded, unit
+        "checked", edges, cut, len(study.model.sites), len(other.sites), excluded, unit, moved
     )  # fmt: skip
-
-
-def _cautions(study: Study, window: Window) -> list[str]:
-    found = []
-    for data in study.sets:
-        edge, cut = window.lower[data.name], window.cut[data.name]
-        below = data.temperature < edge
-        if cut > 0:
-            gone = window.excluded[data.name].n_points
-            found.append(
-                f"{gone} of {data.n_points} points of {data.name!r}"
-                + (f", below {_kelvin(cut, window.unit)}," if math.isfinite(cut) else "")
-                + f" were left out: there the size of the {window.sites}-site cluster shows "
-                f"(held against {window.other} sites)"
-            )
-        elif np.any(below):
-            until = f" below {_kelvin(edge, window.unit)}" if math.isfinite(edge) else ""
-            found.append(
-                f"{int(np.count_nonzero(below))} of {data.n_points} points of {data.name!r}"
-                f"{until} lie where the size of the {window.sites}-site cluster shows (held "
-                f"against {window.other} sites), but were kept as the study asks"
-            )
-    return found
-
-
-def _kelvin(temperature: float, unit: str) -> str:
-    return f"{plain(temperature, 4)} {unit}".strip()
