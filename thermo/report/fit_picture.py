@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import textwrap
+from collections.abc import Sequence
 from typing import Any
 
 import numpy as np
@@ -23,8 +24,13 @@ from thermo.report.quantities import (
 _NO_BREAK = "\u00a0"
 
 
-def draw_fit(fit: xr.Dataset, chosen: list[str], scale: str | None = None) -> Any:
-    """A figure of the data sets named in ``chosen``, or of all; ``scale`` as for ``plot``."""
+def draw_fit(
+    fit: xr.Dataset, chosen: list[str], scale: str | None = None, footer: bool = True
+) -> Any:
+    """A figure of the data sets named in ``chosen``, or of all; ``scale`` as for ``plot``.
+
+    ``footer``: the parameters below it.
+    """
     names = [str(name) for name in fit["dataset_name"].values]
     for name in chosen:
         if name not in names:
@@ -43,7 +49,7 @@ def draw_fit(fit: xr.Dataset, chosen: list[str], scale: str | None = None) -> An
         lower = figure.add_subplot(inner[1], sharex=upper)
         _draw_dataset(upper, lower, fit, index, names[index].replace("$", r"\$"), scale)
     lines = textwrap.wrap(
-        summary(fit), width=66 if columns == 1 else 135,
+        summary(fit) if footer else "", width=66 if columns == 1 else 135,
         break_long_words=False, break_on_hyphens=False,
     )  # fmt: skip
     figure.supxlabel(
@@ -123,6 +129,10 @@ def _draw_dataset(
         lower.plot(x[these], left / sigma[these] if weighted else left / scale, "o",
                    markersize=marker_size - 0.5, markerfacecolor="none", markeredgewidth=0.7,
                    color=colour)  # fmt: skip
+    gone, edge = _untrusted(fit, index) if over == "temperature" else (None, 0.0)
+    if gone is not None and gone[0].size:
+        upper.plot(gone[0], gone[1] / scale, "x", markersize=marker_size, markeredgewidth=0.6,
+                   color=style.GREY, zorder=1, label="left out")  # fmt: skip
     symbol = SYMBOLS.get(str(fit["dataset_quantity"].values[index]), r"\mathrm{value}")
     unit = str(fit["dataset_units"].values[index])
     upper.set_ylabel(axis_label(symbol, unit, power))
@@ -138,6 +148,8 @@ def _draw_dataset(
         lower.set_ylim(-top, top)
     lower.set_xlabel(axis_label(SYMBOLS[over], str(fit[over].attrs.get("units", "1"))))
     low, high = float(x.min()), float(x.max())
+    if gone is not None and gone[0].size:
+        low = min(low, float(gone[0].min()))
     margin = 0.03 * (high - low) or 1.0
     if over == "temperature" and style.wants_log(np.unique(x), scaling):
         upper.set_xlim(low / 1.1, high * 1.1)
@@ -145,9 +157,38 @@ def _draw_dataset(
         upper.tick_params(labelbottom=False)
     else:
         upper.set_xlim(low - margin, high + margin)
+    shade_untrusted((upper, lower), edge)
     if np.all(column["observed"] >= 0):
         upper.set_ylim(bottom=0)
     upper.figure.align_ylabels([upper, lower])
+
+
+def _untrusted(fit: xr.Dataset, index: int) -> tuple[tuple[Any, Any], float]:
+    """The points left out of a data set, as (temperature, value), and its window's lower edge."""
+    gone: tuple[Any, Any] = (np.empty(0), np.empty(0))
+    if "excluded_dataset" in fit:
+        mine = fit["excluded_dataset"].values == index
+        gone = (fit["excluded_temperature"].values[mine], fit["excluded_observed"].values[mine])
+    edge = float(fit["dataset_window"][index]) if "dataset_window" in fit else 0.0
+    return gone, edge
+
+
+def shade_untrusted(panels: Sequence[Axes], edge: float) -> None:
+    """Shade temperatures below the window of trust, up to the panels' end where there is none."""
+    for n, axes in enumerate(panels):
+        low, high = axes.get_xlim()
+        if not edge > low:  # trusted throughout, or not known (NaN)
+            continue
+        end = min(edge, high)
+        axes.axvspan(low, end, facecolor=style.ORANGE, alpha=0.13, linewidth=0, zorder=0)
+        if n == 0:
+            axes.axvline(end, color=style.ORANGE, linewidth=0.8, zorder=1)
+            axes.annotate(
+                "cluster's size shows", (end, 0.03), xycoords=("data", "axes fraction"),
+                xytext=(-2, 0), textcoords="offset points", rotation=90, fontsize=5.5,
+                ha="right", va="bottom", color=style.GREY,
+            )  # fmt: skip
+        axes.set_xlim(low, high)
 
 
 def _abscissa(column: dict[str, Any]) -> str:
