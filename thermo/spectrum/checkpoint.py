@@ -202,12 +202,14 @@ class Checkpoint:
             connection.execute(f"PRAGMA {pragma}").fetchall()
         connection.execute("BEGIN EXCLUSIVE")
         if _single(connection, "SELECT count(*) FROM sqlite_master") == 0:
-            connection.execute("CREATE TABLE identity (text TEXT NOT NULL)")
+            connection.execute(
+                "CREATE TABLE identity (text TEXT NOT NULL, opened INTEGER NOT NULL)"
+            )
             connection.execute(
                 "CREATE TABLE pieces (key TEXT PRIMARY KEY, data BLOB NOT NULL, "
                 "checksum TEXT NOT NULL)"
             )
-            connection.execute("INSERT INTO identity VALUES (?)", (json.dumps(wanted),))
+            connection.execute("INSERT INTO identity VALUES (?, 1)", (json.dumps(wanted),))
             connection.execute(f"PRAGMA application_id = {APPLICATION}")
             connection.execute("COMMIT")
             return
@@ -225,8 +227,9 @@ class Checkpoint:
                 f"the checkpoint {self._name} belongs to another run: {differing}; start as that "
                 f"run was started, {_OTHER}"
             )
-        # Whatever forbids writing should be met now, not when the first piece is finished.
-        connection.execute("UPDATE identity SET text = text")
+        # Whatever forbids writing should be met now, not when the first piece is finished; and
+        # a change, unlike a write of what is there, also clears away a killed run's journal.
+        connection.execute("UPDATE identity SET opened = opened + 1")
 
     def _remove(self) -> None:
         # While the lock is held, so that no other program has begun to use it.
