@@ -53,7 +53,23 @@ _LEVELS = (
        finite=False, note="missing where it is not conserved"),
     _v("sector_real", "block", "i1", None, "arithmetic of the sector's matrix",
        flags=((0, "complex"), (1, "real"))),
+    # Of sampled levels only:
+    _v("raw_weight", "level", "f8", "1", "number of states before the weights were calibrated",
+       required=False, note="equal to weight for an exact level"),
+    _v("sector_trace_group", "block", "i4", "1", "index along trace_group of the sector's group",
+       required=False),
+    _v("trace_magnetic_number", "trace_group", "f8", "1",
+       "absolute magnetic quantum number |M| of the group's states", finite=False, required=False,
+       note="missing where it is not conserved"),
+    _v("trace", "trace_group order", "f8", "1", "exact trace of a power of the scaled energy",
+       required=False, note="of ((H - trace_center)/trace_scale)^order over both signs of M; "
+       "order counts from 0"),
+    _v("trace_order_used", "trace_group", "i8", "1",
+       "highest order of trace that the levels' weights reproduce", required=False),
 )  # fmt: skip
+#: What a sampled levels file must hold on top; a full one holds none of it.
+SAMPLED_VARIABLES = ("raw_weight", "trace_magnetic_number", "trace", "trace_order_used")
+SAMPLED_ATTRS = ("trace_center", "trace_scale", "vectors", "steps", "seed")
 _CURVES = (
     _v("temperature", "temperature", "f8", "@temperature", "temperature"),
     _v("field", "field", "f8", "@field", "magnetic field B"),

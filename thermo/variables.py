@@ -22,7 +22,7 @@ from numpy.typing import ArrayLike, NDArray
 from thermo import units
 from thermo.errors import FileFormatError, UnitsError
 from thermo.variable_tables import REGISTRY as REGISTRY
-from thermo.variable_tables import Variable
+from thermo.variable_tables import SAMPLED_ATTRS, SAMPLED_VARIABLES, Variable
 
 CONVENTIONS = "CF-1.11"
 CONTENT_VERSION = 1
@@ -81,7 +81,10 @@ def build_levels(
 
     ``arrays``: energy (in attrs["energy_unit"]), weight, total_spin, magnetic_number, vector,
     sector, each (L,). ``sectors``: dimension, multiplicity, magnetic_number, real, each (B,)
-    (with or without a leading "sector_"). Raises FileFormatError where they do not fit.
+    (with or without a leading "sector_"). Sampled levels (attrs["method"] = "sampled") add
+    raw_weight (L,), trace_magnetic_number (G,), trace (G, K+1), trace_order_used (G,), and the
+    attributes trace_center and trace_scale (energies), vectors, steps and seed. Raises
+    FileFormatError where they do not fit.
     """
     prefix = "sector_"
     per_block = {k if k.startswith(prefix) else prefix + k: v for k, v in sectors.items()}
@@ -167,7 +170,7 @@ def lookup(kind: str, name: str) -> Variable | None:
         return None
     return Variable(
         name, base.dims, base.dtype, base.units, f"standard error of {base.long_name}",
-        required=False,
+        required=False, finite=False,
     )  # fmt: skip
 
 
@@ -305,6 +308,8 @@ def validate(dataset: xr.Dataset, kind: str) -> None:
         _check(known, found, dataset.attrs)
     if kind == "curves":
         _check_axes(dataset)
+    if kind == "levels":
+        _check_sampled(dataset)
 
 
 def _check(variable: Variable, found: xr.Variable, attrs: Mapping[str, Any]) -> None:
@@ -330,6 +335,19 @@ def _check(variable: Variable, found: xr.Variable, attrs: Mapping[str, Any]) -> 
         raise FileFormatError(f"variable {name} holds values that are not finite")
     if variable.flags and not np.isin(found.values, [v for v, _ in variable.flags]).all():
         raise FileFormatError(f"variable {name} holds a value that is none of its flags")
+
+
+def _check_sampled(dataset: xr.Dataset) -> None:
+    """What only sampled levels have: all of it in their files, none of it in others."""
+    sampled = dataset.attrs["method"] == "sampled"
+    for name in SAMPLED_VARIABLES:
+        if (name in dataset.variables) != sampled:
+            what = "is missing" if sampled else "belongs to sampled levels, which these are not"
+            raise FileFormatError(f"not a Partita levels file: variable {name} {what}")
+    for name in SAMPLED_ATTRS if sampled else ():
+        value = dataset.attrs.get(name)
+        if not isinstance(value, int | float | np.integer | np.floating):
+            raise FileFormatError(f"not a Partita levels file: attribute {name} is no number")
 
 
 def _check_axes(dataset: xr.Dataset) -> None:

@@ -17,9 +17,11 @@ import numpy as np
 from numpy.polynomial import chebyshev
 from numpy.typing import NDArray
 
-from thermo.errors import SpectrumError
+from thermo.errors import FileFormatError, SpectrumError
 
 if TYPE_CHECKING:
+    import xarray as xr
+
     from thermo.model.level_table import LevelTable
 
 # A polynomial this small at all sampled levels, relative to T_k, adds nothing new: there are no
@@ -168,3 +170,66 @@ def calibrated_table(table: LevelTable, sampling: Sampling) -> LevelTable:
                 "they are not a result, solve the model again"
             )
     return replace(table, weight=weight, sampling=replace(sampling, orders=orders))
+
+
+def trace_misfit(table: LevelTable, sampling: Sampling) -> float:
+    """The largest misfit of the traces of T_k(x) that the weights should reproduce, relative to
+    the number of states of the group."""
+    worst = 0.0
+    for g, moments in enumerate(sampling.moments):
+        mine = sampling.group == g
+        x = (table.energy[mine] - sampling.center) / sampling.scale
+        highest = int(sampling.orders[g])
+        found = table.weight[mine] @ chebyshev_values(x, highest)
+        misfit = np.abs(found - chebyshev_moments(moments)[: highest + 1])
+        worst = max(worst, float(misfit.max()) / max(float(moments[0]), 1.0))
+    return worst
+
+
+def sampling_from_dataset(levels: xr.Dataset) -> Sampling | None:
+    """Where the levels of a sampled dataset come from; None for a full one.
+
+    Raises FileFormatError where the parts do not fit together.
+    """
+    if levels.attrs["method"] != "sampled":
+        return None
+    vector = levels["vector"].values.astype(np.int64)
+    sector = levels["sector"].values.astype(np.int64)
+    if np.any((sector < 0) | (sector >= levels.sizes["block"])):
+        raise FileFormatError("a level's sector is none of the file's; solve the model again")
+    group = _group_of_sector(levels)[sector]
+    sampled = vector >= 0
+    pairs = np.stack([sector[sampled], vector[sampled]], axis=1)
+    units, place = np.unique(pairs, axis=0, return_inverse=True)
+    unit = np.full(len(vector), -1, dtype=np.int64)
+    unit[sampled] = place.reshape(-1)
+    raw = np.asarray(levels["raw_weight"].values, dtype=np.float64)
+    orders = levels["trace_order_used"].values.astype(np.int64)
+    moments = np.asarray(levels["trace"].values, dtype=np.float64)
+    center, scale = float(levels.attrs["trace_center"]), float(levels.attrs["trace_scale"])
+    if np.any(raw < 0) or np.any(orders < 0) or np.any(orders >= moments.shape[1]) or not scale > 0:
+        raise FileFormatError(
+            "the weights, traces or orders of the sampled levels are out of range; "
+            "solve the model again"
+        )
+    return Sampling(unit, group, raw, units[:, 0].copy(), moments, center, scale, orders)
+
+
+def _group_of_sector(levels: xr.Dataset) -> Integers:
+    number = levels["trace_magnetic_number"].values
+    if "sector_trace_group" in levels:
+        given: Integers = levels["sector_trace_group"].values.astype(np.int64)
+        if np.all((given >= 0) & (given < len(number))):
+            return given
+    else:
+        # By |M|; where it is not conserved there can be one group only.
+        own = np.abs(levels["sector_magnetic_number"].values)
+        if len(number) == 1 and np.all(np.isnan(own) == np.isnan(number[0])):
+            return np.zeros(len(own), dtype=np.int64)
+        same = own[:, None] == number
+        if np.all(same.sum(axis=1) == 1):
+            return np.argmax(same, axis=1).astype(np.int64)
+    raise FileFormatError(
+        "the sectors of the sampled levels and their groups of traces do not fit together; "
+        "solve the model again"
+    )
