@@ -8,10 +8,11 @@ import time
 import numpy as np
 import pytest
 
-from thermo.errors import MemoryLimitError, RangeError, SpectrumError, UnavailableError
+from thermo.errors import MemoryLimitError, RangeError, SpectrumError
 from thermo.model import read_model
 from thermo.model.level_table import check_levels, table_from_dataset
-from thermo.spectrum import FullSolver, lapack, solve, solve_full, survey
+from thermo.solving import solve
+from thermo.spectrum import FullSolver, lapack, solve_full, survey
 from thermo.spectrum.memory import memory_limit, size_text
 from thermo.spectrum.tasks import run_tasks
 
@@ -129,13 +130,11 @@ def test_survey_tells_what_solve_does() -> None:
     assert 0 < plan.seconds < 60
     large = survey(ring(60))
     assert large.method == "none"
-    assert any("not part of this version" in note for note in large.notes)
+    assert any("sampling needs" in note for note in large.notes)
 
 
-def test_sampling_is_refused_in_one_sentence() -> None:
-    with pytest.raises(UnavailableError, match="not part of this version"):
-        solve(ring(4), method="sampled")
-    with pytest.raises(RangeError, match="'full' or 'auto'"):
+def test_unknown_method_is_refused_in_one_sentence() -> None:
+    with pytest.raises(RangeError, match="'full', 'sampled' or 'auto'"):
         solve(ring(4), method="exact")
 
 

@@ -24,7 +24,8 @@ if TYPE_CHECKING:
     from thermo.model.level_table import read_checked as read
     from thermo.model.level_table import read_levels
     from thermo.report import export_csv, plot
-    from thermo.spectrum import solve, survey
+    from thermo.solving import solve
+    from thermo.spectrum import survey
     from thermo.storage import write_dataset as write
 
 __version__ = "0.1.0"
@@ -53,7 +54,7 @@ _HOMES = {
     "read_levels": ("thermo.model.level_table", "read_levels"),
     "read_model": ("thermo.model", "read_model"),
     "read_study": ("thermo.fit", "read_study"),
-    "solve": ("thermo.spectrum", "solve"),
+    "solve": ("thermo.solving", "solve"),
     "survey": ("thermo.spectrum", "survey"),
     "write": ("thermo.storage", "write_dataset"),
 }

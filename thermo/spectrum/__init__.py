@@ -1,6 +1,6 @@
-"""Sectors in, levels out: planning, full spectra, LAPACK."""
+"""Sectors in, levels out: planning, full and sampled spectra, LAPACK."""
 
-from thermo.spectrum.full import FullSolver, solve, solve_full
-from thermo.spectrum.planning import Plan, SectorPlan, survey
+from thermo.spectrum.full import FullSolver, solve_full
+from thermo.spectrum.surveying import Plan, SectorPlan, survey
 
-__all__ = ["FullSolver", "Plan", "SectorPlan", "solve", "solve_full", "survey"]
+__all__ = ["FullSolver", "Plan", "SectorPlan", "solve_full", "survey"]

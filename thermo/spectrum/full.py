@@ -3,8 +3,6 @@
 from __future__ import annotations
 
 import functools
-import json
-import platform
 from collections.abc import Callable, Iterator, Mapping
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
@@ -12,7 +10,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 from numpy.typing import NDArray
 
-from thermo.errors import RangeError, SpectrumError, UnavailableError
+from thermo.errors import SpectrumError, UnavailableError
 from thermo.hilbert import blocks, encoding, operators
 from thermo.hilbert.orbits import Links, Orbits, find_images, find_links, find_orbits
 from thermo.hilbert.slopes import block_slopes
@@ -21,6 +19,7 @@ from thermo.model.level_table import LevelTable, check_levels, energy_scale
 from thermo.model.spin_model import SpinModel
 from thermo.model.traces import total_matrices
 from thermo.spectrum import lapack, planning
+from thermo.spectrum.labels import levels_dataset
 from thermo.spectrum.memory import memory_limit
 from thermo.spectrum.tasks import run_tasks
 from thermo.spectrum.threads import blas_threads, thread_count
@@ -66,15 +65,18 @@ class FullSolver:
         model: SpinModel,
         memory: int | float | str | None = None,
         generic: bool = True,
+        refuse: bool = True,
         **switches: bool,
     ):
+        """``refuse`` False leaves out the check of memory: single blocks are then solved."""
         self.model = model
         self._generic = generic
         self._limit = memory_limit(memory)
         self.plan = plan_symmetry(model, generic, **switches)
-        planning.refuse_if_too_large(self.plan, self._limit)
+        if refuse:
+            planning.refuse_if_too_large(self.plan, self._limit)
         terms = self.plan.terms
-        self._encoding = encoding.encode(terms.twice_spin)
+        self.encoding = encoding.encode(terms.twice_spin)
         pair, ion = dict(terms.pair), dict(terms.ion)
         n_channels = len(terms.scale)
         if self.plan.conserved.total_spin:
@@ -85,21 +87,22 @@ class FullSolver:
                     pair[i, j] = np.concatenate([old, 2 * np.eye(3)[None]])
             ion = {k: np.concatenate([d, np.zeros((1, 3, 3))]) for k, d in ion.items()}
             n_channels += 1
-        self._moves = operators.move_tables(
-            self._encoding, pair, ion, n_channels, self.plan.conserved.modulus
+        self.moves = operators.move_tables(
+            self.encoding, pair, ion, n_channels, self.plan.conserved.modulus
         )
         self._structures: dict[int, _Structure] = {}
 
-    def _structure(self, magnetic: MagneticSector) -> _Structure:
+    def structure(self, magnetic: MagneticSector) -> _Structure:
+        """Orbits, links and images of one M; kept for the next couplings while small."""
         if magnetic.twice_m in self._structures:
             return self._structures[magnetic.twice_m]
-        code, elements = self._encoding, magnetic.elements
+        code, elements = self.encoding, magnetic.elements
         tables = encoding.element_tables(code, elements.permutations, elements.reversed)
         halves = encoding.half_lists(
             code, self.plan.terms.twice_spin, magnetic.twice_m, self.plan.conserved.modulus
         )
         found = find_orbits(code, halves, tables, magnetic.orbits)
-        links = find_links(code, found, tables, self._moves)
+        links = find_links(code, found, tables, self.moves)
         identity = np.arange(code.n_sites)
         images: dict[bytes, Links] = {}
         for sector in magnetic.sectors:
@@ -165,12 +168,12 @@ class FullSolver:
         if self.plan.conserved.total_spin:
             shift = SHIFT * (high - low) if high > low else 1.0
             values = np.append(values, shift)
-        tables = self._moves.combined(values)
+        tables = self.moves.combined(values)
         costs = {id(s): planning.block_cost(s.dimension, s.real) for s in self.plan.sectors}
         total, done = sum(costs.values()), 0.0
         found: dict[int, NDArray[np.float64]] = {}
         for magnetic in self.plan.magnetic:
-            structure = self._structure(magnetic)
+            structure = self.structure(magnetic)
             for sector, energies in self._blocks(magnetic, structure, tables, slopes):
                 found[id(sector)] = energies
                 done += costs[id(sector)]
@@ -195,7 +198,7 @@ class FullSolver:
             if not group:
                 continue
             tasks = [
-                functools.partial(self._solve_block, s, magnetic, structure, tables, blas, slopes)
+                functools.partial(self.solve_block, s, magnetic, structure, tables, blas, slopes)
                 for s in group
             ]
             with blas_threads(blas):
@@ -219,7 +222,7 @@ class FullSolver:
         together = fitting[surplus:]
         return [s for s in ordered if s not in together], together
 
-    def _solve_block(
+    def solve_block(
         self,
         sector: Sector,
         magnetic: MagneticSector,
@@ -234,7 +237,7 @@ class FullSolver:
         block: NDArray[Any] = np.empty((n, n), np.float64 if sector.real else complex, order="F")
         p = sector.conjugating
         images = structure.images.get(p.tobytes()) if p is not None else None
-        states = (self._encoding, structure.orbits, structure.links, self._moves)
+        states = (self.encoding, structure.orbits, structure.links, self.moves)
         phases, modulus = sector.phases, magnetic.elements.modulus
         blocks.dense_block(*states, *tables, phases, modulus, images, sector.real, block)
         if not slopes:
@@ -344,81 +347,4 @@ def solve_full(
     """
     solver = FullSolver(model, memory, generic=False, **switches)
     table, sector = solver.solve(progress=progress)
-    return levels_dataset(model, solver, table, sector)
-
-
-def levels_dataset(
-    model: SpinModel, solver: FullSolver, table: LevelTable, sector: NDArray[np.int64]
-) -> xr.Dataset:
-    """Label a table of levels with everything its file must say."""
-    import numba
-    import scipy
-
-    from thermo.variables import build_levels
-
-    def halved(twice: NDArray[np.int64]) -> NDArray[np.float64]:
-        return np.where(twice < 0, np.nan, twice / 2)
-
-    plan = solver.plan
-    known_m = plan.conserved.modulus == 0
-    return build_levels(
-        {
-            "energy": table.energy,
-            "weight": table.weight,
-            "total_spin": halved(table.twice_spin),
-            "magnetic_number": halved(table.twice_m),
-            "vector": np.full(len(table.energy), -1),
-            "sector": sector,
-        },
-        {
-            "dimension": [s.dimension for s in plan.sectors],
-            "multiplicity": [float(s.multiplicity) for s in plan.sectors],
-            "magnetic_number": [s.twice_m / 2 if known_m else np.nan for s in plan.sectors],
-            "real": [int(s.real) for s in plan.sectors],
-        },
-        {
-            "title": model.title,
-            "method": "full",
-            "resolved": table.resolved,
-            "model_text": model.text,
-            "model_digest": model.digest,
-            "model_couplings": json.dumps({k: float(v) for k, v in model.couplings.items()}),
-            "energy_unit": model.energy_unit,
-            "bond_term": model.bond_term,
-            "n_sites": len(model.sites),
-            "ions_per_formula": float(model.ions_per_formula),
-            "seed": -1,
-            "versions": json.dumps(
-                {
-                    "python": platform.python_version(),
-                    "numpy": np.__version__,
-                    "scipy": scipy.__version__,
-                    "numba": numba.__version__,
-                }
-            ),
-        },
-    )
-
-
-def solve(
-    model: SpinModel,
-    method: str = "auto",
-    *,
-    memory: int | float | str | None = None,
-    progress: Progress | None = None,
-) -> xr.Dataset:
-    """Solve a model: the levels dataset that ``curves`` takes.
-
-    ``method``: "full" diagonalises every block; "auto" does so when it fits; "sampled" is not
-    part of this version. ``memory``: limit in bytes or as text ("4 GiB"), None for what is
-    free. ``progress(fraction, text)`` is called as blocks finish. Raises MemoryLimitError
-    before allocating a block that does not fit, SpectrumError if the self-check fails.
-    """
-    planning.check_model(model, "solve")
-    if method == "sampled":
-        raise UnavailableError(
-            "sampled spectra are not part of this version; use method='full' on a smaller cluster"
-        )
-    if method not in ("full", "auto"):
-        raise RangeError(f"method {method!r} is unknown; use 'full' or 'auto'")
-    return solve_full(model, memory, progress)
+    return levels_dataset(model, solver.plan, table, sector, {"method": "full", "seed": -1})

@@ -1,19 +1,16 @@
-"""What a full solution costs: memory, time, and whether it fits."""
+"""What a full spectrum costs: memory, time, and whether it fits."""
 
 from __future__ import annotations
 
 import functools
 import time
-from dataclasses import asdict, dataclass
-from typing import Any
 
 import numpy as np
 
 from thermo.errors import MemoryLimitError, ModelError
 from thermo.model.spin_model import SpinModel
-from thermo.spectrum.memory import memory_limit, size_text
-from thermo.spectrum.threads import thread_count
-from thermo.symmetry.sectors import MagneticSector, SymmetryPlan, plan_symmetry
+from thermo.spectrum.memory import size_text
+from thermo.symmetry.sectors import MagneticSector, SymmetryPlan
 
 # Seconds of one eigenvalue call as a n² + b n³ on the machine these were measured on (two
 # cores, tests/bench/test_lapack.py); survey rescales them by a short probe.
@@ -21,68 +18,12 @@ _QUADRATIC, _CUBIC, _COMPLEX_FACTOR = 2.5e-8, 2.7e-11, 3.5
 _PROBE_SIZE, _PROBE_SECONDS = 500, 0.0085
 _LINK_SECONDS = 3e-9
 _START_SECONDS = 0.15
-# Beyond this time a full solution is no longer the sensible choice.
-_PATIENCE_SECONDS = 4 * 3600.0
 # Bytes per representative and move: int32 target, uint16 element.
 _LINK_BYTES = 6
 # Representative, its stabiliser, its slots and weights in the real basis.
 _ORBIT_BYTES = 100
 # The interpreter with every library loaded.
 BASE_BYTES = 230 * 2**20
-
-
-@dataclass(frozen=True)
-class SectorPlan:
-    """One kind of block: how large, how many of the whole space are equal to it."""
-
-    label: str
-    magnetic_number: float
-    dimension: int
-    multiplicity: int
-    real: bool
-
-
-@dataclass(frozen=True, repr=False)
-class Plan:
-    """What solving a model would involve; see ``survey``.
-
-    ``method`` is "full", or "none" where a full solution exceeds memory or patience.
-    ``conserved`` is "total_spin", "magnetic_number", "parity" or "none"; ``group_order``
-    counts the site permutations that leave H unchanged and ``abelian_order`` those used to
-    split it; ``memory_bytes`` is the peak of a full solution, ``seconds`` its time on this
-    machine. ``largest`` is the largest block's dimension.
-    """
-
-    title: str
-    sites: int
-    bonds: int
-    couplings: dict[str, float]
-    energy_unit: str
-    conserved: str
-    group_order: int
-    abelian_order: int
-    spin_reversal: bool
-    sectors: tuple[SectorPlan, ...]
-    n_states: int
-    largest: int
-    memory_bytes: int
-    memory_limit: int
-    seconds: float
-    method: str
-    notes: tuple[str, ...]
-
-    def __str__(self) -> str:
-        """One line; the whole table is the command ``partita survey`` or ``as_dict``."""
-        return (
-            f"Plan({self.title!r}: {self.sites} sites, {len(self.sectors)} blocks, largest "
-            f"{_grouped(self.largest)}, {size_text(self.memory_bytes)}, method {self.method})"
-        )
-
-    __repr__ = __str__
-
-    def as_dict(self) -> dict[str, Any]:
-        """The plan as plain data."""
-        return asdict(self)
 
 
 def move_count(plan: SymmetryPlan) -> int:
@@ -135,7 +76,7 @@ def refuse_if_too_large(plan: SymmetryPlan, limit: int, slopes: bool = False) ->
             "the memory limit"
         )
     largest = max(plan.sectors, key=lambda s: block_bytes(s.dimension, s.real))
-    size = f"{_grouped(largest.dimension)} states ({'real' if largest.real else 'complex'})"
+    size = f"{grouped(largest.dimension)} states ({'real' if largest.real else 'complex'})"
     raise MemoryLimitError(
         f"the largest block has {size}, so the full spectrum "
         f"needs {size_text(needed)} where the limit is {size_text(limit)}; take a smaller "
@@ -144,7 +85,7 @@ def refuse_if_too_large(plan: SymmetryPlan, limit: int, slopes: bool = False) ->
     )
 
 
-def _grouped(count: int) -> str:
+def grouped(count: int) -> str:
     """A count with its thousands apart, in powers of ten beyond all use."""
     return f"{count:,}".replace(",", " ") if count < 10**15 else f"{count:.1e}"
 
@@ -185,72 +126,3 @@ def check_model(model: object, caller: str) -> None:
         raise ModelError(
             f"{caller} takes a model, not {type(model).__name__}; make one with read_model(path)"
         )
-
-
-def survey(model: SpinModel, memory: int | float | str | None = None) -> Plan:
-    """What solving a model would involve, without solving it.
-
-    ``memory``: the limit in bytes or as a text ("4 GiB"); None means what is free now.
-    The symmetry is found, the blocks are counted (exactly, for any size), memory and time are
-    estimated; nothing large is allocated. The time is a forecast for an idle machine, good to
-    about a factor of two.
-    """
-    check_model(model, "survey")
-    limit = memory_limit(memory)
-    symmetry = plan_symmetry(model)
-    needed = memory_needed(symmetry, thread_count())
-    if needed > limit:
-        needed = memory_needed(symmetry)  # then one block after the other
-    seconds = time_needed(symmetry)
-    notes = list(model.notes)
-    method = "full"
-    if needed > limit or seconds > _PATIENCE_SECONDS:
-        method = "none"
-        reason = "memory" if needed > limit else "time"
-        notes.append(
-            f"the full spectrum exceeds the {reason} at hand, and sampled spectra are not part of "
-            "this version; a smaller cluster or more symmetry is the way out"
-        )
-    return Plan(
-        title=model.title,
-        sites=len(model.sites),
-        bonds=len({(min(b.i, b.j), max(b.i, b.j)) for b in model.bonds}),
-        couplings=dict(model.couplings),
-        energy_unit=model.energy_unit,
-        conserved=symmetry.conserved.name,
-        group_order=symmetry.group_order,
-        abelian_order=symmetry.abelian.order,
-        spin_reversal=any(s.parity for s in symmetry.sectors),
-        sectors=tuple(
-            SectorPlan(
-                label=_label(s.twice_m, s.character, s.parity, symmetry),
-                magnetic_number=s.twice_m / 2,
-                dimension=s.dimension,
-                multiplicity=s.multiplicity,
-                real=s.real,
-            )
-            for s in symmetry.sectors
-        ),
-        n_states=model.n_states,
-        largest=max(s.dimension for s in symmetry.sectors),
-        memory_bytes=needed,
-        memory_limit=limit,
-        seconds=seconds,
-        method=method,
-        notes=tuple(notes),
-    )
-
-
-def _label(twice_m: int, character: int, parity: int, plan: SymmetryPlan) -> str:
-    m = f"{twice_m // 2}" if twice_m % 2 == 0 else f"{twice_m}/2"
-    if plan.conserved.modulus == 0:
-        text = f"M = {m}"
-    elif plan.conserved.modulus == 2:
-        text = f"M = {m} modulo 2"
-    else:
-        text = "all M"
-    if plan.abelian.order > 1:
-        text += f", character {character}"
-    if parity:
-        text += ", even" if parity > 0 else ", odd"
-    return text

@@ -21,7 +21,8 @@ LARGEST_SEED = 2**63 - 1
 class Settings:
     """The settings of a sampled spectrum.
 
-    vectors: random vectors R per sector; with ``accuracy``, the number to begin with.
+    vectors: random vectors R per sector; with ``accuracy``, the number to begin with (None: 2,
+    or as many as cost no more where there are few sectors).
     steps: Lanczos steps per vector. seed: of all random vectors, with sector and vector.
     full_below: sectors up to this dimension are solved fully (None: what pays off; 0: none).
     exact_states: most exact states per sector at each edge (None: all that converge; 0: none).
@@ -29,7 +30,7 @@ class Settings:
     accuracy: relative standard error to reach by adding vectors (None: as many as stated).
     """
 
-    vectors: int = 2
+    vectors: int | None = None
     steps: int = 200
     seed: int = 1
     full_below: int | None = None
@@ -43,7 +44,7 @@ class Settings:
         ``accuracy`` is left out: it only decides how many vectors there will be.
         """
         return {
-            "vectors": self.vectors,
+            "vectors": "automatic" if self.vectors is None else self.vectors,
             "steps": self.steps,
             "seed": self.seed,
             "full_below": "automatic" if self.full_below is None else self.full_below,
@@ -54,7 +55,7 @@ class Settings:
 
 # name: (smallest, largest, None allowed, why and what to do)
 _RANGES: Mapping[str, tuple[int, int, bool, str]] = {
-    "vectors": (1, LARGEST_COUNT, False, "two or more give error bars"),
+    "vectors": (1, LARGEST_COUNT, True, "two or more give error bars"),
     "steps": (2, LARGEST_COUNT, False, "100 to 300 are usual"),
     "seed": (0, LARGEST_SEED, False, "the same seed gives the same levels"),
     "full_below": (0, LARGEST_DIMENSION, True, "0 samples every sector"),
@@ -64,7 +65,7 @@ _RANGES: Mapping[str, tuple[int, int, bool, str]] = {
 
 
 def check_sampling(
-    vectors: int = Settings.vectors,
+    vectors: int | None = Settings.vectors,
     steps: int = Settings.steps,
     seed: int = Settings.seed,
     full_below: int | None = Settings.full_below,

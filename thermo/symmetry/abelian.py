@@ -7,6 +7,7 @@ stars and reality are decided without rounding.
 
 from __future__ import annotations
 
+import functools
 from dataclasses import dataclass
 from math import lcm
 
@@ -59,6 +60,7 @@ class AbelianGroup:
         """Whether χ takes the values ±1 only."""
         return bool(np.all(2 * self.exponents[character] % self.modulus == 0))
 
+    @functools.cached_property
     def conjugate(self) -> NDArray[np.int64]:
         """Index of χ* for each χ, shape (|A|,)."""
         rows = {row.tobytes(): k for k, row in enumerate(self.exponents)}
@@ -76,7 +78,7 @@ class AbelianGroup:
         P times complex conjugation then commutes with the block and squares to one, which
         makes the block real symmetric in a suitable basis.
         """
-        target = int(self.conjugate()[character])
+        target = int(self.conjugate[character])
         if target == character:
             return np.arange(self.elements.shape[1])
         for normaliser in self.normalisers:
@@ -97,7 +99,7 @@ class AbelianGroup:
         """
         maps = [n.action for n in self.normalisers]
         if real_hamiltonian:
-            maps.append(self.conjugate())
+            maps.append(self.conjugate)
         seen = np.zeros(self.order, dtype=bool)
         stars = []
         for first in range(self.order):
