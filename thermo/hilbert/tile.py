@@ -42,81 +42,115 @@ Tile = NDArray[np.float64]
 
 # fmt: off
 @fast_kernel
-def _multiply(start, target, code, diagonal, share, F, scale, back, V, U, lo, hi, overlap):
-    """U ← scale·(H V) − back·U on rows lo:hi, and ⟨V, U⟩ of each chunk into ``overlap``."""
-    for chunk in range(lo // CHUNK, (hi + CHUNK - 1) // CHUNK):
-        q0 = q1 = q2 = q3 = q4 = q5 = q6 = q7 = 0.0
-        for row in range(max(lo, chunk * CHUNK), min(hi, (chunk + 1) * CHUNK)):
-            # Unsigned indices need no test for counting from the end.
-            r = np.uintp(row)
-            d = diagonal[r]
-            x0, y0 = d * V[r, 0], d * V[r, 8]
-            x1, y1 = d * V[r, 1], d * V[r, 9]
-            x2, y2 = d * V[r, 2], d * V[r, 10]
-            x3, y3 = d * V[r, 3], d * V[r, 11]
-            x4, y4 = d * V[r, 4], d * V[r, 12]
-            x5, y5 = d * V[r, 5], d * V[r, 13]
-            x6, y6 = d * V[r, 6], d * V[r, 14]
-            x7, y7 = d * V[r, 7], d * V[r, 15]
-            for p in range(start[row], start[row + 1]):
-                t, g = np.uintp(target[p]), np.uintp(code[p])
-                c0, s0, a0, b0 = F[g, 0], F[g, 8], V[t, 0], V[t, 8]
-                c1, s1, a1, b1 = F[g, 1], F[g, 9], V[t, 1], V[t, 9]
-                c2, s2, a2, b2 = F[g, 2], F[g, 10], V[t, 2], V[t, 10]
-                c3, s3, a3, b3 = F[g, 3], F[g, 11], V[t, 3], V[t, 11]
-                c4, s4, a4, b4 = F[g, 4], F[g, 12], V[t, 4], V[t, 12]
-                c5, s5, a5, b5 = F[g, 5], F[g, 13], V[t, 5], V[t, 13]
-                c6, s6, a6, b6 = F[g, 6], F[g, 14], V[t, 6], V[t, 14]
-                c7, s7, a7, b7 = F[g, 7], F[g, 15], V[t, 7], V[t, 15]
-                x0 += c0 * a0 - s0 * b0
-                x1 += c1 * a1 - s1 * b1
-                x2 += c2 * a2 - s2 * b2
-                x3 += c3 * a3 - s3 * b3
-                x4 += c4 * a4 - s4 * b4
-                x5 += c5 * a5 - s5 * b5
-                x6 += c6 * a6 - s6 * b6
-                x7 += c7 * a7 - s7 * b7
-                y0 += c0 * b0 + s0 * a0
-                y1 += c1 * b1 + s1 * a1
-                y2 += c2 * b2 + s2 * a2
-                y3 += c3 * b3 + s3 * a3
-                y4 += c4 * b4 + s4 * a4
-                y5 += c5 * b5 + s5 * a5
-                y6 += c6 * b6 + s6 * a6
-                y7 += c7 * b7 + s7 * a7
-            U[r, 0] = scale[0] * x0 - back[0] * U[r, 0]
-            U[r, 1] = scale[1] * x1 - back[1] * U[r, 1]
-            U[r, 2] = scale[2] * x2 - back[2] * U[r, 2]
-            U[r, 3] = scale[3] * x3 - back[3] * U[r, 3]
-            U[r, 4] = scale[4] * x4 - back[4] * U[r, 4]
-            U[r, 5] = scale[5] * x5 - back[5] * U[r, 5]
-            U[r, 6] = scale[6] * x6 - back[6] * U[r, 6]
-            U[r, 7] = scale[7] * x7 - back[7] * U[r, 7]
-            U[r, 8] = scale[0] * y0 - back[0] * U[r, 8]
-            U[r, 9] = scale[1] * y1 - back[1] * U[r, 9]
-            U[r, 10] = scale[2] * y2 - back[2] * U[r, 10]
-            U[r, 11] = scale[3] * y3 - back[3] * U[r, 11]
-            U[r, 12] = scale[4] * y4 - back[4] * U[r, 12]
-            U[r, 13] = scale[5] * y5 - back[5] * U[r, 13]
-            U[r, 14] = scale[6] * y6 - back[6] * U[r, 14]
-            U[r, 15] = scale[7] * y7 - back[7] * U[r, 15]
-            w = share[r]
-            q0 += w * (V[r, 0] * U[r, 0] + V[r, 8] * U[r, 8])
-            q1 += w * (V[r, 1] * U[r, 1] + V[r, 9] * U[r, 9])
-            q2 += w * (V[r, 2] * U[r, 2] + V[r, 10] * U[r, 10])
-            q3 += w * (V[r, 3] * U[r, 3] + V[r, 11] * U[r, 11])
-            q4 += w * (V[r, 4] * U[r, 4] + V[r, 12] * U[r, 12])
-            q5 += w * (V[r, 5] * U[r, 5] + V[r, 13] * U[r, 13])
-            q6 += w * (V[r, 6] * U[r, 6] + V[r, 14] * U[r, 14])
-            q7 += w * (V[r, 7] * U[r, 7] + V[r, 15] * U[r, 15])
-        overlap[chunk, 0] = q0
-        overlap[chunk, 1] = q1
-        overlap[chunk, 2] = q2
-        overlap[chunk, 3] = q3
-        overlap[chunk, 4] = q4
-        overlap[chunk, 5] = q5
-        overlap[chunk, 6] = q6
-        overlap[chunk, 7] = q7
+def _multiply(start, target, code, diagonal, F, scale, back, V, U, lo, hi):
+    """U ← scale·(H V) − back·U on rows lo:hi."""
+    m0, m1, m2, m3 = scale[0], scale[1], scale[2], scale[3]
+    m4, m5, m6, m7 = scale[4], scale[5], scale[6], scale[7]
+    n0, n1, n2, n3 = back[0], back[1], back[2], back[3]
+    n4, n5, n6, n7 = back[4], back[5], back[6], back[7]
+    for row in range(lo, hi):
+        # Unsigned indices need no test for counting from the end.
+        r = np.uintp(row)
+        d = diagonal[r]
+        x0, y0 = d * V[r, 0], d * V[r, 8]
+        x1, y1 = d * V[r, 1], d * V[r, 9]
+        x2, y2 = d * V[r, 2], d * V[r, 10]
+        x3, y3 = d * V[r, 3], d * V[r, 11]
+        x4, y4 = d * V[r, 4], d * V[r, 12]
+        x5, y5 = d * V[r, 5], d * V[r, 13]
+        x6, y6 = d * V[r, 6], d * V[r, 14]
+        x7, y7 = d * V[r, 7], d * V[r, 15]
+        for p in range(start[row], start[row + 1]):
+            t, g = np.uintp(target[p]), np.uintp(code[p])
+            c0, s0, a0, b0 = F[g, 0], F[g, 8], V[t, 0], V[t, 8]
+            c1, s1, a1, b1 = F[g, 1], F[g, 9], V[t, 1], V[t, 9]
+            c2, s2, a2, b2 = F[g, 2], F[g, 10], V[t, 2], V[t, 10]
+            c3, s3, a3, b3 = F[g, 3], F[g, 11], V[t, 3], V[t, 11]
+            c4, s4, a4, b4 = F[g, 4], F[g, 12], V[t, 4], V[t, 12]
+            c5, s5, a5, b5 = F[g, 5], F[g, 13], V[t, 5], V[t, 13]
+            c6, s6, a6, b6 = F[g, 6], F[g, 14], V[t, 6], V[t, 14]
+            c7, s7, a7, b7 = F[g, 7], F[g, 15], V[t, 7], V[t, 15]
+            x0 += c0 * a0 - s0 * b0
+            x1 += c1 * a1 - s1 * b1
+            x2 += c2 * a2 - s2 * b2
+            x3 += c3 * a3 - s3 * b3
+            x4 += c4 * a4 - s4 * b4
+            x5 += c5 * a5 - s5 * b5
+            x6 += c6 * a6 - s6 * b6
+            x7 += c7 * a7 - s7 * b7
+            y0 += c0 * b0 + s0 * a0
+            y1 += c1 * b1 + s1 * a1
+            y2 += c2 * b2 + s2 * a2
+            y3 += c3 * b3 + s3 * a3
+            y4 += c4 * b4 + s4 * a4
+            y5 += c5 * b5 + s5 * a5
+            y6 += c6 * b6 + s6 * a6
+            y7 += c7 * b7 + s7 * a7
+        x0 = m0 * x0 - n0 * U[r, 0]
+        x1 = m1 * x1 - n1 * U[r, 1]
+        x2 = m2 * x2 - n2 * U[r, 2]
+        x3 = m3 * x3 - n3 * U[r, 3]
+        x4 = m4 * x4 - n4 * U[r, 4]
+        x5 = m5 * x5 - n5 * U[r, 5]
+        x6 = m6 * x6 - n6 * U[r, 6]
+        x7 = m7 * x7 - n7 * U[r, 7]
+        y0 = m0 * y0 - n0 * U[r, 8]
+        y1 = m1 * y1 - n1 * U[r, 9]
+        y2 = m2 * y2 - n2 * U[r, 10]
+        y3 = m3 * y3 - n3 * U[r, 11]
+        y4 = m4 * y4 - n4 * U[r, 12]
+        y5 = m5 * y5 - n5 * U[r, 13]
+        y6 = m6 * y6 - n6 * U[r, 14]
+        y7 = m7 * y7 - n7 * U[r, 15]
+        U[r, 0] = x0
+        U[r, 1] = x1
+        U[r, 2] = x2
+        U[r, 3] = x3
+        U[r, 4] = x4
+        U[r, 5] = x5
+        U[r, 6] = x6
+        U[r, 7] = x7
+        U[r, 8] = y0
+        U[r, 9] = y1
+        U[r, 10] = y2
+        U[r, 11] = y3
+        U[r, 12] = y4
+        U[r, 13] = y5
+        U[r, 14] = y6
+        U[r, 15] = y7
+
+
+@fast_kernel
+def _alignment(share, V, U, lo, hi, out):
+    """Re⟨V, U⟩ on rows lo:hi (one chunk at most) into ``out`` (8,)."""
+    q0 = q1 = q2 = q3 = q4 = q5 = q6 = q7 = 0.0
+    for row in range(lo, hi):
+        r = np.uintp(row)
+        w = share[r]
+        a0, b0, x0, y0 = V[r, 0], V[r, 8], U[r, 0], U[r, 8]
+        a1, b1, x1, y1 = V[r, 1], V[r, 9], U[r, 1], U[r, 9]
+        a2, b2, x2, y2 = V[r, 2], V[r, 10], U[r, 2], U[r, 10]
+        a3, b3, x3, y3 = V[r, 3], V[r, 11], U[r, 3], U[r, 11]
+        a4, b4, x4, y4 = V[r, 4], V[r, 12], U[r, 4], U[r, 12]
+        a5, b5, x5, y5 = V[r, 5], V[r, 13], U[r, 5], U[r, 13]
+        a6, b6, x6, y6 = V[r, 6], V[r, 14], U[r, 6], U[r, 14]
+        a7, b7, x7, y7 = V[r, 7], V[r, 15], U[r, 7], U[r, 15]
+        q0 += w * (a0 * x0 + b0 * y0)
+        q1 += w * (a1 * x1 + b1 * y1)
+        q2 += w * (a2 * x2 + b2 * y2)
+        q3 += w * (a3 * x3 + b3 * y3)
+        q4 += w * (a4 * x4 + b4 * y4)
+        q5 += w * (a5 * x5 + b5 * y5)
+        q6 += w * (a6 * x6 + b6 * y6)
+        q7 += w * (a7 * x7 + b7 * y7)
+    out[0] = q0
+    out[1] = q1
+    out[2] = q2
+    out[3] = q3
+    out[4] = q4
+    out[5] = q5
+    out[6] = q6
+    out[7] = q7
 
 
 @fast_kernel
@@ -132,18 +166,20 @@ def _forbid(rows, mask, U, lo, hi):
 @fast_kernel
 def _orthogonalise(share, step, V, U, lo, hi, square):
     """U ← U − step·V on rows lo:hi (one chunk at most), and ‖U‖² into ``square`` (8,)."""
+    m0, m1, m2, m3 = step[0], step[1], step[2], step[3]
+    m4, m5, m6, m7 = step[4], step[5], step[6], step[7]
     q0 = q1 = q2 = q3 = q4 = q5 = q6 = q7 = 0.0
     for row in range(lo, hi):
         r = np.uintp(row)
         w = share[r]
-        x0, y0 = U[r, 0] - step[0] * V[r, 0], U[r, 8] - step[0] * V[r, 8]
-        x1, y1 = U[r, 1] - step[1] * V[r, 1], U[r, 9] - step[1] * V[r, 9]
-        x2, y2 = U[r, 2] - step[2] * V[r, 2], U[r, 10] - step[2] * V[r, 10]
-        x3, y3 = U[r, 3] - step[3] * V[r, 3], U[r, 11] - step[3] * V[r, 11]
-        x4, y4 = U[r, 4] - step[4] * V[r, 4], U[r, 12] - step[4] * V[r, 12]
-        x5, y5 = U[r, 5] - step[5] * V[r, 5], U[r, 13] - step[5] * V[r, 13]
-        x6, y6 = U[r, 6] - step[6] * V[r, 6], U[r, 14] - step[6] * V[r, 14]
-        x7, y7 = U[r, 7] - step[7] * V[r, 7], U[r, 15] - step[7] * V[r, 15]
+        x0, y0 = U[r, 0] - m0 * V[r, 0], U[r, 8] - m0 * V[r, 8]
+        x1, y1 = U[r, 1] - m1 * V[r, 1], U[r, 9] - m1 * V[r, 9]
+        x2, y2 = U[r, 2] - m2 * V[r, 2], U[r, 10] - m2 * V[r, 10]
+        x3, y3 = U[r, 3] - m3 * V[r, 3], U[r, 11] - m3 * V[r, 11]
+        x4, y4 = U[r, 4] - m4 * V[r, 4], U[r, 12] - m4 * V[r, 12]
+        x5, y5 = U[r, 5] - m5 * V[r, 5], U[r, 13] - m5 * V[r, 13]
+        x6, y6 = U[r, 6] - m6 * V[r, 6], U[r, 14] - m6 * V[r, 14]
+        x7, y7 = U[r, 7] - m7 * V[r, 7], U[r, 15] - m7 * V[r, 15]
         U[r, 0] = x0
         U[r, 1] = x1
         U[r, 2] = x2
@@ -230,8 +266,17 @@ def _overlaps(share, P, U, lo, hi, dots):
 
 
 @fast_kernel
+def _apply(start, target, code, diagonal, share, F, scale, back, V, U, overlap, lo, hi):
+    """U ← scale·(H V) − back·U on rows lo:hi, and Re⟨V, U⟩ of each chunk."""
+    for chunk in range(lo // CHUNK, (hi + CHUNK - 1) // CHUNK):
+        first, last = max(lo, chunk * CHUNK), min(hi, (chunk + 1) * CHUNK)
+        _multiply(start, target, code, diagonal, F, scale, back, V, U, first, last)
+        _alignment(share, V, U, first, last, overlap[chunk])
+
+
+@fast_kernel
 def _advance(share, step, V, U, partners, square, products, lo, hi):
-    """Both of the above for every chunk in rows lo:hi, while it is in the cache."""
+    """The next vector and its overlaps, chunk by chunk, while a chunk is in the cache."""
     for chunk in range(lo // CHUNK, (hi + CHUNK - 1) // CHUNK):
         first, last = max(lo, chunk * CHUNK), min(hi, (chunk + 1) * CHUNK)
         _orthogonalise(share, step, V, U, first, last, square[chunk])
@@ -337,9 +382,9 @@ def lanczos(
         ranges(functools.partial(_advance, share, step, current, other, partners, square, products))
 
     def multiply(scale: Vector, back: Vector, lo: int, hi: int) -> None:
-        _multiply(
+        _apply(
             links.start, links.target, links.code, structure.diagonal, share, phases,
-            scale, back, current, other, lo, hi, overlap,
+            scale, back, current, other, overlap, lo, hi,
         )  # fmt: skip
         _forbid(special, mask, other, lo, hi)
 
