@@ -298,6 +298,17 @@ class Structure:
         return len(self.diagonal)
 
 
+def multiply(
+    structure: Structure, phases: Tile, scale: Vector, back: Vector, V: Tile, U: Tile,
+    lo: int, hi: int,
+) -> None:  # fmt: skip
+    """U ← scale·(H V) − back·U on rows lo:hi, column by column; ``scale``, ``back`` (8,)."""
+    links = structure.links
+    _multiply(
+        links.start, links.target, links.code, structure.diagonal, phases, scale, back, V, U, lo, hi
+    )
+
+
 @dataclass(frozen=True, eq=False)
 class Recursion:
     """Tridiagonal matrices of a tile: ``alpha`` (m, 8), ``beta`` (m, 8) with beta[j] coupling

@@ -154,7 +154,7 @@ class SampledSolver:
         magnetic = self.plan.magnetic[piece.magnetic]
         if piece.kind == "full":
             return self._solve_small(magnetic)
-        shared = self._share(piece.magnetic)
+        shared = self.share(piece.magnetic)
         if piece.kind == "traces":
             return self._solve_traces(magnetic, shared)
         return self._solve_tile(magnetic, shared, piece)
@@ -167,7 +167,7 @@ class SampledSolver:
             if sector.dimension <= _given(self.settings.full_below)
         }
 
-    def _share(self, index: int) -> _Shared:
+    def share(self, index: int) -> _Shared:
         """Orbits and links of one M, built by the first that asks."""
         with self._lock:
             if self._shared is None or self._shared[0] != index:
