@@ -45,6 +45,13 @@ def solve(piece: Piece, seconds: float = 0.0, size: int = 500) -> dict[str, NDAr
     return arrays(piece.number, size)
 
 
+def slow_after(piece: Piece, number: int) -> dict[str, NDArray[Any]]:
+    """Pieces after the given one take as long as a test may."""
+    if piece.number > number:
+        time.sleep(20)
+    return arrays(piece.number)
+
+
 def solve_and_count(piece: Piece, folder: str) -> dict[str, NDArray[Any]]:
     """Leaves a file for each time it is called."""
     name = f"{piece.number}-{time.monotonic_ns()}"

@@ -129,6 +129,8 @@ def _client(executor: Distributed) -> Iterator[tuple[Any, int | None]]:
         address: Any = executor.address
         if executor.workers is not None:
             threads = max(1, thread_count() // executor.workers)
+            # The library leaves settings meant for its workers in this process as well.
+            stack.callback(_restore, dict(os.environ))
             # Not in the directory of the user, and gone afterwards.
             folder = tempfile.mkdtemp(prefix="partita-workers-")
             stack.callback(shutil.rmtree, folder, ignore_errors=True)
@@ -142,7 +144,7 @@ def _client(executor: Distributed) -> Iterator[tuple[Any, int | None]]:
                 memory_limit=0,  # planned before the run; a killed worker would only try again
                 silence_logs=logging.CRITICAL + 1,
             )
-            stack.callback(address.close, timeout=CLOSE_SECONDS)
+            stack.callback(_end, address)
         elif "://" not in address:
             address = f"tcp://{address}"
         try:
@@ -156,6 +158,21 @@ def _client(executor: Distributed) -> Iterator[tuple[Any, int | None]]:
         if executor.workers is not None:
             client.register_plugin(_plugin())
         yield client, threads
+
+
+def _restore(environment: Mapping[str, str]) -> None:
+    for name in set(os.environ) - set(environment):
+        del os.environ[name]
+    os.environ.update(environment)
+
+
+def _end(cluster: Any) -> None:
+    """End our own workers at once: a piece at hand is done again, and would take its time."""
+    for nanny in cluster.workers.values():
+        nanny.auto_restart = False
+        with contextlib.suppress(OSError, TypeError):  # has ended already, or never began
+            os.kill(nanny.pid, signal.SIGKILL)
+    cluster.close(timeout=CLOSE_SECONDS)
 
 
 def _plugin() -> Any:
