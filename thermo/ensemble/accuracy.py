@@ -53,10 +53,10 @@ def worst_error(table: LevelTable, low: float, high: float) -> float:
     """
     temperature = np.geomspace(low, high, _POINTS if high > low else 1)
     field = np.zeros(1)
-    errors = cluster_errors(table, temperature, field)
+    values = cluster_curves(table, temperature, field)
+    errors = cluster_errors(table, temperature, field, values)
     if errors is None:
         return 0.0
-    values = cluster_curves(table, temperature, field)
     worst = 0.0
     for value, error in (
         (values.specific_heat, errors.specific_heat),

@@ -75,6 +75,8 @@ def _group(table: LevelTable) -> _Groups:
     else:
         label = np.zeros(len(table.energy), dtype=np.int64)
     order = np.lexsort((table.energy, label))
+    # A sampled level may stand for nothing, and then cannot be the ground level.
+    order = order[table.weight[order] > 0]
     label = label[order]
     values, start = np.unique(label, return_index=True)
     owner_of_level = np.searchsorted(values, label)

@@ -28,7 +28,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from thermo.ensemble.canonical import ClusterCurves
+from thermo.ensemble.canonical import ClusterCurves, cluster_curves
 from thermo.model.calibration import Sampling, chebyshev_values, orthonormal
 from thermo.model.level_table import LevelTable
 
@@ -37,6 +37,9 @@ Integers = NDArray[np.int64]
 
 # A replicate whose Gram matrix (1 for the full table) has an eigenvalue below this is linearised.
 _SOUND = 1e-6
+# Levels and traces are accurate to these shares of the spectrum's width and of a curve, so no
+# error is smaller, however well the vectors agree.
+_LEVEL_ROUNDING, _CURVE_ROUNDING = 1e-14, 1e-13
 # Probability below +1 standard deviation of a normal distribution.
 _ONE_SIGMA = 0.8413447460685429
 # Numbers held at once.
@@ -91,13 +94,17 @@ def _strata(sampling: Sampling) -> tuple[Integers, Integers]:
     return stratum.astype(np.int64), np.bincount(stratum[stratum >= 0], minlength=len(present))
 
 
-def cluster_errors(table: LevelTable, temperature: Array, field: Array) -> ClusterCurves | None:
+def cluster_errors(
+    table: LevelTable, temperature: Array, field: Array, curves: ClusterCurves | None = None
+) -> ClusterCurves | None:
     """Standard errors of ``cluster_curves`` on the same grid, each (nT, nB).
 
-    Half the width of a 68.27 % interval. None for a table without sampled levels; NaN
-    throughout where a sector has one vector only (``why_no_errors``), and at temperatures where
-    a replicate has no positive Z. Cost: one exponential and 3(K+2) multiplications for each
-    sampled level and temperature, and some 50 for each unit, temperature and field.
+    Half the width of a 68.27 % interval, and not below what rounding leaves uncertain;
+    ``curves`` are those of the same grid where they are at hand. None for a table without
+    sampled levels; NaN throughout where a sector has one vector only (``why_no_errors``), and at
+    temperatures where a replicate has no positive Z. Cost: one exponential and 3(K+2)
+    multiplications for each sampled level and temperature, some 50 for each unit, temperature
+    and field, and the curves where they are not given.
     """
     sampling = table.sampling
     if sampling is None or not np.any(sampling.unit >= 0):
@@ -120,6 +127,8 @@ def cluster_errors(table: LevelTable, temperature: Array, field: Array) -> Clust
         for begin in range(0, len(temperature), step):
             part = slice(begin, begin + step)
             found[:, part] = _errors(groups, deleted, temperature[part], field)
+    rounding = _rounding(table, temperature, curves or cluster_curves(table, temperature, field))
+    found = np.hypot(found, rounding)
     return ClusterCurves(
         internal_energy=found[0],
         free_energy=found[1],
@@ -127,6 +136,25 @@ def cluster_errors(table: LevelTable, temperature: Array, field: Array) -> Clust
         specific_heat=found[3],
         moment=found[4] if known else None,
         moment_variance=found[5] if known else None,
+    )
+
+
+def _rounding(table: LevelTable, t: Array, curves: ClusterCurves) -> Array:
+    """What rounding leaves uncertain of the six curves, (6, nT, nB): a level off by ε changes
+    populations by ε/T of themselves."""
+    level = _LEVEL_ROUNDING * float(table.energy.max() - table.energy.min())
+    share = _CURVE_ROUNDING + level / t[:, None]
+    energy = curves.internal_energy
+    nothing = np.zeros_like(energy)
+    return np.array(
+        [
+            np.full_like(energy, level) + _CURVE_ROUNDING * np.abs(energy),
+            np.full_like(energy, level) + _CURVE_ROUNDING * np.abs(curves.free_energy),
+            share * np.abs(curves.entropy),
+            share * curves.specific_heat,
+            nothing if curves.moment is None else share * np.abs(curves.moment),
+            nothing if curves.moment_variance is None else share * curves.moment_variance,
+        ]
     )
 
 

@@ -24,6 +24,9 @@ if TYPE_CHECKING:
 
     from thermo.model.level_table import LevelTable
 
+# A sampled level that stands for fewer states is a spurious copy of another or rounding; counted,
+# it would only stand in the way of positive weights.
+NEGLIGIBLE = 1e-9
 # A polynomial this small at all sampled levels, relative to T_k, adds nothing new: there are no
 # more levels than lower degrees can fit.
 _DEPENDENT = 1e-9
@@ -150,16 +153,19 @@ def calibrated_table(table: LevelTable, sampling: Sampling) -> LevelTable:
     """The table with calibrated weights and ``sampling``, its ``orders`` filled in.
 
     ``table`` gives energies and labels; its weights are not looked at, nor ``sampling.orders``.
+    Sampled levels of fewer than 10⁻⁹ states get weight 0.
     Raises SpectrumError where a group cannot even be given its number of states.
     """
-    weight = np.array(sampling.raw_weight)
+    sampled = sampling.unit >= 0
+    raw = np.where(sampled & (sampling.raw_weight < NEGLIGIBLE), 0.0, sampling.raw_weight)
+    weight = raw.copy()
     orders = np.zeros(len(sampling.moments), dtype=np.int64)
     for g, moments in enumerate(sampling.moments):
         mine = np.flatnonzero(sampling.group == g)
         weight[mine], orders[g] = calibrate(
             table.energy[mine],
-            sampling.raw_weight[mine],
-            sampling.unit[mine] >= 0,
+            raw[mine],
+            sampled[mine],
             moments,
             sampling.center,
             sampling.scale,
@@ -169,7 +175,8 @@ def calibrated_table(table: LevelTable, sampling: Sampling) -> LevelTable:
                 f"the sampled levels of group {g} cannot be given {moments[0]:g} states in all; "
                 "they are not a result, solve the model again"
             )
-    return replace(table, weight=weight, sampling=replace(sampling, orders=orders))
+    sampling = replace(sampling, raw_weight=raw, orders=orders)
+    return replace(table, weight=weight, sampling=sampling)
 
 
 def trace_misfit(table: LevelTable, sampling: Sampling) -> float:
@@ -218,7 +225,7 @@ def sampling_from_dataset(levels: xr.Dataset) -> Sampling | None:
 def _group_of_sector(levels: xr.Dataset) -> Integers:
     number = levels["trace_magnetic_number"].values
     if "sector_trace_group" in levels:
-        given: Integers = levels["sector_trace_group"].values.astype(np.int64)
+        given: Integers = np.asarray(levels["sector_trace_group"].values, dtype=np.int64)
         if np.all((given >= 0) & (given < len(number))):
             return given
     else:
@@ -228,7 +235,7 @@ def _group_of_sector(levels: xr.Dataset) -> Integers:
             return np.zeros(len(own), dtype=np.int64)
         same = own[:, None] == number
         if np.all(same.sum(axis=1) == 1):
-            return np.argmax(same, axis=1).astype(np.int64)
+            return np.asarray(np.argmax(same, axis=1), dtype=np.int64)
     raise FileFormatError(
         "the sectors of the sampled levels and their groups of traces do not fit together; "
         "solve the model again"
