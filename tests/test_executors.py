@@ -238,7 +238,15 @@ def test_a_piece_that_kills_every_worker(tmp_path: Path) -> None:
     assert f"kept in {tmp_path / 'c'}" in str(caught.value)
 
 
-@pytest.mark.usefixtures("nothing_left")
+@pytest.fixture
+def as_it_was() -> Iterator[None]:
+    """The environment put back after a cluster that is the test's own."""
+    before = dict(os.environ)
+    yield
+    cluster._restore(before)
+
+
+@pytest.mark.usefixtures("as_it_was")
 def test_faults_and_stops_of_a_cluster(tmp_path: Path) -> None:
     def progress(fraction: float, _text: str) -> None:
         if fraction > 0:
@@ -274,6 +282,7 @@ def test_faults_and_stops_of_a_cluster(tmp_path: Path) -> None:
         assert time.monotonic() - started < 3
 
 
+@pytest.mark.usefixtures("as_it_was")
 def test_a_lost_scheduler(tmp_path: Path) -> None:
     from distributed import LocalCluster
 
