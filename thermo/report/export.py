@@ -29,15 +29,17 @@ def export_csv(
     units_system: str | None = None,
     what: str | Sequence[str] | None = None,
 ) -> None:
-    """Write a curves, levels or fit dataset as CSV to a path (whole or not at all) or a stream.
+    """Write a curves, levels, fit or comparison dataset as CSV to a path (whole or not at all) or
+    a stream.
 
     Curves: one row for each temperature and field, values to 7 significant digits (the file
     holds all) and 0 below 10⁻³⁰ of their column's largest; ``units_system`` converts molar ones
     to "molar-si" or "molar-cgs", and ``what`` chooses columns by name (a list, or names with
     commas: "specific_heat,chi_T"), by default all stored ones and chi_T. Levels: energy, weight
     (number of states), S or M where resolved, and block, one row each. A fit: ``what`` is
-    "points" (the default: data, prediction and residual of each) or "parameters". A missing
-    value is an empty cell. Raises FileFormatError, UnavailableError or UnitsError.
+    "points" (the default: data, prediction and residual of each) or "parameters". A comparison:
+    "candidates" (the default), "parameters", "points" or "next", what to measure. A missing value
+    is an empty cell. Raises FileFormatError, UnavailableError or UnitsError.
     """
     header, rows = _table(dataset, units_system, what)
     if isinstance(target, str | os.PathLike):
@@ -67,7 +69,7 @@ def _table(
         return _curves(dataset, chosen)
     tables = _TABLES.get(kind)
     if tables is None:
-        raise FileFormatError("only levels, curves and fit datasets can be exported")
+        raise FileFormatError("only levels, curves, fit and comparison datasets can be exported")
     if units_system is not None:
         raise UnitsError(f"a {kind} file is exported in its own units; leave the units out")
     name = ",".join(chosen) or next(iter(tables))
@@ -170,9 +172,80 @@ def _parameters(fit: xr.Dataset) -> Table:
     return header, rows()
 
 
+def _comparison_points(found: xr.Dataset) -> Table:
+    names = [str(name) for name in found["candidate_name"].values]
+    numbers = ("temperature", "field", "observed", "uncertainty")
+    header = ["dataset", "quantity", "units of the values", "per"]
+    header += [_head(n, found[n].attrs.get("units")) for n in numbers]
+    header += [f"predicted by {name}" for name in names]
+    texts = [found[f"dataset_{n}"].values for n in ("name", "quantity", "units", "per")]
+    columns = [found[n].values for n in numbers] + list(found["predicted"].values)
+    return header, (
+        [*(str(text[d]) for text in texts), *(_number(c[i]) for c in columns)]
+        for i, d in enumerate(found["point_dataset"].values)
+    )
+
+
+def _candidates(found: xr.Dataset) -> Table:
+    numbers = ("parameters", "chi_square", "reduced_chi_square", "probability", "aicc", "bic",
+               "aicc_weight", "bic_weight")  # fmt: skip
+    heads = {"aicc": "AICc less the lowest", "bic": "BIC less the lowest"}
+    header = ["candidate", *(heads.get(n, n) for n in numbers), "converged", "standing", "remark"]
+
+    def rows() -> Iterator[list[str]]:
+        for k in range(found.sizes["candidate"]):
+            yield [
+                str(found["candidate_name"].values[k]),
+                *(_number(float(found[f"candidate_{n}"].values[k])) for n in numbers),
+                flag_word(found["candidate_converged"], k),
+                flag_word(found["candidate_standing"], k),
+                str(found["candidate_remark"].values[k]),
+            ]
+
+    return header, rows()
+
+
+def _candidate_parameters(found: xr.Dataset) -> Table:
+    header = ["candidate", "parameter", "units", "value", "standard_error", "role"]
+
+    def rows() -> Iterator[list[str]]:
+        for i, c in enumerate(found["parameter_candidate"].values):
+            yield [
+                str(found["candidate_name"].values[c]),
+                str(found["parameter_name"].values[i]),
+                str(found["parameter_units"].values[i]),
+                *(_number(float(found[n].values[i])) for n in ("value", "standard_error")),
+                flag_word(found["parameter_role"], i),
+            ]
+
+    return header, rows()
+
+
+def _next(found: xr.Dataset) -> Table:
+    """Every point looked at, with the difference there: what the picture "next" draws."""
+    if "proposal_name" not in found:
+        raise UnavailableError(
+            "the comparison proposes no measurement, since no two candidates are left standing"
+        )
+    axes = ("temperature", "field")
+    header = ["measurement", *(_head(n, found[n].attrs.get("units")) for n in axes)]
+    header.append("difference over its uncertainty")
+    columns = [found[f"map_{n}"].values for n in (*axes, "separation")]
+    return header, (
+        [str(found["proposal_name"].values[p]), *(_number(c[i], _CURVE_DIGITS) for c in columns)]
+        for i, p in enumerate(found["map_proposal"].values)
+    )
+
+
 _TABLES: dict[str, dict[str, Callable[[xr.Dataset], Table]]] = {
     "levels": {"levels": _levels},
     "fit": {"points": _points, "parameters": _parameters},
+    "comparison": {
+        "candidates": _candidates,
+        "parameters": _candidate_parameters,
+        "points": _comparison_points,
+        "next": _next,
+    },
 }
 
 

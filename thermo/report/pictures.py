@@ -14,6 +14,7 @@ from matplotlib.ticker import MaxNLocator
 
 from thermo.errors import FileFormatError, RangeError, UnavailableError
 from thermo.report import style
+from thermo.report.comparison_picture import draw_comparison
 from thermo.report.fit_picture import draw_fit
 from thermo.report.numbers import grouped, typeset
 from thermo.report.quantities import (
@@ -43,21 +44,22 @@ def plot(
     title: str | None = None,
     scale: str | None = None,
 ) -> None:
-    """Draw a curves, levels or fit dataset into a .png, .svg or .pdf file.
+    """Draw a curves, levels, fit or comparison dataset into a .png, .svg or .pdf file.
 
     ``what`` chooses the panels: for curves one or several (a list, or names with commas) of
     specific_heat, specific_heat_over_T, entropy, susceptibility, chi_T, magnetization (over the
-    field), internal_energy, free_energy; for a fit the name of a data set; for levels "levels"
-    or "density". All there is by default. ``units_system`` converts molar curves to "molar-si"
-    or "molar-cgs". ``scale`` "linear" or "log" sets the temperature axis; by default it is
-    linear for evenly spaced temperatures and logarithmic for geometric ones, or others that span
-    over 1.5 decades. Raises FileFormatError, UnavailableError, UnitsError or RangeError.
+    field), internal_energy, free_energy; for a fit the name of a data set; for a comparison the
+    same, or "next", what to measure; for levels "levels" or "density". All there is by default.
+    ``units_system`` converts molar curves to "molar-si" or "molar-cgs". ``scale`` "linear" or
+    "log" sets the temperature axis; by default it is linear for evenly spaced temperatures and
+    logarithmic for geometric ones, or others that span over 1.5 decades. Raises FileFormatError,
+    UnavailableError, UnitsError or RangeError.
     """
     style.check_suffix(path)
     chosen = names(what)
     kind = str(dataset.attrs.get("content"))
-    if kind not in ("curves", "levels", "fit"):
-        raise FileFormatError("only levels, curves and fit datasets can be drawn")
+    if kind not in _DRAWN:
+        raise FileFormatError("only levels, curves, fit and comparison datasets can be drawn")
     if scale not in (None, "linear", "log"):
         raise RangeError(f"the scale {scale!r} is unknown; use linear or log")
     if scale is not None and kind == "levels":
@@ -68,7 +70,7 @@ def plot(
         if kind == "levels":
             figure = _draw_levels(dataset, chosen)
         else:
-            figure = (_draw_curves if kind == "curves" else draw_fit)(dataset, chosen, scale)
+            figure = _DRAWN[kind](dataset, chosen, scale)
         if title:
             figure.suptitle(title, fontsize=9)
         style.save(figure, path)
@@ -262,3 +264,11 @@ def _density(axes: Axes, above: Any, weight: Any) -> None:
 
 
 __all__ = ["SYMBOLS", "plot"]
+
+
+_DRAWN: dict[str, Any] = {
+    "curves": _draw_curves,
+    "levels": _draw_levels,
+    "fit": draw_fit,
+    "comparison": draw_comparison,
+}

@@ -40,7 +40,7 @@ def _console(console: Console | None) -> Console:
     return found
 
 
-def _show(console: Console | None, *parts: Table | str) -> None:
+def show(console: Console | None, *parts: Table | str) -> None:
     """Print tables and lines of text; a file gets whole lines, without blanks at their ends."""
     out = _console(console)
     with out.capture() as capture:
@@ -56,7 +56,8 @@ def _show(console: Console | None, *parts: Table | str) -> None:
     out.file.flush()
 
 
-def _sheet(title: str, *columns: str, right: tuple[str, ...] = ()) -> Table:
+def new_sheet(title: str, *columns: str, right: tuple[str, ...] = ()) -> Table:
+    """An empty table in the house's style; the columns in ``right`` are numbers."""
     sheet = Table(title=title or None, title_justify="left", box=box.SIMPLE_HEAD, pad_edge=False,
                   title_style="bold", show_header=any(columns))  # fmt: skip
     for column in columns:
@@ -73,7 +74,7 @@ def print_plan(plan: Any, console: Console | None = None) -> None:
     sheet.add_column(overflow="fold")
     for name, text in plan_rows(facts):
         sheet.add_row(Text(name), Text(text))
-    _show(console, sheet, *(f"Note: {note}" for note in facts.get("notes") or ()))
+    show(console, sheet, *(f"Note: {note}" for note in facts.get("notes") or ()))
 
 
 def _many(count: Any, noun: str) -> str:
@@ -151,13 +152,13 @@ def print_fit(fit: xr.Dataset, console: Console | None = None) -> None:
     How: χ² where uncertainties were stated, else the scatter, since χ² is then fixed by it.
     """
     sheets = [_parameter_sheet(fit), _correlation_sheet(fit), _dataset_sheet(fit)]
-    _show(console, *(sheet for sheet in sheets if sheet is not None), *fit_verdict(fit))
+    show(console, *(sheet for sheet in sheets if sheet is not None), *fit_verdict(fit))
 
 
 def _dataset_sheet(fit: xr.Dataset) -> Table:
     scatter = by_scatter(fit)
     right = ("points", "scatter") if scatter else ("points", "χ²", "χ² per point")
-    sheet = _sheet("Data sets", "name", "quantity", "units", "per", *right, right=right)
+    sheet = new_sheet("Data sets", "name", "quantity", "units", "per", *right, right=right)
     owner = fit["point_dataset"].values
     for n, name in enumerate(fit["dataset_name"].values):
         mine = owner == n
@@ -215,7 +216,7 @@ def fit_verdict(fit: xr.Dataset) -> list[str]:
 
 
 def _parameter_sheet(fit: xr.Dataset) -> Table:
-    sheet = _sheet("Parameters", "name", "value", "units", "start", "bounds", "")
+    sheet = new_sheet("Parameters", "name", "value", "units", "start", "bounds", "")
     for n, name in enumerate(fit["parameter_name"].values):
         role = flag_word(fit["parameter_role"], n)
         tie = str(fit["parameter_tie"].values[n])
@@ -253,14 +254,14 @@ def _correlation_sheet(fit: xr.Dataset) -> Table | None:
         return None
     names = [str(fit["parameter_name"].values[n]) for n in rows]
     if len(rows) > 7:  # wider than a page: the strong ones only
-        sheet = _sheet("Strongest correlations", "first", "second", "correlation",
+        sheet = new_sheet("Strongest correlations", "first", "second", "correlation",
                        right=("correlation",))  # fmt: skip
         pairs = [(a, b) for i, a in enumerate(rows) for b in rows[:i]]
         for a, b in sorted(pairs, key=lambda p: -abs(matrix[p]))[:10]:
             first, second = (str(fit["parameter_name"].values[k]) for k in (b, a))
             sheet.add_row(Text(first), Text(second), f"{matrix[a, b]:+.3f}")
         return sheet
-    sheet = _sheet("Correlations", "", *names[:-1], right=tuple(names))
+    sheet = new_sheet("Correlations", "", *names[:-1], right=tuple(names))
     for i, a in enumerate(rows[1:], start=1):
         cells = [f"{matrix[a, b]:+.3f}" for b in rows[:i]]
         sheet.add_row(Text(names[i]), *cells)
@@ -270,7 +271,7 @@ def _correlation_sheet(fit: xr.Dataset) -> Table | None:
 def print_curves(curves: xr.Dataset, console: Console | None = None) -> None:
     """Print where C, χ and χT peak and where the entropy ends, for each field."""
     right = ("field", "largest value", "at temperature", "at the highest")
-    sheet = _sheet(f"Curves {share(curves.attrs)}", "quantity", "units", *right, right=right)
+    sheet = new_sheet(f"Curves {share(curves.attrs)}", "quantity", "units", *right, right=right)
     temperature, field = curves["temperature"].values, curves["field"].values
     magnetic = False
     for name in ("specific_heat", "susceptibility", "chi_T", "entropy", "magnetization"):
@@ -290,4 +291,4 @@ def print_curves(curves: xr.Dataset, console: Console | None = None) -> None:
     direction = []
     if magnetic and along_z(curves.attrs):
         direction.append("B \u2225 z: the field, susceptibility and magnetization are along z.")
-    _show(console, sheet, *direction)
+    show(console, sheet, *direction)
