@@ -59,7 +59,7 @@ def test_a_false_minimum_is_left_by_another_start_and_else_told(tmp_path):
     text = text.replace('file = "', f'file = "{DEMO}/')
     text = text.replace('"model.toml"', f'"{DEMO}/model.toml"')
     (tmp_path / "study.toml").write_text(text)
-    false = fit(tmp_path / "study.toml", starts=0)
+    false = fit(tmp_path / "study.toml", starts=0, profiles="none")
     assert false["J_leg"].value < 0
     assert false.n_starts == 1
     assert false.reduced_chi_square > 2

@@ -340,7 +340,8 @@ def test_fits_recover_what_points_were_made_with(tmp_path):
     parameters = {
         "J": {"start": 30.0}, "g": {"start": 2.0}, "chi0": {},
         "paramagnetic_fraction": {"start": 0.01, "spin": 2.5},
-        "weiss_temperature": {"prior": False}, "impurity_g": {"fixed": 2.0}, "scale_A": {"prior": [1.0, 0.5]},
+        "weiss_temperature": {"prior": False}, "impurity_g": {"fixed": 2.0},
+        "scale_A": {"prior": [1.0, 0.5]},
         "debye_temperature": {"start": 300.0}, "einstein_temperature": {"start": 400.0},
         "einstein_share": {"start": 0.4},
     }  # fmt: skip

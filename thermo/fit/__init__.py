@@ -8,7 +8,9 @@ from dataclasses import replace
 
 from thermo.errors import RangeError
 from thermo.fit.forward import Solver, check_available, make_forward, set_points
-from thermo.fit.minimise import make_problem, minimise
+from thermo.fit.minimise import minimise
+from thermo.fit.problem import make_problem
+from thermo.fit.profiles import add_profiles
 from thermo.fit.result import Estimate, FitResult, SetResult, make_result
 from thermo.fit.starts import FURTHER_STARTS
 from thermo.fit.study import Study, read_study
@@ -16,6 +18,8 @@ from thermo.fit.trust import FitOnce, fit_in_window, without_edge
 from thermo.fit.window import Window
 
 __all__ = ["Estimate", "FitResult", "SetResult", "Study", "Window", "fit", "read_study"]
+
+PROFILES = ("auto", "asked", "all", "none")
 
 
 def fit(
@@ -25,6 +29,7 @@ def fit(
     solver: Solver | None = None,
     starts: int = FURTHER_STARTS,
     cache: str | os.PathLike[str] | None = None,
+    profiles: str = "auto",
 ) -> FitResult:
     """Fit a study: a ``Study``, or what ``read_study`` takes.
 
@@ -34,6 +39,8 @@ def fit(
     tried, and only where the first minimum looks like a false one: a parameter at its bound,
     reduced χ² above 2, residuals of one sign in long runs, or no convergence. ``cache`` names a
     folder that keeps every spectrum found, for this fit and later ones of the same cluster.
+    ``profiles`` says which parameters get profile intervals: "auto" (those the study asks for, and
+    where it takes little time those near a bound or strongly correlated), "asked", "all", "none".
 
     A periodic cluster that is not ``finite`` is held against another size of its lattice, and by
     default (``window`` of the study) data sets without a stated range are fitted only above the
@@ -50,12 +57,15 @@ def fit(
     """
     if isinstance(starts, bool) or not isinstance(starts, int) or not 0 <= starts <= 1000:
         raise RangeError(f"starts = {starts!r} must be a whole number from 0 to 1000")
+    if profiles not in PROFILES:
+        raise RangeError(f"profiles = {profiles!r} is unknown; use {', '.join(PROFILES)}")
     study = study if isinstance(study, Study) else read_study(study)
     if solver is not None:  # whose levels no other cluster is known to share
         found = _fit_once(study, solver, progress, starts, cache)
-        return replace(found, window=without_edge(study))
+        return add_profiles(replace(found, window=without_edge(study)), profiles, progress)
     full = full_solver(study, memory)
-    return fit_in_window(study, single_fit(full, progress, starts, cache), memory)
+    found = fit_in_window(study, single_fit(full, progress, starts, cache), memory)
+    return add_profiles(found, profiles, progress)
 
 
 def full_solver(study: Study, memory: int | float | str | None = None) -> Solver:
@@ -88,4 +98,6 @@ def _fit_once(
     """One fit of all the study's points."""
     forward = make_forward(study, solver, cache)
     problem = make_problem(study, forward, progress)
-    return make_result(study, problem, minimise(problem, starts))
+    always = study.starts is not None
+    minimum = minimise(problem, study.starts if study.starts is not None else starts, always)
+    return make_result(study, problem, minimum)

@@ -55,8 +55,10 @@ def find_cautions(
             "no standard errors; start it elsewhere, give it bounds, or fix it"
         )
     if not minimum.identifiable and not idle:
+        together = f" (they hardly notice {minimum.unfixed} together)" if minimum.unfixed else ""
         found.append(
-            f"the data do not fix {minimum.weak} separately: no standard errors; fix one of them"
+            f"the data do not fix {minimum.weak} separately{together}: no standard errors; fix "
+            "one of them"
         )
     found += _of_direction(study, resolved)
     found += _of_size(study, minimum, scale)

@@ -254,9 +254,10 @@ class Forward:
     def _sums(self, c: Vector, tangents: Vector | None, t: Vector) -> PointSums | DifferenceSums:
         if tangents is not None and tangents.size and not self.cache.exact:
             return DifferenceSums(self.cache, c, tangents, t)
-        found, scale = self.cache.spectrum(c)
+        wanted = tangents is not None and tangents.size > 0
+        found, scale = self.cache.spectrum(c, wanted)
         table = found.scaled(scale)
-        if tangents is None or not tangents.size or found.slopes is None:
+        if not wanted or tangents is None or found.slopes is None:
             return PointSums(table, t)
         return PointSums(table, t, tangents.T @ found.slopes)
 

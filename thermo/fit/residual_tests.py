@@ -50,6 +50,19 @@ def durbin_watson(residual: Vector) -> float:
     return float(np.sum(np.diff(residual) ** 2)) / size
 
 
+def outliers(residual: Vector) -> tuple[int, ...]:
+    """Indices, worst first, of residuals (n,) in units of their uncertainties that are too large
+    for chance: the largest of n normal ones gets there in 1 % of all sets (Bonferroni)."""
+    from scipy.stats import norm
+
+    n = len(residual)
+    if not n:
+        return ()
+    limit = float(norm.isf(0.005 / n))
+    worst = np.argsort(-np.abs(residual), kind="stable")
+    return tuple(int(k) for k in worst if abs(residual[k]) > limit)
+
+
 def chance(chi_square: float, degrees_of_freedom: int) -> float:
     """Probability of a χ² as large or larger by chance; NaN without degrees of freedom."""
     from scipy.stats import chi2

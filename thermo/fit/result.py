@@ -5,7 +5,7 @@ from __future__ import annotations
 import json
 import math
 from collections.abc import Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -13,10 +13,13 @@ from numpy.typing import ArrayLike, NDArray
 
 from thermo.errors import RangeError, StudyError
 from thermo.fit.cautions import find_cautions
+from thermo.fit.doubts import of_residuals, of_surroundings
 from thermo.fit.forward import Forward, Points
 from thermo.fit.measured import QUANTITIES, Measured
-from thermo.fit.minimise import Minimum, Problem
+from thermo.fit.minimise import Minimum
 from thermo.fit.parameters import Values
+from thermo.fit.problem import Problem
+from thermo.fit.residual_tests import along, durbin_watson, outliers, runs_score
 from thermo.fit.strict import did_you_mean
 from thermo.fit.study import Study
 from thermo.model.spin_model import SpinModel
@@ -31,6 +34,21 @@ if TYPE_CHECKING:
 Vector = NDArray[np.float64]
 
 CURVE_POINTS = 240
+# Residuals below this share of their uncertainties say nothing.
+NOTICED = 0.1
+
+
+@dataclass(frozen=True)
+class Interval:
+    """A profile interval: ``level`` 0.68 or 0.95 and its ends, NaN where an end was not found and
+    infinite where there is none; whether an end is the parameter's bound (and might lie beyond).
+    """
+
+    level: float
+    lower: float
+    upper: float
+    lower_at_bound: bool = False
+    upper_at_bound: bool = False
 
 
 @dataclass(frozen=True)
@@ -40,7 +58,8 @@ class Estimate:
     ``status`` "free", "fixed" or "tied" (then ``expression``); ``at_bound`` −1, 0, 1 for lower,
     none, upper. ``standard_error`` is NaN for a fixed parameter and wherever it would mean
     nothing; ``reason`` then says why. ``prior`` (value, error) is what was known beforehand, and
-    ``usual_prior`` that this is the program's supposition, not the study's.
+    ``usual_prior`` that this is the program's supposition, not the study's. ``intervals`` are
+    its profile intervals, where they were looked for.
     """
 
     name: str
@@ -57,6 +76,11 @@ class Estimate:
     reason: str
     prior: tuple[float, float] | None = None
     usual_prior: bool = False
+    intervals: tuple[Interval, ...] = ()
+
+    def interval(self, level: float) -> Interval | None:
+        """The profile interval of a level, 0.68 or 0.95; None where it was not looked for."""
+        return next((i for i in self.intervals if i.level == level), None)
 
     def __str__(self) -> str:
         """Like "J = -42.00(16) cm-1", with what else there is to know in brackets."""
@@ -85,6 +109,30 @@ class SetResult:
     uncertainty: Vector
     chi_square: float
 
+    @property
+    def standardised(self) -> Vector:
+        """Residuals over their uncertainty, field by field along the temperature, (n,)."""
+        safe = np.where(self.uncertainty > 0, self.uncertainty, 1.0)
+        order = along(self.data.temperature, self.data.field)
+        found: Vector = (self.residual / safe)[order]
+        return found
+
+    @property
+    def runs_score(self) -> float:
+        """Runs of one sign less those expected, in standard deviations; below −3 is a trend."""
+        return runs_score(self.standardised)
+
+    @property
+    def durbin_watson(self) -> float:
+        """Near 2 for independent residuals, near 0 where each is like the one before."""
+        return durbin_watson(self.standardised)
+
+    @property
+    def outliers(self) -> tuple[int, ...]:
+        """Indices of points too far off to be chance (1 % for the whole set), worst first."""
+        safe = np.where(self.uncertainty > 0, self.uncertainty, 1.0)
+        return outliers(self.residual / safe)
+
 
 @dataclass(frozen=True, eq=False, repr=False)
 class FitResult:
@@ -97,7 +145,9 @@ class FitResult:
     ``reduced_chi_square`` is NaN, because it then tests nothing. ``n_solves`` counts
     diagonalisations of the cluster, ``n_evaluations`` model curves, ``n_starts`` the starts tried,
     all from beginning to end. ``converged`` is about the minimiser only; ``trustworthy`` asks all
-    the questions at once. ``print(result)`` gives it in a few lines.
+    the questions at once. ``singular_values`` are those of the Jacobian with columns of length
+    one, descending: a small last one says that a combination of parameters is hardly fixed, and
+    ``unfixed`` names it where it is not fixed at all. ``print(result)`` gives it in a few lines.
     """
 
     study: Study
@@ -122,6 +172,8 @@ class FitResult:
     forward: Forward
     values: Values
     window: Window | None = None
+    singular_values: Vector = field(default_factory=lambda: np.empty(0))
+    unfixed: str = ""
 
     def __repr__(self) -> str:
         """Values with errors, χ² and cautions, a line each."""
@@ -158,6 +210,18 @@ class FitResult:
     def trustworthy(self) -> bool:
         """Converged, no bound hit, all fixed by the data; not that the model is right."""
         return self.converged and self.identifiable and not self.at_bound
+
+    @property
+    def scatter(self) -> float:
+        """The root of the reduced χ² where no uncertainties are stated (relative to each set's
+        mean magnitude); 1 where they are."""
+        if self.error_basis == "stated":
+            return 1.0
+        sums = 0.0
+        for item in self.sets:
+            size = float(np.mean(np.abs(item.data.value)))
+            sums += float(item.residual @ item.residual) / size**2
+        return math.sqrt(sums / self.degrees_of_freedom)
 
     @property
     def couplings(self) -> Mapping[str, float]:
@@ -317,16 +381,36 @@ def make_result(study: Study, problem: Problem, minimum: Minimum) -> FitResult:
         identifiable=minimum.identifiable,
         message=minimum.message,
         n_starts=minimum.n_starts,
-        cautions=find_cautions(
-            study, minimum, estimates, covariance, problem.forward.cache.resolved, scale
+        cautions=(
+            *find_cautions(
+                study, minimum, estimates, covariance, problem.forward.cache.resolved, scale
+            ),
+            *_doubts(study, problem, values, sets),
         ),
         sets=tuple(sets),
         n_solves=problem.forward.cache.n_solves,
         n_evaluations=problem.n_evaluations,
         forward=problem.forward,
         values=values,
+        singular_values=minimum.singular_values,
+        unfixed=minimum.unfixed,
     )
     return result
+
+
+def _doubts(
+    study: Study, problem: Problem, values: Values, sets: list[SetResult]
+) -> tuple[str, ...]:
+    found = [problem.forward.evaluate(points, values, slopes=False) for points in problem.sets]
+    told = of_surroundings(study.model, study.parameters, values, study.sets, found)
+    for item in sets:
+        scores = item.residual / np.where(item.uncertainty > 0, item.uncertainty, 1.0)
+        # What rounding leaves of exact points is no trend.
+        if study.weighted and float(np.abs(scores).max(initial=0.0)) > NOTICED:
+            told += of_residuals(
+                item.data, item.runs_score, item.durbin_watson, item.outliers, scores.tolist()
+            )
+    return tuple(told)
 
 
 def _error(

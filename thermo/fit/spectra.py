@@ -93,25 +93,29 @@ class SpectrumCache:
         self._known: list[Spectrum] = []
         self._disk = None if folder is None or model is None else _Disk(folder, model)
 
-    def spectrum(self, couplings: Vector) -> tuple[Spectrum, float]:
+    def spectrum(self, couplings: Vector, slopes: bool = False) -> tuple[Spectrum, float]:
         """The spectrum for the couplings' direction, and the scale λ ≥ 0 its energies are to be
-        multiplied by (the largest |coupling|; 0 where all vanish)."""
+        multiplied by (the largest |coupling|; 0 where all vanish). With ``slopes``, those are in
+        it where the solver has any."""
+        slopes = slopes and self.exact
         scale = float(np.abs(couplings).max(initial=0.0))
         if scale == 0:
             # Without couplings all energies vanish: any spectrum serves, scaled by nothing.
-            return (self._known[0] if self._known else self._find(couplings)), 0.0
+            usable = [k for k in self._known if k.slopes is not None or not slopes]
+            return (usable[0] if usable else self._find(couplings, slopes)), 0.0
         direction = couplings / scale
         for sign in (1, -1):
             for k, known in enumerate(self._known):
-                if np.abs(known.direction - sign * direction).max(initial=0.0) <= SAME_DIRECTION:
+                same = np.abs(known.direction - sign * direction).max(initial=0.0) <= SAME_DIRECTION
+                if same and (known.slopes is not None or not slopes):
                     self._known.insert(0, self._known.pop(k))
                     return (known if sign > 0 else known.reversed()), scale
-        return self._find(direction), scale
+        return self._find(direction, slopes), scale
 
-    def _find(self, direction: Vector) -> Spectrum:
-        found = None if self._disk is None else self._disk.read(direction, self.exact)
+    def _find(self, direction: Vector, slopes: bool) -> Spectrum:
+        found = None if self._disk is None else self._disk.read(direction, slopes)
         if found is None:
-            found = self._solve(direction)
+            found = self._solve(direction, slopes)
             if self._disk is not None:
                 self._disk.write(found)
         self.resolved = found.table.resolved
@@ -123,10 +127,10 @@ class SpectrumCache:
             self._known.pop()
         return found
 
-    def _solve(self, direction: Vector) -> Spectrum:
+    def _solve(self, direction: Vector, slopes: bool) -> Spectrum:
         self.n_solves += 1
         couplings = {name: float(c) for name, c in zip(self.names, direction, strict=True)}
-        if not self.exact:
+        if not slopes:
             return Spectrum(direction, self.solver.table(couplings), None)
         found: SlopedLevels = self.solver.sloped(couplings)  # type: ignore[attr-defined]
         order = [found.names.index(name) for name in self.names]

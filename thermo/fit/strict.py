@@ -122,6 +122,15 @@ class Section:
             raise self.fail(key, f"= {value!r} is not a list of texts; give {what}")
         return tuple(str(item).strip() for item in items)
 
+    def count(self, key: str, what: str, most: int) -> int | None:
+        """A whole number from 0 to ``most``; None where the key is not given."""
+        if not self.has(key):
+            return None
+        value = self.content[key]
+        if isinstance(value, bool) or not isinstance(value, int) or not 0 <= value <= most:
+            raise self.fail(key, f"= {value!r} is not a whole number from 0 to {most}; give {what}")
+        return value
+
     def identifier(self, key: str, what: str) -> str:
         """A word of letters, digits and _ that begins with a letter; "" where it is not given."""
         if not self.has(key):

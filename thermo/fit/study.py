@@ -65,6 +65,8 @@ Every key of a study file (positions in lists count from 0; paths are relative t
                  per              of which mole: "formula" (default) or "ion"
 
     profile      names of parameters whose profile intervals are wanted in any case
+    starts       how many further starts, spread over the bounds, to try in any case; left out,
+                 six where the first minimum is doubtful
 
 Parameters of what surrounds the spins; free, without prior and bounds, some have a usual prior:
 
@@ -121,7 +123,8 @@ class Study:
 
     ``window`` is "auto", "tell" or "off"; ``ranged`` names the sets whose range the study states.
     ``lattice_atoms`` is the number of atoms per magnetic ion whose lattice has heat, 0 for none;
-    ``asked`` names the parameters whose profile intervals are asked for.
+    ``asked`` names the parameters whose profile intervals are asked for, ``starts`` is the number
+    of further starts to try in any case (None: only in doubt).
     """
 
     title: str
@@ -134,6 +137,7 @@ class Study:
     ranged: frozenset[str] = frozenset()
     lattice_atoms: float = 0.0
     asked: tuple[str, ...] = ()
+    starts: int | None = None
 
     @property
     def reduced(self) -> bool:
@@ -209,6 +213,7 @@ def build_study(content: Content) -> Study:
     window = section.word("window", WINDOWS, "auto")
     lattice = section.raw("lattice_heat", "a table") if section.has("lattice_heat") else None
     asked = section.words("profile", "names of parameters") or ()
+    starts = section.count("starts", "a number of further starts", 1000)
     section.close()
 
     if isinstance(raw_model, SpinModel):
@@ -243,7 +248,7 @@ def build_study(content: Content) -> Study:
     )
     atoms = 0.0 if lattice is None else _atoms(Section(lattice, "lattice_heat", name), model)
     study = Study(
-        title, name, content.text, model, sets, parameters, window, ranged, atoms, tuple(asked)
+        title, name, content.text, model, sets, parameters, window, ranged, atoms, asked, starts
     )
     check_study(study)
     return study
