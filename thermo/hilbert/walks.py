@@ -9,247 +9,194 @@ hash table beside it; nothing of the size of the sector is held.
 
 from __future__ import annotations
 
-from dataclasses import dataclass
-from typing import Any
-
 import numpy as np
 from numpy.typing import NDArray
 
 from thermo.hilbert.encoding import Encoding, Ints
-from thermo.hilbert.jit import kernel
+from thermo.hilbert.jit import fast_kernel
 from thermo.hilbert.operators import MoveTables
 from thermo.hilbert.orbits import Orbits
+from thermo.hilbert.windows import WindowTables, window_tables
 
 #: Rows are summed in chunks of this size, whoever computes them, so that rounding never depends
 #: on how the work was shared out.
 CHUNK_ROWS = 1024
 HIGHEST_ORDER = 8
+_FIRST_BITS = 12
+# Slots per configuration in the hash table: a miss costs a mispredicted branch, room nothing.
+_SPARSE = 8
 
-# Legend: c configuration, t term (a pair of sites or one site), e entry of a term's table.
+# Everything that indexes an array is unsigned: a signed index costs a test for wrapping round.
+U0, U1, U2, U3, U4, U5, U6, U7, U8 = (np.uint64(k) for k in range(9))
+# Fibonacci hashing (Knuth, The Art of Computer Programming 3, 6.4): 2⁶⁴ over the golden ratio.
+GOLD = np.uint64(0x9E3779B97F4A7C15)
 
-
-@dataclass(frozen=True, eq=False)
-class WalkTables:
-    """X as tables for walking: of every term the diagonal and the moves, by its two digits.
-
-    Digits (a, b) of term t have the entry e = ``base[t]`` + a·``stride[t]`` + b, with
-    ``energy[e]`` and ``count[e]`` moves from e·``width`` on: ``delta`` is what they add to the
-    configuration, ``amplitude`` (real where H is) their matrix element.
-    """
-
-    shift_i: Ints
-    mask_i: Ints
-    shift_j: Ints
-    mask_j: Ints
-    stride: Ints
-    base: Ints
-    energy: NDArray[np.float64]
-    count: Ints
-    delta: Ints
-    amplitude: NDArray[np.float64] | NDArray[np.complex128]
-    width: int
-    constant: float
-
-    @property
-    def arrays(self) -> tuple[Any, ...]:
-        """The fields in the order in which the kernels take them."""
-        return (
-            self.shift_i, self.mask_i, self.shift_j, self.mask_j, self.stride, self.base,
-            self.energy, self.count, self.delta, self.amplitude, self.width, self.constant,
-        )  # fmt: skip
+# Legend: c configuration, w window, e entry of a window, n place in the list of configurations
+# reached (1 is the representative; 0 stands for an empty slot), k link.
 
 
-def walk_tables(
-    encoding: Encoding,
-    moves: MoveTables,
-    amplitudes: NDArray[np.complex128],
-    diagonals: NDArray[np.float64],
-    center: float,
-    scale: float,
-) -> WalkTables:
-    """Tables of X = (H − center)/scale for one row of ``MoveTables.combined``."""
-    keys = sorted(
-        {(int(i), int(j)) for i, j in zip(moves.site_i, moves.site_j, strict=True)}
-        | {(int(i), int(j)) for i, j in zip(moves.diagonal_i, moves.diagonal_j, strict=True)}
-    )
-    place = {key: t for t, key in enumerate(keys)}
-    d = encoding.dimension
-    stride = np.array([1 if i == j else d[j] for i, j in keys], dtype=np.int64)
-    size = np.array([d[i] if i == j else d[i] * d[j] for i, j in keys], dtype=np.int64)
-    base = np.concatenate([[0], np.cumsum(size)]).astype(np.int64)
-    total = int(base[-1])
-    energy = np.zeros(total)
-    for k, key in enumerate(zip(moves.diagonal_i, moves.diagonal_j, strict=True)):
-        t = place[int(key[0]), int(key[1])]
-        o = moves.diagonal_offset[k]
-        energy[base[t] : base[t + 1]] += diagonals[o : o + size[t]] / scale
-    count = np.zeros(total, dtype=np.int64)
-    found: list[tuple[Ints, Ints, int, NDArray[np.complex128]]] = []
-    for m, key in enumerate(zip(moves.site_i, moves.site_j, strict=True)):
-        i, j = int(key[0]), int(key[1])
-        t = place[i, j]
-        values = amplitudes[moves.offset[m] : moves.offset[m] + size[t]] / scale
-        entries = np.flatnonzero(values)
-        # Amplitudes vanish where a digit would leave its range, so no move needs a check.
-        delta = (int(moves.step_i[m]) << int(encoding.shift[i])) + (
-            int(moves.step_j[m]) << int(encoding.shift[j])
-        )
-        found.append((base[t] + entries, count[base[t] + entries], delta, values[entries]))
-        count[base[t] + entries] += 1
-    width = max(1, int(count.max(initial=0)))
-    delta_table = np.zeros(total * width, dtype=np.int64)
-    amplitude_table = np.zeros(total * width, dtype=np.complex128)
-    for entries, rank, delta, values in found:
-        delta_table[entries * width + rank] = delta
-        amplitude_table[entries * width + rank] = values
-    real = not np.any(amplitude_table.imag)
-    i_of = np.array([i for i, _ in keys], dtype=np.int64)
-    j_of = np.array([j for _, j in keys], dtype=np.int64)
-    return WalkTables(
-        encoding.shift[i_of],
-        encoding.mask[i_of],
-        encoding.shift[j_of],
-        np.where(i_of == j_of, 0, encoding.mask[j_of]),
-        stride,
-        base[:-1],
-        energy,
-        count,
-        delta_table,
-        amplitude_table.real.copy() if real else amplitude_table,
-        width,
-        -center / scale,
-    )
+@fast_kernel
+def _slots(config, reached, size):
+    """A hash table of ``size`` slots that holds the places 1 … reached−1."""
+    slots = np.zeros(size, dtype=np.uint32)
+    mask = np.uint64(size - 1)
+    drop = np.uint64(64)
+    while size > 1:
+        size >>= 1
+        drop -= U1
+    for n in range(U1, reached):
+        slot = (config[n] * GOLD) >> drop
+        while slots[slot] != 0:
+            slot = (slot + U1) & mask
+        slots[slot] = n
+    return slots, mask, drop
 
 
-@kernel
-def _rebuild(config, count, size):
-    """A larger empty hash table with the first ``count`` configurations put in."""
-    keys = np.full(size, -1, dtype=np.int64)
-    index = np.zeros(size, dtype=np.int64)
-    bits = 0
-    while (1 << bits) < size:
-        bits += 1
-    for n in range(count):
-        slot = ((config[n] * 7046029254386353131) >> (64 - bits)) & (size - 1)
-        while keys[slot] >= 0:
-            slot = (slot + 1) & (size - 1)
-        keys[slot] = config[n]
-        index[slot] = n
-    return keys, index, 64 - bits
-
-
-@kernel
+@fast_kernel
 def _longer(array, size):
-    result = np.zeros(size, dtype=array.dtype)
+    """The array with zeros after it, at least doubled."""
+    result = np.zeros(max(size, U2 * np.uint64(array.shape[0])), dtype=array.dtype)
     result[: array.shape[0]] = array
     return result
 
 
-@kernel
+@fast_kernel
+def _overlap(left, right, count):
+    """Re Σ left*·right, in four sums that do not wait for each other; zeros lie beyond."""
+    a = b = c = d = 0.0
+    for n in range(U0, count, U4):
+        a += (np.conj(left[n]) * right[n]).real
+        b += (np.conj(left[n + U1]) * right[n + U1]).real
+        c += (np.conj(left[n + U2]) * right[n + U2]).real
+        d += (np.conj(left[n + U3]) * right[n + U3]).real
+    return (a + b) + (c + d)
+
+
+@fast_kernel
 def _walk_sums(
     representatives, weights, low, high, order, sums,
-    shift_i, mask_i, shift_j, mask_j, stride, base,
-    energy, count, delta, amplitude, width, constant,
+    shift, mask, shift_2, mask_2, stride, base, energy, start, count, delta, amplitude,
+    constant, most,
 ):  # fmt: skip
     """Add Σ weight·⟨r|X^k|r⟩ over the rows low … high−1 to ``sums`` (order + 1,)."""
-    terms = shift_i.shape[0]
+    windows = shift.shape[0]
     applications = (order + 1) // 2
-    size = 1024
-    config = np.empty(size // 2, dtype=np.int64)
-    keys, index, shift = _rebuild(config, 0, size)
-    now = np.zeros(size // 2, dtype=amplitude.dtype)
-    then = np.zeros(size // 2, dtype=amplitude.dtype)
-    own = np.zeros(size // 2)
-    first = np.zeros(size // 2 + 1, dtype=np.int64)
-    link_target = np.zeros(size, dtype=np.int64)
-    link_amplitude = np.zeros(size, dtype=amplitude.dtype)
-    active = np.zeros(terms * width + width, dtype=np.int64)
+    size = 1 << _FIRST_BITS
+    room = np.uint64(size // _SPARSE)
+    config = np.zeros(room + U8, dtype=np.uint64)
+    slots, slot_mask, drop = _slots(config, U1, size)
+    now = np.zeros(room + U8, dtype=amplitude.dtype)
+    then = np.zeros(room + U8, dtype=amplitude.dtype)
+    own = np.zeros(room + U8)
+    first = np.zeros(room + U8, dtype=np.uint64)
+    target = np.zeros(size, dtype=np.uint32)
+    element = np.zeros(size, dtype=amplitude.dtype)
+    steps = np.zeros(most + 8, dtype=np.uint64)
+    values = np.zeros(most + 8, dtype=amplitude.dtype)
     for r in range(low, high):
         weight = weights[r]
         if weight == 0:
             continue
         sums[0] += weight
-        config[0] = representatives[r]
-        slot = ((config[0] * 7046029254386353131) >> shift) & (size - 1)
-        keys[slot] = config[0]
-        index[slot] = 0
-        now[0] = 1
-        known, reached = 0, 1
+        config[1] = np.uint64(representatives[r])
+        slots[(config[1] * GOLD) >> drop] = 1
+        now[1] = 1
+        known, reached, links = U1, U2, U0
         for step in range(1, applications + 1):
             last = step == applications
             present = reached
-            for n in range(present):
-                then[n] = 0
-            for n in range(present):
+            for n in range(U1, known):
                 value = now[n]
-                if n < known:
-                    then[n] += own[n] * value
-                    for k in range(first[n], first[n + 1]):
-                        then[link_target[k]] += link_amplitude[k] * value
-                    continue
-                c = config[n]
+                then[n] += own[n] * value
+                for k in range(first[n], first[n + U1]):
+                    then[target[k]] += element[k] * value
+            for n in range(known, present):
+                c, value = config[n], now[n]
                 diagonal = constant
-                found = 0
-                for t in range(terms):
-                    e = base[t] + ((c >> shift_i[t]) & mask_i[t]) * stride[t]
-                    e += (c >> shift_j[t]) & mask_j[t]
+                found = U0
+                for w in range(windows):
+                    e = base[w] + ((c >> shift[w]) & mask[w]) * stride[w]
+                    e += (c >> shift_2[w]) & mask_2[w]
                     diagonal += energy[e]
-                    for k in range(width):
-                        active[found + k] = e * width + k
-                    found += count[e]
+                    q, to, more = start[e], found, count[e]
+                    found += more
+                    # Whole blocks are copied: what is too much is overwritten by the next.
+                    while True:
+                        s0, s1, s2, s3 = delta[q], delta[q + U1], delta[q + U2], delta[q + U3]
+                        s4, s5, s6, s7 = delta[q + U4], delta[q + U5], delta[q + U6], delta[q + U7]
+                        v0, v1, v2, v3 = (
+                            amplitude[q], amplitude[q + U1], amplitude[q + U2], amplitude[q + U3],
+                        )  # fmt: skip
+                        v4, v5, v6, v7 = (
+                            amplitude[q + U4], amplitude[q + U5],
+                            amplitude[q + U6], amplitude[q + U7],
+                        )  # fmt: skip
+                        steps[to], steps[to + U1], steps[to + U2], steps[to + U3] = s0, s1, s2, s3
+                        steps[to + U4], steps[to + U5] = s4, s5
+                        steps[to + U6], steps[to + U7] = s6, s7
+                        values[to], values[to + U1] = v0, v1
+                        values[to + U2], values[to + U3] = v2, v3
+                        values[to + U4], values[to + U5] = v4, v5
+                        values[to + U6], values[to + U7] = v6, v7
+                        if more <= U8:
+                            break
+                        q, to, more = q + U8, to + U8, more - U8
                 own[n] = diagonal
                 then[n] += diagonal * value
-                if 2 * (reached + found) > size:
-                    while 2 * (reached + found) > size:
+                if reached + found > room:
+                    while reached + found > room:
                         size *= 2
-                    keys, index, shift = _rebuild(config, reached, size)
-                    config = _longer(config, size // 2)
-                    now = _longer(now, size // 2)
-                    then = _longer(then, size // 2)
-                    own = _longer(own, size // 2)
-                    first = _longer(first, size // 2 + 1)
-                start = first[n]
-                if not last and start + found > link_target.shape[0]:
-                    link_target = _longer(link_target, 2 * (start + found))
-                    link_amplitude = _longer(link_amplitude, 2 * (start + found))
+                        room = np.uint64(size // _SPARSE)
+                    slots, slot_mask, drop = _slots(config, reached, size)
+                    config = _longer(config, room + U8)
+                    now = _longer(now, room + U8)
+                    then = _longer(then, room + U8)
+                    own = _longer(own, room + U8)
+                    first = _longer(first, room + U8)
+                if links + found > np.uint64(target.shape[0]):
+                    target = _longer(target, links + found)
+                    element = _longer(element, links + found)
                 for k in range(found):
-                    e = active[k]
-                    moved = c + delta[e]
-                    slot = ((moved * 7046029254386353131) >> shift) & (size - 1)
-                    while keys[slot] >= 0 and keys[slot] != moved:
-                        slot = (slot + 1) & (size - 1)
-                    if keys[slot] < 0:
-                        keys[slot] = moved
-                        index[slot] = reached
-                        config[reached] = moved
-                        then[reached] = 0
-                        reached += 1
-                    target = index[slot]
-                    then[target] += amplitude[e] * value
-                    if not last:
-                        link_target[start + k] = target
-                        link_amplitude[start + k] = amplitude[e]
-                first[n + 1] = start + found
+                    moved = c + steps[k]
+                    slot = (moved * GOLD) >> drop
+                    place = np.uint64(slots[slot])
+                    while place != U0 and config[place] != moved:
+                        slot = (slot + U1) & slot_mask
+                        place = np.uint64(slots[slot])
+                    # No branch, as whether it is new can hardly be guessed: an old one's entries
+                    # are written over with themselves.
+                    new = place == U0
+                    place = reached if new else place
+                    reached += np.uint64(new)
+                    slots[slot] = place
+                    config[place] = moved
+                    then[place] += values[k] * value
+                    target[links + k] = place
+                    element[links + k] = values[k]
+                first[n] = links
+                # The links of the last application are not needed again.
+                if not last:
+                    links += found
+                first[n + U1] = links
             known = present
-            odd = 0.0
-            for n in range(present):
-                odd += (np.conj(now[n]) * then[n]).real
-            even = 0.0
-            for n in range(reached):
-                even += (np.conj(then[n]) * then[n]).real
-            sums[2 * step - 1] += weight * odd
+            sums[2 * step - 1] += weight * _overlap(now, then, present)
             if 2 * step <= order:
-                sums[2 * step] += weight * even
+                sums[2 * step] += weight * _overlap(then, then, reached)
+            now[:present] = 0
             now, then = then, now
-        for n in range(reached):
-            slot = ((config[n] * 7046029254386353131) >> shift) & (size - 1)
-            while keys[slot] >= 0:
-                keys[slot] = -1
-                slot = (slot + 1) & (size - 1)
+        now[:reached] = 0
+        if reached * np.uint64(64) > np.uint64(size):
+            slots[:] = 0
+        else:
+            for n in range(U1, reached):
+                slot = (config[n] * GOLD) >> drop
+                while slots[slot] != 0:
+                    slots[slot] = 0
+                    slot = (slot + U1) & slot_mask
 
 
 def chunk_moments(
-    tables: WalkTables,
+    tables: WindowTables,
     representatives: Ints,
     weights: NDArray[np.float64],
     order: int,
@@ -257,8 +204,8 @@ def chunk_moments(
 ) -> NDArray[np.float64]:
     """Σ weight·⟨r|X^k|r⟩ over each chunk of 1024 rows of the range, shape (chunks, order + 1).
 
-    The range must start at a multiple of 1024 for results that do not depend on it. Rows of
-    weight 0 cost nothing. Releases the interpreter.
+    A range that starts at a multiple of 1024 gives the same bits as any other such range that
+    holds the chunk. Rows of weight 0 cost nothing. Releases the interpreter.
     """
     starts = range(rows[0], rows[1], CHUNK_ROWS)
     sums = np.zeros((len(starts), order + 1))
@@ -285,7 +232,7 @@ def moments(
 
     ``amplitudes``, ``diagonals``: one row of ``MoveTables.combined``.
     """
-    tables = walk_tables(encoding, moves, amplitudes, diagonals, center, scale)
+    tables = window_tables(encoding, moves, amplitudes, diagonals, center, scale)
     stop = len(orbits.representatives) if rows[1] is None else rows[1]
     weights = group_order / orbits.stabiliser
     sums = chunk_moments(tables, orbits.representatives, weights, order, (rows[0], stop))

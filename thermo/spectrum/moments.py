@@ -9,7 +9,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from thermo.errors import RangeError
-from thermo.hilbert import walks
+from thermo.hilbert import walks, windows
 from thermo.hilbert.encoding import Encoding
 from thermo.hilbert.operators import MoveTables
 from thermo.hilbert.orbits import Orbits
@@ -39,7 +39,7 @@ def exact_moments(
     """
     if not 0 <= order <= walks.HIGHEST_ORDER:
         raise RangeError(f"trace order {order} is outside 0 to {walks.HIGHEST_ORDER}")
-    prepared = walks.walk_tables(encoding, moves, *tables, center, scale)
+    prepared = windows.window_tables(encoding, moves, *tables, center, scale)
     weights = group_order / orbits.stabiliser
     count = len(orbits.representatives)
     step = _CHUNKS_AT_ONCE * walks.CHUNK_ROWS
