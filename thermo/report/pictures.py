@@ -128,10 +128,7 @@ def _over_temperature(
         colour = fields.colour(b)
         axes.plot(t, y[:, b], color=colour, label=fields.label(b), marker=marker, markersize=3)
         if item.error is not None:
-            wide = item.error[:, b] / 10.0**power
-            axes.fill_between(
-                t, y[:, b] - wide, y[:, b] + wide, color=colour, alpha=0.25, linewidth=0
-            )
+            _band(axes, t, y[:, b], item.error[:, b] / 10.0**power, colour)
     axes.set_ylabel(item.label(power))
     axes.set_xlabel(axis_label("T", str(curves["temperature"].attrs["units"])))
     if t.size > 1:
@@ -142,6 +139,14 @@ def _over_temperature(
         axes.set_xlim(0, t[-1])
     _from_zero(axes, y)
     return power
+
+
+def _band(axes: Axes, x: Any, y: Any, error: Any, colour: Any) -> None:
+    """One standard error to both sides; a bar where there is one point only."""
+    if len(x) == 1:
+        axes.errorbar(x, y, error, color=colour, linewidth=0.8, capsize=2)
+    else:
+        axes.fill_between(x, y - error, y + error, color=colour, alpha=0.25, linewidth=0)
 
 
 def _over_field(axes: Axes, curves: xr.Dataset, item: Quantity, spare: Axes | None) -> int:
@@ -156,6 +161,8 @@ def _over_field(axes: Axes, curves: xr.Dataset, item: Quantity, spare: Axes | No
     for n, row in enumerate(picked):
         axes.plot(b, y[row], color=shades.colour(n), label=shades.label(n), marker=marker,
                   markersize=2.5)  # fmt: skip
+        if item.error is not None:
+            _band(axes, b, y[row], item.error[row] / 10.0**power, shades.colour(n))
     axes.set_xlim(b[0], b[-1])
     axes.set_xlabel(axis_label("B", str(curves["field"].attrs["units"])))
     axes.set_ylabel(item.label(power))
@@ -219,31 +226,41 @@ def _draw_levels(levels: xr.Dataset, chosen: list[str]) -> Any:
     grid = figure.subplots(1, len(panels), squeeze=False, sharey=True)[0]
     for axes, name in zip(grid, panels, strict=True):
         if name == "levels":
-            _ladder(axes, levels[resolved].values, above, resolved)
+            _ladder(axes, levels, above, resolved)
         else:
             _density(axes, above, levels["weight"].values)
     grid[0].set_ylabel(axis_label("E - E_0", unit, power))
     top = float(above.max()) or 1.0
     grid[0].set_ylim(-0.02 * top, 1.02 * top)
     count, states = grouped(levels.sizes["level"]), grouped(float(levels["weight"].sum()))
-    note = f"{count} levels, {states} states, $E_0$ = {typeset(f'{energy.min():.8g}')}"
+    exact = int(np.count_nonzero(levels["vector"].values < 0))
+    if exact < levels.sizes["level"]:
+        count += f" levels ({grouped(exact)} exact, the others grey, sampled)"
+    else:
+        count += " levels"
+    note = f"{count}, {states} states, $E_0$ = {typeset(f'{energy.min():.8g}')}"
     note += "" if unit == "1" else f" {typeset(unit)}"
     figure.supxlabel(note, fontsize=6.5, color=style.GREY, x=0.99, ha="right")
     return figure
 
 
-def _ladder(axes: Axes, number: Any, above: Any, resolved: str) -> None:
+def _ladder(axes: Axes, levels: xr.Dataset, above: Any, resolved: str) -> None:
+    number = levels[resolved].values
     present = np.unique(number[np.isfinite(number)])
     step = float(np.diff(present).min()) if present.size > 1 else 1.0
-    segments = []
-    for value in present:
-        heights = above[number == value]
-        if heights.size > _MOST_LEVELS:  # bars closer than a pixel are one bar
-            fine = float(above.max()) / _MOST_LEVELS
-            heights = np.unique(np.round(heights / fine)) * fine
-        half = 0.38 * step
-        segments += [[(value - half, e), (value + half, e)] for e in heights]
-    axes.add_collection(LineCollection(segments, colors=style.BLUE, linewidths=0.5))
+    exact = levels["vector"].values < 0
+    counts = levels["weight"].values > 0  # a sampled level may stand for nothing
+    # Exact levels over the sampled ones, which are not levels of the cluster itself.
+    for mine, colour in ((counts & ~exact, style.GREY), (counts & exact, style.BLUE)):
+        segments = []
+        for value in present:
+            heights = above[mine & (number == value)]
+            if heights.size > _MOST_LEVELS:  # bars closer than a pixel are one bar
+                fine = float(above.max()) / _MOST_LEVELS
+                heights = np.unique(np.round(heights / fine)) * fine
+            half = 0.38 * step
+            segments += [[(value - half, e), (value + half, e)] for e in heights]
+        axes.add_collection(LineCollection(segments, colors=colour, linewidths=0.5))
     axes.set_xlim(present[0] - 0.6 * step, present[-1] + 0.6 * step)
     axes.xaxis.set_major_locator(MaxNLocator(integer=step == 1 and present[0] % 1 == 0))
     if present.size <= 12:

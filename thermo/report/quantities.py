@@ -161,7 +161,11 @@ def per_note(attrs: Any) -> str:
     text = share(attrs)
     if attrs.get("units_system") == "reduced" and attrs.get("energy_unit") == "1":
         text += ", $k_B = \\mu_B = 1$"
-    return text + (", B \u2225 z" if along_z(attrs) else "")
+    if along_z(attrs):
+        text += ", B \u2225 z"
+    if "error_unavailable" in attrs:
+        return text + ", sampled by one vector: no error bars"
+    return text + (", sampled: bands are standard errors" if "standard_errors" in attrs else "")
 
 
 def along_z(attrs: Any) -> bool:
