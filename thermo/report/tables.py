@@ -20,6 +20,7 @@ from thermo.report.export import flag_word
 from thermo.report.numbers import duration, grouped, plain, size, with_uncertainty
 from thermo.report.quantities import (
     MAGNETIC,
+    Quantity,
     along_z,
     by_scatter,
     dataset_per,
@@ -268,6 +269,13 @@ def _correlation_sheet(fit: xr.Dataset) -> Table | None:
     return sheet
 
 
+def _curve_value(item: Quantity, t: int, b: int) -> str:
+    """A value of a curve, with its standard error where that shows in six digits."""
+    value = float(item.values[t, b])
+    error = float(item.error[t, b]) if item.error is not None else math.nan
+    return with_uncertainty(value, error) if error > 5e-7 * abs(value) else plain(value, 6)
+
+
 def print_curves(curves: xr.Dataset, console: Console | None = None) -> None:
     """Print where C, χ and χT peak and where the entropy ends, for each field."""
     right = ("field", "largest value", "at temperature", "at the highest")
@@ -285,8 +293,8 @@ def print_curves(curves: xr.Dataset, console: Console | None = None) -> None:
             edge = " (edge)" if top in (0, len(column) - 1) and len(column) > 1 else ""
             sheet.add_row(
                 name, item.unit, f"{b:g} {unit_of(curves, 'field')}".removesuffix(" 1"),
-                plain(float(column[top]), 6), f"{temperature[top]:.5g}{edge}",
-                plain(float(column[-1]), 6),
+                _curve_value(item, top, j), f"{temperature[top]:.5g}{edge}",
+                _curve_value(item, -1, j),
             )  # fmt: skip
     direction = []
     if magnetic and along_z(curves.attrs):
