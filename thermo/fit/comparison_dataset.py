@@ -56,7 +56,7 @@ def comparison_dataset(comparison: Comparison) -> xr.Dataset:
     data = [item.data for item in sets]
     stated = results[0].error_basis == "stated"
     lines = [(k, d, points) for k, d in enumerate(data) for points in fine_lines(d)]
-    windows = [r.window for r in results if r.window is not None]
+    windows = [c.result.window for c in candidates if c.standing and c.result.window is not None]
     arrays |= {
         "temperature": np.concatenate([d.temperature for d in data]),
         "field": np.concatenate([d.field for d in data]),

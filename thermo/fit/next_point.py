@@ -28,7 +28,7 @@ from thermo.units import quantity_factor, unit_name
 
 Vector = NDArray[np.float64]
 
-N_TEMPERATURES, N_FIELDS = 48, 8
+N_TEMPERATURES, N_FIELDS = 48, 6
 # Below this many uncertainties no single point decides.
 ENOUGH = 3.0
 # Without a stated one, an instrument's precision is that of the data, but not below this share.
@@ -98,14 +98,15 @@ class Proposal:
         if i.field[1] > 0:
             at += f" and {plain(self.field, 3)} T"
         unit = "" if i.units == "1" else f" {i.units}"
+        if i.per == "formula":
+            unit += " per formula unit"
         values = " and ".join(
-            f"{plain(self.predicted[name] / i.to_si, 4)} for {name!r}"
+            f"{plain(self.predicted[name] / i.to_si, 4)}{unit} for {name!r}"
             for name in (self.first, self.second)
         )
-        tail = f" {i.per}" if i.units != "1" else ""
         text = (
             f"{i.name} at {at}: {values}, where it can be measured to "
-            f"{plain(self.precision / i.to_si, 2)}{unit}{tail}; they are "
+            f"{plain(self.precision / i.to_si, 2)}{unit}; they are "
             f"{plain(self.separation, 3)} standard uncertainties apart"
         )
         if self.separation < ENOUGH:
@@ -122,7 +123,7 @@ def read_instruments(content: Content, reduced: bool) -> tuple[Instrument, ...]:
     for k, item in enumerate(raw):
         section = Section(item, f"instrument[{k}]", content.name)
         quantity = section.word("quantity", QUANTITIES)
-        name = section.text("name", "a name", quantity)
+        name = section.text("name", "a name", quantity.replace("_", " "))
         units = section.text("units", "the unit of its values")
         per = section.word("per", ("ion", "formula"), "ion")
         relative = section.number("relative_uncertainty", "a fraction such as 0.01", 0.0)
@@ -217,7 +218,7 @@ def propose(
         for (_, result), relative, own in zip(standing, relatives, predicted, strict=True):
             if relative is not None:
                 other = relative.forward.predict(points, result.values)
-                trusted &= np.abs(other - own) <= precision
+                trusted &= _from_above(points, np.abs(other - own) <= precision)
         pairs = list(combinations(range(len(standing)), 2))
         apart = np.array(
             [
@@ -247,6 +248,18 @@ def propose(
             )
         )
     return tuple(sorted(found, key=lambda proposal: -proposal.separation))
+
+
+def _from_above(points: Points, good: NDArray[np.bool_]) -> NDArray[np.bool_]:
+    """Where ``good`` (n,) holds at a point and at every higher temperature of its field: below
+    the highest bad one, curves of two sizes that happen to cross prove nothing."""
+    found = good.copy()
+    for field in np.unique(points.field):
+        at = points.field == field
+        bad = points.temperature[at & ~good]
+        if bad.size:
+            found[at & (points.temperature <= bad.max())] = False
+    return found
 
 
 def _spread(points: Points, result: FitResult) -> Vector:

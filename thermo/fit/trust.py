@@ -169,8 +169,10 @@ def cut_alike(
             )
     found = []
     for study, result, window, fit_once in zip(studies, results, windows, fits, strict=True):
+        told_alone = window_cautions(study, window)
         if dict(window.cut) == cut:
-            found.append(result)
+            kept = tuple(c for c in result.cautions if c not in told_alone)
+            found.append(replace(result, cautions=kept))
             continue
         keep = {data.name: data.temperature >= cut[data.name] for data in study.sets}
         left = sum(int(np.count_nonzero(mask)) for mask in keep.values())

@@ -104,20 +104,21 @@ def _draw_dataset(
         upper.set_xlim(low - margin, high + margin)
     if over == "temperature":
         edge = float(found["dataset_window"].values[index])
-        shade_untrusted((upper, *lower), edge if np.isfinite(edge) else 0.0)
+        shade_untrusted((upper, *lower), edge if np.isfinite(edge) else 0.0, word=False)
     if np.all(observed >= 0):
         upper.set_ylim(bottom=0)
     upper.figure.align_ylabels([upper, *lower])
 
 
-def draw_next(found: xr.Dataset) -> Any:
+def draw_next(found: xr.Dataset, only: int | None = None) -> Any:
     """Over temperature, by how many uncertainties the candidates would differ; a panel for each
-    instrument. UnavailableError where nothing was proposed."""
+    instrument, or for ``only`` one. UnavailableError where nothing was proposed."""
     if "proposal_name" not in found:
         raise UnavailableError(
             "the comparison proposes no measurement, since no two candidates are left standing"
         )
-    count = found.sizes["proposal"]
+    shown = range(found.sizes["proposal"]) if only is None else [only]
+    count = len(shown)
     columns = 1 if count == 1 else 2
     rows = -(-count // columns)
     width = style.SINGLE if columns == 1 else style.DOUBLE
@@ -125,8 +126,8 @@ def draw_next(found: xr.Dataset) -> Any:
     grid = figure.subplots(rows, columns, squeeze=False).ravel()
     for axes in grid[count:]:
         axes.set_axis_off()
-    for p in range(count):
-        _draw_proposal(figure, grid[p], found, p)
+    for axes, p in zip(grid, shown, strict=False):
+        _draw_proposal(figure, axes, found, p)
     return figure
 
 

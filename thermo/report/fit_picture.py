@@ -29,7 +29,7 @@ def draw_fit(
 ) -> Any:
     """A figure of the data sets named in ``chosen``, or of all; ``scale`` as for ``plot``.
 
-    ``footer``: the parameters below it.
+    ``footer``: the parameters below it, and per what the values are.
     """
     names = [str(name) for name in fit["dataset_name"].values]
     for name in chosen:
@@ -53,7 +53,7 @@ def draw_fit(
         break_long_words=False, break_on_hyphens=False,
     )  # fmt: skip
     figure.supxlabel(
-        "\n".join([*lines, per_what(fit, picked)]).strip().replace("$", r"\$"),
+        "\n".join([*lines, per_what(fit, picked) if footer else ""]).strip().replace("$", r"\$"),
         fontsize=6.5, color=style.GREY, x=0.99, ha="right",
     )  # fmt: skip
     return figure
@@ -173,8 +173,11 @@ def _untrusted(fit: xr.Dataset, index: int) -> tuple[tuple[Any, Any], float]:
     return gone, edge
 
 
-def shade_untrusted(panels: Sequence[Axes], edge: float) -> None:
-    """Shade temperatures below the window of trust, up to the panels' end where there is none."""
+def shade_untrusted(panels: Sequence[Axes], edge: float, word: bool = True) -> None:
+    """Shade temperatures below the window of trust, up to the panels' end where there is none.
+
+    ``word``: say beside its edge what it is.
+    """
     for n, axes in enumerate(panels):
         low, high = axes.get_xlim()
         if not edge > low:  # trusted throughout, or not known (NaN)
@@ -183,6 +186,7 @@ def shade_untrusted(panels: Sequence[Axes], edge: float) -> None:
         axes.axvspan(low, end, facecolor=style.ORANGE, alpha=0.13, linewidth=0, zorder=0)
         if n == 0:
             axes.axvline(end, color=style.ORANGE, linewidth=0.8, zorder=1)
+        if n == 0 and word:
             axes.annotate(
                 "cluster's size shows", (end, 0.03), xycoords=("data", "axes fraction"),
                 xytext=(-2, 0), textcoords="offset points", rotation=90, fontsize=5.5,

@@ -160,17 +160,20 @@ def _next(comparison: xr.Dataset) -> list[str]:
     if "proposal_name" not in comparison:
         return []
     told = str(comparison.attrs.get("proposals", "")).splitlines()
-    figure = draw_next(comparison)
-    alt = "over temperature and field, by how many uncertainties the candidates would differ"
+    made = [
+        picture(draw_next(comparison, p), f"{name}: difference of the candidates, in uncertainties")
+        for p, name in enumerate(str(x) for x in comparison["proposal_name"].values)
+    ]
+    note = (
+        "Difference of the two candidates furthest apart, over the instrument's precision and the "
+        "fits' own uncertainties together; the star is the best point, the dotted line three "
+        "uncertainties. Lines end where the size of a cluster shows."
+    )
     return [
-        bullets([line[:1].upper() + line[1:] + "." for line in told], ordered=True),
-        picture(
-            figure, alt,
-            "Difference of the two candidates furthest apart, over the instrument's precision and "
-            "the fits' own uncertainties together; the star is the best point, the dotted line "
-            "three uncertainties.",
-        ),
-    ]  # fmt: skip
+        bullets([f"{line}." for line in told], ordered=True),
+        f'<div class="pictures">{"".join(made)}</div>',
+        paragraph(note, "soft"),
+    ]
 
 
 def _for_each(
@@ -206,8 +209,14 @@ def _cautions(
     told = [] if comparison is None else _lines(comparison.attrs.get("cautions"))
     for name in shown:
         lines = _lines(fits[name].attrs.get("cautions"))
-        told += [f"{name}: {line}" if several else line for line in lines]
-    return bullets([line[:1].upper() + line[1:] + "." for line in dict.fromkeys(told)])
+        told += [f"{name}: {line}" if several else _capital(line) for line in lines]
+    return bullets([f"{line}." for line in dict.fromkeys(told)])
+
+
+def _capital(sentence: str) -> str:
+    """A sentence with a capital, unless it begins with a name or a formula (J_1, chi0, g)."""
+    word = sentence.split(maxsplit=1)[0] if sentence.strip() else ""
+    return sentence[:1].upper() + sentence[1:] if word.isalpha() and len(word) > 2 else sentence
 
 
 def _lines(text: Any) -> list[str]:
@@ -231,7 +240,8 @@ def _provenance(fits: Mapping[str, xr.Dataset], source: xr.Dataset, several: boo
     for name, fit in fits.items():
         label = f"Model of {name}, SHA-256" if several else "Model, SHA-256"
         rows.append((label, [str(fit.attrs.get("model_digest", ""))]))
-    rows.append(("Study, SHA-256", [str(best.attrs.get("study_digest", ""))]))
+    if best.attrs.get("study_text"):
+        rows.append(("Study, SHA-256", [str(best.attrs.get("study_digest", ""))]))
     for name, value in _mapping(best.attrs.get("data_digests")).items():
         rows.append((f"Data {name}, SHA-256", [value]))
     listed = "".join(

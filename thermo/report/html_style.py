@@ -33,13 +33,15 @@ p { margin: .4rem 0; max-width: 46rem; }
 table { border-collapse: collapse; width: 100%; font-size: .9rem;
   font-variant-numeric: tabular-nums; }
 caption { text-align: left; color: var(--soft); font-size: .875rem; padding-bottom: .3rem; }
-th, td { padding: .3rem .8rem .3rem 0; text-align: left; vertical-align: top;
+th, td { padding: .3rem .4rem; text-align: left; vertical-align: top;
   border-bottom: 1px solid var(--line); }
 thead th { border-bottom: 2px solid var(--ink); }
 td.n, th.n { text-align: right; white-space: nowrap; }
 td.own { background: #fff3d6; font-weight: 600; }
 tr.fallen { color: var(--soft); }
 .scroll { overflow-x: auto; margin: .6rem 0; }
+.scroll th[scope=row] { white-space: nowrap; }
+td.words { min-width: 11rem; }
 figure { margin: .8rem 0; }
 .pictures { display: grid; gap: 0 1.2rem; grid-template-columns: minmax(0, 1fr); }
 figure img { width: 100%; max-width: 34rem; height: auto; display: block; }
@@ -53,8 +55,8 @@ ul, ol { padding-left: 1.3rem; max-width: 46rem; } li { margin: .25rem 0; }
 @media (max-width: 36rem) {
   table.stack thead { position: absolute; width: 1px; height: 1px; overflow: hidden;
     clip-path: inset(50%); }
-  table.stack, table.stack tbody, table.stack tr, table.stack td, table.stack th {
-    display: block; }
+  table.stack, table.stack caption, table.stack tbody, table.stack tr, table.stack td,
+  table.stack th { display: block; }
   table.stack tr { padding: .5rem 0; border-bottom: 1px solid var(--line); }
   table.stack td, table.stack th[scope=row] { border: 0; padding: .08rem 0; text-align: left;
     white-space: normal; }

@@ -10,7 +10,7 @@ import xarray as xr
 from thermo.report.conversions import coupling_kinds, forms
 from thermo.report.export import flag_word
 from thermo.report.html_parts import Cell, paragraph, table
-from thermo.report.numbers import grouped, plain, with_uncertainty
+from thermo.report.numbers import grouped, plain, typeset, with_uncertainty
 from thermo.report.quantities import by_scatter
 
 MINUS = str.maketrans("-", "\u2212")
@@ -21,6 +21,11 @@ def number(value: float, digits: int = 3) -> str:
     return plain(value, digits).translate(MINUS) if not math.isnan(value) else ""
 
 
+def gap(value: float) -> str:
+    """A difference of criteria."""
+    return f"{value:.0f}" if value >= 100 else number(value, 3)
+
+
 def valued(value: float, error: float) -> str:
     """A value with its error and a true minus."""
     return with_uncertainty(value, error).translate(MINUS)
@@ -29,8 +34,8 @@ def valued(value: float, error: float) -> str:
 def candidates(comparison: xr.Dataset) -> str:
     """The candidates with their criteria, the best first."""
     heads = [Cell("candidate")]
-    heads += [Cell(text, True) for text in ("parameters", "χ²", "reduced χ²", "chance of χ²")]
-    heads += [Cell(text, True) for text in ("ΔAICc", "AICc weight", "ΔBIC", "BIC weight")]
+    heads += [Cell(text, True) for text in ("free", "χ²", "χ²/ν", "chance")]
+    heads += [Cell(text, True) for text in ("ΔAICc", "weight", "ΔBIC", "weight")]
     heads.append(Cell("finding"))
     rows, kinds = [], []
     for k, name in enumerate(comparison["candidate_name"].values):
@@ -48,15 +53,20 @@ def candidates(comparison: xr.Dataset) -> str:
             "" if scatter else number(value("chi_square"), 5),
             number(value("reduced_chi_square"), 3),
             chance,
-            number(value("aicc"), 3),
+            gap(value("aicc")),
             f"{value('aicc_weight'):.3f}",
-            number(value("bic"), 3),
+            gap(value("bic")),
             f"{value('bic_weight'):.3f}",
         ]
-        rows.append([Cell(str(name)), *(Cell(text, True) for text in numbers),
-                     Cell(str(comparison["candidate_remark"].values[k]))])  # fmt: skip
+        remark = str(comparison["candidate_remark"].values[k])
+        told = [Cell(text, True) for text in numbers]
+        rows.append([Cell(str(name)), *told, Cell(remark, kind="words")])
         kinds.append("" if int(comparison["candidate_standing"][k]) else "fallen")
-    return table("All candidates, fitted to the same points; the best first", heads, rows, kinds)
+    note = (
+        "All fitted to the same points, the best first. Free: parameters fitted; chance: "
+        "probability of a χ² as large; weights: shares of the criterion's evidence."
+    )
+    return table("", heads, rows, kinds) + paragraph(note, "soft")
 
 
 def residual_tests(comparison: xr.Dataset) -> str:
@@ -154,7 +164,7 @@ def conversions(fit: xr.Dataset) -> str:
         value, error = float(fit["value"][n]), float(fit["standard_error"][n])
         found = forms(kind, bond_term, str(fit["parameter_units"].values[n]))
         units = list(dict.fromkeys(form.unit for form in found))
-        heads = [Cell("H adds"), *(Cell("" if u == "1" else u, True) for u in units)]
+        heads = [Cell("H adds"), *(Cell("" if u == "1" else typeset(u), True) for u in units)]
         rows = []
         for term in dict.fromkeys(form.bond_term for form in found):
             row = [Cell(term.translate(MINUS) if term else name)]

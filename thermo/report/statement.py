@@ -7,7 +7,7 @@ import math
 import numpy as np
 import xarray as xr
 
-from thermo.report.numbers import plain, with_uncertainty
+from thermo.report.numbers import plain, typeset, with_uncertainty
 from thermo.report.quantities import by_scatter
 
 #: Chance below which a χ² or a score of the runs speaks against a model.
@@ -88,5 +88,5 @@ def key_values(fit: xr.Dataset) -> list[tuple[str, str]]:
             continue
         unit = str(fit["parameter_units"].values[n])
         value = with_uncertainty(float(fit["value"][n]), float(fit["standard_error"][n]))
-        found.append((str(name), value if unit == "1" else f"{value} {unit}"))
+        found.append((str(name), typeset(value if unit == "1" else f"{value} {unit}")))
     return found
