@@ -97,7 +97,7 @@ class Proposal:
         at = f"{plain(self.temperature, 3)} K"
         if i.field[1] > 0:
             at += f" and {plain(self.field, 3)} T"
-        unit = "" if i.units == "1" else f" {i.units}"
+        unit = "" if i.units == "1" else f" {i.units}".replace("muB", "μB")
         if i.per == "formula":
             unit += " per formula unit"
         values = " and ".join(

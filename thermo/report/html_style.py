@@ -36,7 +36,8 @@ caption { text-align: left; color: var(--soft); font-size: .875rem; padding-bott
 th, td { padding: .3rem .4rem; text-align: left; vertical-align: top;
   border-bottom: 1px solid var(--line); }
 thead th { border-bottom: 2px solid var(--ink); }
-td.n, th.n { text-align: right; white-space: nowrap; }
+td.n, th.n { text-align: right; }
+td.n { white-space: nowrap; }
 td.own { background: #fff3d6; font-weight: 600; }
 tr.fallen { color: var(--soft); }
 .scroll { overflow-x: auto; margin: .6rem 0; }
@@ -53,11 +54,14 @@ code { font-size: .85em; overflow-wrap: anywhere; }
 ul, ol { padding-left: 1.3rem; max-width: 46rem; } li { margin: .25rem 0; }
 @media (min-width: 48rem) { .pictures { grid-template-columns: repeat(2, minmax(0, 1fr)); } }
 @media (max-width: 36rem) {
+  .scroll table { font-size: .82rem; } .scroll th, .scroll td { padding: .3rem .25rem; }
   table.stack thead { position: absolute; width: 1px; height: 1px; overflow: hidden;
     clip-path: inset(50%); }
   table.stack, table.stack caption, table.stack tbody, table.stack tr, table.stack td,
   table.stack th { display: block; }
-  table.stack tr { padding: .5rem 0; border-bottom: 1px solid var(--line); }
+  table.stack tr { display: grid; grid-template-columns: 1fr 1fr; gap: 0 .8rem; padding: .5rem 0;
+    border-bottom: 1px solid var(--line); }
+  table.stack th[scope=row], table.stack td.words { grid-column: 1 / -1; }
   table.stack td, table.stack th[scope=row] { border: 0; padding: .08rem 0; text-align: left;
     white-space: normal; }
   table.stack td:not(:empty)::before { content: attr(data-head) ": "; color: var(--soft); }

@@ -35,7 +35,7 @@ def candidates(comparison: xr.Dataset) -> str:
     """The candidates with their criteria, the best first."""
     heads = [Cell("candidate")]
     heads += [Cell(text, True) for text in ("free", "χ²", "χ²/ν", "chance")]
-    heads += [Cell(text, True) for text in ("ΔAICc", "weight", "ΔBIC", "weight")]
+    heads += [Cell(text, True) for text in ("ΔAICc", "AICc weight", "ΔBIC", "BIC weight")]
     heads.append(Cell("finding"))
     rows, kinds = [], []
     for k, name in enumerate(comparison["candidate_name"].values):
