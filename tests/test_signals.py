@@ -104,7 +104,7 @@ def test_interruption(tmp_path: Path, terminal: bool) -> None:
     (tmp_path / "levels.nc").write_bytes(b"older levels")
     reader, writer = pty.openpty() if terminal else os.pipe()
     process = subprocess.Popen(
-        [command_path(), "solve", "ring.toml", "-o", "levels.nc"],
+        [command_path(), "solve", "ring.toml", "--method", "full", "-o", "levels.nc"],
         cwd=tmp_path,
         stdin=subprocess.DEVNULL,
         stdout=subprocess.PIPE,

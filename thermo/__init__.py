@@ -26,11 +26,14 @@ if TYPE_CHECKING:
     from thermo.report import export_csv, plot
     from thermo.solving import solve
     from thermo.spectrum import survey
+    from thermo.spectrum.executors import Distributed, Local
     from thermo.storage import write_dataset as write
 
 __version__ = "0.1.0"
 
 __all__ = [
+    "Distributed",
+    "Local",
     "curves",
     "errors",
     "export_csv",
@@ -46,6 +49,8 @@ __all__ = [
 ]
 
 _HOMES = {
+    "Distributed": ("thermo.spectrum.executors", "Distributed"),
+    "Local": ("thermo.spectrum.executors", "Local"),
     "curves": ("thermo.ensemble", "curves"),
     "export_csv": ("thermo.report", "export_csv"),
     "fit": ("thermo.fit", "fit"),

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import os
 import tempfile
+from collections.abc import Iterable
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
@@ -105,6 +106,40 @@ def _number(text: str, where: str, shape: str) -> float:
     if value - value != 0:
         raise RangeError(f"{where} has {value}, which is not a finite number; {shape}")
     return value
+
+
+def parse_range(text: str) -> tuple[float, float]:
+    """Two temperatures "low:high", both positive, rising. Raises RangeError."""
+    option = f"--accuracy-range {brief(text)!r}"
+    shape = 'write two temperatures, "low:high"'
+    parts = text.split(":")
+    if len(parts) != 2:
+        raise RangeError(f"{option} is no range; {shape}")
+    low, high = (_number(part, option, shape) for part in parts)
+    if not 0 < low < high:
+        raise RangeError(f"{option} does not rise from above zero; {shape}")
+    return low, high
+
+
+def option_names(names: Iterable[str]) -> str:
+    """Options as they are written: "--full-below, --seed and --steps"."""
+    written = ["--" + name.replace("_", "-") for name in names]
+    return " and ".join(filter(None, [", ".join(written[:-1]), written[-1]]))
+
+
+def check_checkpoint(given: Path | None, output: Path, model: Path) -> Path:
+    """Where finished pieces are kept: the file given, else one beside the output."""
+    if given is None:
+        name = output.name + ".partial"
+        if len(os.fsencode(name)) > 240:  # file systems take 255 bytes, sqlite adds its own
+            name = output.name[:40] + ".partial"
+        return output.with_name(name)
+    for other, what in ((output, "output"), (model, "model")):
+        if os.path.realpath(given) == os.path.realpath(other):
+            raise FileFormatError(
+                f"the checkpoint {brief(str(given), 200)} is also the {what}; choose another name"
+            )
+    return given
 
 
 def _column(path: Path, what: str) -> NDArray[Any]:

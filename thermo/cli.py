@@ -8,14 +8,11 @@ from __future__ import annotations
 
 import os
 import re
-import shutil
 import sys
-import textwrap
 import time
 from collections.abc import Sequence
-from enum import StrEnum
 from pathlib import Path
-from typing import TYPE_CHECKING, Annotated
+from typing import TYPE_CHECKING, Annotated, Any
 
 import typer
 
@@ -23,16 +20,41 @@ from thermo import __version__
 from thermo.arguments import (
     PICTURES,
     brief,
+    check_checkpoint,
     check_grid_memory,
     check_source,
     check_target,
     default_temperatures,
     grid_files,
+    option_names,
     parse_grid,
+    parse_range,
 )
 from thermo.errors import FileFormatError, PartitaError, RangeError
+from thermo.messages import confirm, note, say, tell_notes
+from thermo.options import (
+    Accuracy,
+    AccuracyRange,
+    CheckpointFile,
+    ExactStates,
+    FullBelow,
+    Memory,
+    Method,
+    MethodWord,
+    ModelFile,
+    Per,
+    Scale,
+    Scheduler,
+    Seed,
+    Steps,
+    Threads,
+    TraceOrder,
+    Units,
+    Vectors,
+    Workers,
+)
 from thermo.process import catch_signals, drop, ending, open_streams
-from thermo.progress import Interrupted, work
+from thermo.progress import Interrupted, keeping, work
 
 if TYPE_CHECKING:
     import xarray as xr
@@ -46,6 +68,7 @@ Exit codes:
   4    file cannot be read or written
   5    not enough memory
   6    a spectrum failed its own check
+  7    a scheduler or its workers failed
   129  ended by SIGHUP
   130  interrupted (Ctrl-C)
   143  ended by SIGTERM"""
@@ -57,39 +80,6 @@ app = typer.Typer(
     rich_markup_mode=None,
     context_settings={"help_option_names": ["-h", "--help"], "max_content_width": 100},
 )
-
-
-class Method(StrEnum):
-    auto = "auto"
-    full = "full"
-    sampled = "sampled"
-
-
-class Units(StrEnum):
-    si = "molar-si"
-    cgs = "molar-cgs"
-    reduced = "reduced"
-
-
-class Scale(StrEnum):
-    linear = "linear"
-    log = "log"
-
-
-class Per(StrEnum):
-    ion = "ion"
-    formula = "formula"
-
-
-ModelFile = Annotated[Path, typer.Argument(metavar="MODEL", help="Model file (TOML or JSON).")]
-Memory = Annotated[
-    str | None,
-    typer.Option(metavar="SIZE", help='Memory limit, for example "4 GiB"; default: what is free.'),
-]
-Threads = Annotated[
-    int | None,
-    typer.Option(min=1, max=9999, metavar="N", help="Processor cores to use; default: all."),
-]
 
 
 def _show_version(value: bool) -> None:
@@ -118,6 +108,10 @@ def _partita(
 @app.command()
 def survey(
     model: ModelFile,
+    method: MethodWord = Method.auto,
+    vectors: Vectors = None,
+    steps: Steps = None,
+    full_below: FullBelow = None,
     memory: Memory = None,
 ) -> None:
     """Show what a model conserves, its blocks, and the work ahead."""
@@ -125,7 +119,10 @@ def survey(
     import thermo
     from thermo.report import print_plan
 
-    print_plan(thermo.survey(thermo.read_model(model), memory=memory))
+    options = {"vectors": vectors, "steps": steps, "full_below": full_below}
+    given: dict[str, Any] = {k: value for k, value in options.items() if value is not None}
+    spins = thermo.read_model(model)
+    print_plan(thermo.survey(spins, memory=memory, method=method.value, **given))
 
 
 @app.command()
@@ -134,24 +131,74 @@ def solve(
     output: Annotated[
         Path, typer.Option("--output", "-o", metavar="FILE", help="Where the levels go (.nc).")
     ],
-    method: Annotated[Method, typer.Option(help="How to find the levels.")] = Method.auto,
+    method: MethodWord = Method.auto,
+    vectors: Vectors = None,
+    steps: Steps = None,
+    seed: Seed = None,
+    full_below: FullBelow = None,
+    exact_states: ExactStates = None,
+    trace_order: TraceOrder = None,
+    accuracy: Accuracy = None,
+    accuracy_range: AccuracyRange = None,
     memory: Memory = None,
     threads: Threads = None,
+    checkpoint: CheckpointFile = None,
+    scheduler: Scheduler = None,
+    workers: Workers = None,
 ) -> None:
-    """Find all levels of a model and write them to a file."""
+    """Find the levels of a model and write them to a file.
+
+    All of them, or (sampled) the outermost and random vectors for the rest. The options from
+    --vectors to --accuracy-range and from --checkpoint on are for sampled spectra.
+    """
+    sampling = {
+        "vectors": vectors,
+        "steps": steps,
+        "seed": seed,
+        "full_below": full_below,
+        "exact_states": exact_states,
+        "trace_order": trace_order,
+        "accuracy": accuracy,
+        "accuracy_range": None if accuracy_range is None else parse_range(accuracy_range),
+    }
+    given: dict[str, Any] = {k: value for k, value in sampling.items() if value is not None}
+    places = {"checkpoint": checkpoint, "scheduler": scheduler, "workers": workers}
+    idle = [*given, *(name for name, value in places.items() if value is not None)]
+    if method is Method.full and idle:
+        raise RangeError(
+            f"{option_names(idle)} cannot go with --method full; leave it out or take --method "
+            "sampled"
+        )
     check_source(model)
     check_target(output, (".nc",), sources=(model,))
+    kept = check_checkpoint(checkpoint, output, model)
     _set_threads(threads)
     import thermo
+    from thermo.spectrum.checkpoint import discard
 
+    if scheduler is not None or workers is not None:
+        given["executor"] = thermo.Distributed(scheduler, workers)
     spins = thermo.read_model(model)
-    _tell_notes(spins.notes)
+    tell_notes(spins.notes)
     started = time.monotonic()
-    levels = work(
-        lambda report: thermo.solve(spins, method=method.value, memory=memory, progress=report)
-    )
-    thermo.write(levels, output)
-    _confirm(
+    with keeping(kept):
+        levels = work(
+            lambda report: thermo.solve(
+                spins,
+                method=method.value,
+                memory=memory,
+                checkpoint=kept,
+                progress=report,
+                **given,
+            )
+        )
+        thermo.write(levels, output)
+    if levels.attrs["method"] == "full":
+        if idle:
+            note(f"the full spectrum was at hand, so {option_names(idle)} had no effect")
+    elif checkpoint is None:
+        discard(kept)
+    confirm(
         f"wrote {output}: {len(spins.sites)} sites, {spins.n_states} states, "
         f"{levels.sizes['level']} levels, {time.monotonic() - started:.1f} s"
     )
@@ -208,7 +255,7 @@ def curves(
     if temperatures is None:
         temperatures = default_temperatures(spectrum)
         unit = "" if dimensionless else " K"
-        _note(
+        note(
             f"{len(temperatures)} temperatures from {temperatures[0]:g} to "
             f"{temperatures[-1]:g}{unit}, from the width of the spectrum; "
             "--temperature sets others"
@@ -216,9 +263,9 @@ def curves(
     check_grid_memory(len(temperatures), len(fields))
     found = thermo.curves(spectrum, temperatures, fields, units=system.value, per=per.value, g=g)
     if found.attrs.get("field_direction") == "z":
-        _note("the model is anisotropic: fields, susceptibility and magnetization are along z")
+        note("the model is anisotropic: fields, susceptibility and magnetization are along z")
     if "unavailable" in found.attrs:
-        _note(f"no susceptibility and magnetization: {found.attrs['unavailable']}")
+        note(f"no susceptibility and magnetization: {found.attrs['unavailable']}")
     if output is None:
         thermo.export_csv(found, sys.stdout)
     elif output.suffix.lower() == ".csv":
@@ -226,7 +273,7 @@ def curves(
     else:
         thermo.write(found, output)
     if output is not None:
-        _confirm(f"wrote {output}: {len(temperatures)} temperatures × {len(fields)} fields")
+        confirm(f"wrote {output}: {len(temperatures)} temperatures × {len(fields)} fields")
 
 
 @app.command()
@@ -256,17 +303,17 @@ def fit(
     from thermo.report import print_fit
 
     problem = thermo.read_study(study)
-    _tell_notes(problem.model.notes)
+    tell_notes(problem.model.notes)
     found = work(lambda report: thermo.fit(problem, progress=report, memory=memory))
     result = found.to_dataset()
     print_fit(result)
-    _tell_notes(found.cautions)
+    tell_notes(found.cautions)
     if output is not None:
         thermo.write(result, output)
-        _confirm(f"wrote {output}")
+        confirm(f"wrote {output}")
     if picture is not None:
         thermo.plot(result, picture)
-        _confirm(f"wrote {picture}")
+        confirm(f"wrote {picture}")
 
 
 @app.command()
@@ -304,7 +351,7 @@ def plot(
 
     system = None if units is None else units.value
     thermo.plot(_read(file), target, what=what, units_system=system, scale=scale and scale.value)
-    _confirm(f"wrote {target}")
+    confirm(f"wrote {target}")
 
 
 @app.command()
@@ -336,7 +383,7 @@ def export(
     target = sys.stdout if output is None else output
     thermo.export_csv(_read(file), target, units_system=system, what=what)
     if output is not None:
-        _confirm(f"wrote {output}")
+        confirm(f"wrote {output}")
 
 
 def _read(file: Path, kind: str | None = None) -> xr.Dataset:
@@ -361,37 +408,6 @@ def _set_threads(threads: int | None) -> None:
         os.environ.update(dict.fromkeys(("PARTITA_THREADS", *pools), str(threads)))
 
 
-# ---------------------------------------------------------------- what the user is told
-
-
-def _say(sentence: str) -> None:
-    # One sentence, whatever a library put into its message: one line, wrapped only for eyes.
-    line = "partita: " + " ".join(sentence.split())
-    line = re.sub(r"\S{301,}", lambda long: brief(long[0], 300), line)
-    if sys.stderr.isatty():
-        width = shutil.get_terminal_size().columns
-        line = textwrap.fill(line, width, subsequent_indent="  ", break_on_hyphens=False)
-    try:
-        print(line, file=sys.stderr, flush=True)
-    except OSError:  # the terminal was closed, or the disk behind 2>file is full
-        drop(sys.stderr)
-
-
-def _note(sentence: str) -> None:
-    _say("note: " + sentence)
-
-
-def _tell_notes(notes: Sequence[str]) -> None:
-    for note in notes:
-        _note(note)
-
-
-def _confirm(sentence: str) -> None:
-    """Tell someone who watches what was done; a script needs only the exit code."""
-    if sys.stderr.isatty():
-        _say(sentence)
-
-
 # ---------------------------------------------------------------- faults to sentences
 
 
@@ -401,14 +417,14 @@ def run(arguments: Sequence[str]) -> int:
         code = app(list(arguments), prog_name="partita", standalone_mode=False)
         sys.stdout.flush()
     except PartitaError as fault:
-        _say(str(fault))
+        say(str(fault))
         return _leave(fault, fault.exit_code)
     except typer.Abort as fault:
         return _interrupted(fault)
     except KeyboardInterrupt as fault:
         return _interrupted(fault)
     except MemoryError as fault:
-        _say(
+        say(
             "the machine ran out of memory; close other programs, or take a smaller cluster or one "
             "that conserves more"
         )
@@ -421,7 +437,7 @@ def run(arguments: Sequence[str]) -> int:
     except OSError as fault:
         where = brief(os.fsdecode(fault.filename or "standard output"), 200)
         reason = (fault.strerror or str(fault)).lower()
-        _say(f"{where}: {reason}; free space, or check the name and its permissions")
+        say(f"{where}: {reason}; free space, or check the name and its permissions")
         drop(sys.stdout)
         return _leave(fault, 4)
     except Exception as fault:
@@ -431,9 +447,9 @@ def run(arguments: Sequence[str]) -> int:
             command = getattr(getattr(fault, "ctx", None), "command_path", "partita")
             told = str(usage()).rstrip(".").replace("Value error, ", "")
             told = re.sub(r"\S{61,}", lambda long: brief(long[0]), told)
-            _say(f"{told}; see {command} --help")
+            say(f"{told}; see {command} --help")
             return 2
-        _say(
+        say(
             f"unexpected fault ({type(fault).__name__}: {fault}); please report it, with the "
             "output of the same command run with PARTITA_DEBUG=1 in the environment"
         )
@@ -445,7 +461,9 @@ def run(arguments: Sequence[str]) -> int:
 
 def _interrupted(fault: BaseException) -> int:
     code, what = ending()
-    _say(f"{what}; no file is left half written")
+    # Typer's own exception may stand for the one that knows what is kept.
+    kept = getattr(fault, "kept", None) or getattr(fault.__cause__, "kept", None)
+    say(f"{what}; {kept or 'no file is left half written'}")
     return _leave(fault, code)
 
 

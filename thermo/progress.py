@@ -2,33 +2,54 @@
 
 from __future__ import annotations
 
+import contextlib
 import sys
 import threading
 import time
-from collections.abc import Callable
+from collections.abc import Callable, Iterator
+from pathlib import Path
 from typing import Any, TypeVar
 
+from thermo.errors import CheckpointError, WorkerError
+from thermo.messages import note
+
 Result = TypeVar("Result")
+_LEAVE = 8.0  # seconds in which work that is to end may do so by itself
 
 
 class Bar:
-    """A progress bar on a terminal, shown only once the work has taken two seconds."""
+    """A progress bar on a terminal, shown only once the work has taken two seconds.
+
+    Elsewhere, as in the log of a batch queue, a line every ten minutes.
+    """
 
     patience = 2.0
+    log_every = 600.0
 
     def __init__(self) -> None:
         self.started = time.monotonic()
         self.done = 0.0
         self.text = "preparing"
+        self.told = float("-inf")
+        self.stopping = False
+        self.logged = self.started
         self.bar: Any = None
         self.task: Any = None
 
     def report(self, done: float, text: str) -> None:
-        self.done, self.text = done, text
+        if self.stopping:
+            raise Interrupted
+        self.done, self.text, self.told = done, text, time.monotonic()
 
     def refresh(self) -> None:
         if self.bar is None:
-            if not sys.stderr.isatty() or time.monotonic() - self.started < self.patience:
+            now = time.monotonic()
+            if not sys.stderr.isatty():
+                if now - self.logged > self.log_every:
+                    self.logged = now
+                    note(f"{100 * self.done:.0f} % done: {self.text}")
+                return
+            if now - self.started < self.patience:
                 return
             from rich.console import Console
             from rich.progress import BarColumn, Progress, TaskProgressColumn, TextColumn
@@ -51,7 +72,31 @@ class Bar:
 
 
 class Interrupted(BaseException):
-    """Ctrl-C while the worker thread still computes: the process must not wait for it."""
+    """Ctrl-C while the worker thread still computes: the process must not wait for it.
+
+    Raised in that thread as well when it next reports, so that it can put its things away.
+    """
+
+    kept: str | None = None
+
+
+@contextlib.contextmanager
+def keeping(checkpoint: Path) -> Iterator[None]:
+    """Whatever ends the work, the user learns where its finished part is, if there is one."""
+    try:
+        yield
+    except (CheckpointError, WorkerError):  # these say it themselves
+        raise
+    except BaseException as fault:
+        if checkpoint.exists():
+            kept = (
+                f"what was finished is kept in {checkpoint}, and the same command goes on from it"
+            )
+            if isinstance(fault, (Interrupted, KeyboardInterrupt)):
+                fault.kept = kept  # type: ignore[union-attr]
+            else:
+                note(kept)
+        raise
 
 
 def work(task: Callable[[Callable[[float, str], None]], Result]) -> Result:
@@ -73,6 +118,10 @@ def work(task: Callable[[Callable[[float, str], None]], Result]) -> Result:
             worker.join(0.1)
             bar.refresh()
     except KeyboardInterrupt:
+        bar.stopping = True
+        if time.monotonic() - bar.told < 1.0:  # it reports often: let it put its things away
+            with contextlib.suppress(KeyboardInterrupt):
+                worker.join(_LEAVE)
         raise Interrupted from None
     finally:
         bar.close()

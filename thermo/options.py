@@ -1,0 +1,107 @@
+"""The options of the commands: their words, and what may stand after them."""
+
+from __future__ import annotations
+
+from enum import StrEnum
+from pathlib import Path
+from typing import Annotated
+
+import typer
+
+
+class Method(StrEnum):
+    auto = "auto"
+    full = "full"
+    sampled = "sampled"
+
+
+class Units(StrEnum):
+    si = "molar-si"
+    cgs = "molar-cgs"
+    reduced = "reduced"
+
+
+class Scale(StrEnum):
+    linear = "linear"
+    log = "log"
+
+
+class Per(StrEnum):
+    ion = "ion"
+    formula = "formula"
+
+
+ModelFile = Annotated[Path, typer.Argument(metavar="MODEL", help="Model file (TOML or JSON).")]
+MethodWord = Annotated[Method, typer.Option("--method", help="How to find the levels.")]
+Memory = Annotated[
+    str | None,
+    typer.Option(metavar="SIZE", help='Memory limit, for example "4 GiB"; default: what is free.'),
+]
+Threads = Annotated[
+    int | None,
+    typer.Option(min=1, max=9999, metavar="N", help="Processor cores to use; default: all."),
+]
+
+# For sampled spectra; None leaves each to ``thermo.solve``.
+Vectors = Annotated[
+    int | None,
+    typer.Option(
+        metavar="N",
+        help="Random vectors per sector, two or more for error bars; default: 2, or more where "
+        "they cost nothing.",
+    ),
+]
+Steps = Annotated[
+    int | None, typer.Option(metavar="N", help="Lanczos steps per vector; default: 200.")
+]
+Seed = Annotated[int | None, typer.Option(metavar="N", help="Seed of the vectors; default: 1.")]
+FullBelow = Annotated[
+    int | None,
+    typer.Option(
+        metavar="DIM", help="Sectors up to this dimension are solved fully; default: what pays off."
+    ),
+]
+ExactStates = Annotated[
+    int | None,
+    typer.Option(
+        metavar="N",
+        help="Most exact states at each edge of a sector, 0 for none; default: all that converge.",
+    ),
+]
+TraceOrder = Annotated[
+    int | None,
+    typer.Option(
+        metavar="K", help="Weights reproduce the traces up to H^K, 0 for none; default: 6."
+    ),
+]
+Accuracy = Annotated[
+    float | None,
+    typer.Option(
+        metavar="X",
+        help="Add vectors until C and χ have this relative standard error, for example 0.01.",
+    ),
+]
+AccuracyRange = Annotated[
+    str | None,
+    typer.Option(
+        metavar="LOW:HIGH",
+        help="Temperatures at which --accuracy must hold; default: a tenth of the largest "
+        "coupling to ten times it.",
+    ),
+]
+CheckpointFile = Annotated[
+    Path | None,
+    typer.Option(
+        metavar="FILE",
+        help="Keeps finished pieces, and goes on from those it has; default: beside the output "
+        "(.partial), removed when done.",
+    ),
+]
+Scheduler = Annotated[
+    str | None,
+    typer.Option(metavar="ADDRESS", help="Work through the Dask scheduler at host:port."),
+]
+Workers = Annotated[
+    int | None,
+    typer.Option(metavar="N", help="Work in N processes of this machine, through Dask."),
+]
