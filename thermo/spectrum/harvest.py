@@ -24,7 +24,8 @@ from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.linalg import eigh_tridiagonal
+
+from thermo.hilbert.tridiagonal import eigen_rows
 
 Vector = NDArray[np.float64]
 
@@ -53,8 +54,13 @@ class Ritz:
 
 def ritz_pairs(alpha: Vector, beta: Vector, dots: NDArray[np.complex128]) -> Ritz:
     """Diagonalise one tridiagonal matrix; ``alpha``, ``beta`` (m,), ``dots`` (m, F)."""
-    value, vectors = eigh_tridiagonal(alpha, beta[:-1])
-    return Ritz(value, vectors[0], np.abs(beta[-1] * vectors[-1]), dots.T @ vectors)
+    steps, partners = dots.shape
+    rows = np.zeros((steps, 2 + 2 * partners))
+    rows[0, 0] = rows[-1, 1] = 1.0
+    rows[:, 2 : 2 + partners], rows[:, 2 + partners :] = dots.real, dots.imag
+    value, turned = eigen_rows(alpha, beta[:-1], rows)
+    overlap = turned[:, 2 : 2 + partners] + 1j * turned[:, 2 + partners :]
+    return Ritz(value, turned[:, 0], np.abs(beta[-1] * turned[:, 1]), overlap.T)
 
 
 @dataclass(frozen=True, eq=False)
