@@ -70,7 +70,7 @@ ul, ol { padding-left: 1.3rem; max-width: 46rem; } li { margin: .25rem 0; }
 @page { margin: 16mm; }
 @media print {
   body { padding: 0; max-width: none; font-size: 10pt; }
-  h2, h3 { break-after: avoid; } figure, tr, .verdict, li { break-inside: avoid; }
+  h2, h3 { break-after: avoid; } figure, tr, .verdict, li, .scroll { break-inside: avoid; }
   .pictures { grid-template-columns: repeat(2, minmax(0, 1fr)); }
   pre { max-height: none; overflow: visible; } .scroll { overflow: visible; }
   .verdict, td.own { print-color-adjust: exact; -webkit-print-color-adjust: exact; }
