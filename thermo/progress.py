@@ -110,18 +110,20 @@ def work(task: Callable[[Callable[[float, str], None]], Result]) -> Result:
             result.append(task(bar.report))
         except BaseException as fault:
             faults.append(fault)
+        finally:
+            ended.set()
 
-    worker = threading.Thread(target=body, daemon=True)
+    # Not Thread.join: broken off by a signal, it takes the thread for ended (Python 3.11).
+    ended = threading.Event()
     try:
-        worker.start()
-        while worker.is_alive():
-            worker.join(0.1)
+        threading.Thread(target=body, daemon=True).start()
+        while not ended.wait(0.1):
             bar.refresh()
     except KeyboardInterrupt:
         bar.stopping = True
         if time.monotonic() - bar.told < 1.0:  # it reports often: let it put its things away
             with contextlib.suppress(KeyboardInterrupt):
-                worker.join(_LEAVE)
+                ended.wait(_LEAVE)
         raise Interrupted from None
     finally:
         bar.close()
