@@ -12,7 +12,8 @@ from tests.test_fit_surroundings import T, data, model_of, study_of
 from thermo import errors
 from thermo.fit import fit, read_study
 from thermo.fit.problem import make_problem
-from thermo.fit.profiles import LEVELS, held, minos
+from thermo.fit.profiles import held, minos
+from thermo.fit.result import RISE
 from thermo.fit.surroundings import debye
 
 
@@ -30,7 +31,7 @@ def parts(result):
 def test_the_levels_are_quantiles_of_chi_square():
     from scipy.stats import chi2
 
-    for level, rise in LEVELS.items():
+    for level, rise in RISE.items():
         assert rise == pytest.approx(chi2.ppf(level, 1), rel=1e-6)
 
 

@@ -78,7 +78,7 @@ def combination(
     direction: Vector, names: Sequence[str], units: Sequence[str], theta: Vector
 ) -> str:
     """The weak direction in numbers: "J1 by +1 K and J2 by -0.98 K"."""
-    kept = np.flatnonzero(_shares(direction, theta) > NAMED)
+    kept = np.flatnonzero(_shares(direction, theta) > NAMED).tolist()
     step = direction / direction[kept[0]]
     words = [
         f"{names[k]} by {'+' if step[k] > 0 else ''}{plain(float(step[k]), 3)}"
@@ -91,4 +91,5 @@ def combination(
 def _shares(direction: Vector, theta: Vector) -> Vector:
     size = np.abs(theta)
     share = np.abs(direction) / np.where(size > 0, size, 1.0)
-    return share / share.max()
+    found: Vector = share / share.max()
+    return found

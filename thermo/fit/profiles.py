@@ -21,12 +21,10 @@ from numpy.typing import NDArray
 from thermo.errors import StudyError
 from thermo.fit.minimise import descend
 from thermo.fit.problem import Problem, make_problem
-from thermo.fit.result import FitResult, Interval
+from thermo.fit.result import RISE, FitResult, Interval
 
 Vector = NDArray[np.float64]
 
-#: Levels of the intervals, and the rise of χ² that belongs to each.
-LEVELS = {0.68: 0.988946, 0.95: 3.841459}
 # A bound this many standard errors away is felt.
 NEAR = 3.0
 # Correlations from here on bend a profile.
@@ -36,10 +34,12 @@ PATIENCE = 20.0
 EVALUATIONS = 30
 # A profile ends within this share of its rise.
 CLOSE = 2e-3
-STEPS = 25
+STEPS = 14
 # From so many standard errors on, an end counts as infinite.
 FAR = 1e3
-TOLERANCE = 1e-9
+TOLERANCE = 1e-6
+# Calls of χ² that MINOS may take where least squares found no end.
+CALLS = 300
 
 
 def add_profiles(
@@ -61,13 +61,15 @@ def add_profiles(
     problem = make_problem(result.study, result.forward, None)
     theta = np.array([result[n].value for n in names])
     skipped: list[str] = []
-    if needy:
-        seconds = _seconds(problem, theta) * EVALUATIONS * len(needy)
-        if seconds > PATIENCE:
-            needy, skipped = [], needy
+    if needy and _seconds(problem, theta) * EVALUATIONS * len(needy) > PATIENCE:
+        needy, skipped = [], needy
     found: dict[str, tuple[Interval, ...]] = {}
     lower = False
-    for count, name in enumerate(wanted := [n for n in names if n in (*asked, *needy)]):
+    until = time.perf_counter() + PATIENCE
+    for count, name in enumerate(wanted := [*asked, *needy]):
+        if name in needy and time.perf_counter() > until:
+            skipped.append(name)
+            continue
         if progress is not None:
             progress(count / len(wanted), f"profile of {name}")
         found[name], better = _profile(problem, theta, names.index(name), result)
@@ -82,8 +84,8 @@ def add_profiles(
     if skipped:
         cautions.append(
             f"profile intervals of {', '.join(skipped)}, near a bound or strongly correlated, "
-            f"were left out, since they would take some {_duration(seconds)}; name them in the "
-            "study's profile to have them"
+            f"were left out, since they take more than {PATIENCE:.0f} s; name them in the study's "
+            "profile to have them"
         )
     return replace(
         result,
@@ -117,10 +119,6 @@ def _seconds(problem: Problem, theta: Vector) -> float:
     start = time.perf_counter()
     problem.residuals(moved)
     return time.perf_counter() - start
-
-
-def _duration(seconds: float) -> str:
-    return f"{seconds:.0f} s" if seconds < 120 else f"{seconds / 60:.0f} minutes"
 
 
 def _profile(
@@ -163,10 +161,10 @@ def minos(
         fit.limits[name] = (low[n], high[n])
         fit.errors[name] = result[name].standard_error
     try:
-        fit.migrad()
+        fit.migrad(ncall=CALLS)
         intervals = []
-        for level in LEVELS:
-            fit.minos(names[k], cl=level)
+        for level in RISE:
+            fit.minos(names[k], cl=level, ncall=CALLS)
             ends = fit.merrors[names[k]]
             if ends.lower_new_min or ends.upper_new_min:
                 return (), True
@@ -195,11 +193,11 @@ def held(
     error = result[result.free_names[k]].standard_error
     if not error > 0:
         error = scale / max(float(np.linalg.norm(column)), 1e-300)
-    ends: dict[float, list[tuple[float, bool]]] = {level: [] for level in LEVELS}
+    ends: dict[float, list[tuple[float, bool]]] = {level: [] for level in RISE}
     better = False
     for sign, bound in ((-1.0, lower[k]), (1.0, upper[k])):
         at = theta.copy()
-        for level, rise in LEVELS.items():
+        for level, rise in RISE.items():
             value, at_limit, at, new = _end(
                 problem, theta, at, k, sign, bound, error, math.sqrt(rise) * scale, bottom
             )
@@ -239,7 +237,7 @@ def _end(
         trial = at.copy()
         trial[k] = theta[k] + sign * size
         try:
-            trial, _, _ = descend(problem, trial, (k,), TOLERANCE, 60)
+            trial, _, _ = descend(problem, trial, (k,), TOLERANCE, 30)
             residuals = problem.residuals(trial)
         except StudyError:
             return math.nan, False, at, False

@@ -34,6 +34,8 @@ if TYPE_CHECKING:
 Vector = NDArray[np.float64]
 
 CURVE_POINTS = 240
+#: Levels of intervals, and the rise of χ² that belongs to each (one degree of freedom).
+RISE = {0.68: 0.988946, 0.95: 3.841459}
 # Residuals below this share of their uncertainties say nothing.
 NOTICED = 0.1
 
@@ -81,6 +83,15 @@ class Estimate:
     def interval(self, level: float) -> Interval | None:
         """The profile interval of a level, 0.68 or 0.95; None where it was not looked for."""
         return next((i for i in self.intervals if i.level == level), None)
+
+    def confidence(self, level: float) -> tuple[float, float]:
+        """The ends of an interval of level 0.68 or 0.95: the profile's where there is one, else
+        from the standard error; NaN where neither is known."""
+        found = self.interval(level)
+        if found is not None:
+            return found.lower, found.upper
+        width = math.sqrt(RISE[level]) * self.standard_error
+        return self.value - width, self.value + width
 
     def __str__(self) -> str:
         """Like "J = -42.00(16) cm-1", with what else there is to know in brackets."""
