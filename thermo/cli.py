@@ -266,6 +266,8 @@ def curves(
         note("the model is anisotropic: fields, susceptibility and magnetization are along z")
     if "unavailable" in found.attrs:
         note(f"no susceptibility and magnetization: {found.attrs['unavailable']}")
+    if "error_unavailable" in found.attrs:
+        note(f"no error bars: {found.attrs['error_unavailable']}")
     if output is None:
         thermo.export_csv(found, sys.stdout)
     elif output.suffix.lower() == ".csv":
