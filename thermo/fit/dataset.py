@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from dataclasses import replace
 from typing import TYPE_CHECKING, Any
 
@@ -11,7 +12,7 @@ from numpy.typing import NDArray
 from thermo.fit.forward import Points, set_points
 from thermo.fit.measured import Measured
 from thermo.fit.provenance import check_arrays, check_attributes
-from thermo.fit.result import CURVE_POINTS, Estimate, FitResult
+from thermo.fit.result import CURVE_POINTS, RISE, Estimate, FitResult
 from thermo.variables import build_fit
 
 if TYPE_CHECKING:
@@ -44,6 +45,9 @@ def fit_dataset(result: FitResult) -> xr.Dataset:
         "degrees_of_freedom": result.degrees_of_freedom,
         "evaluations": result.n_evaluations,
         "converged": int(result.converged),
+        "prior": [math.nan if e.prior is None else e.prior[0] for e in shown],
+        "prior_error": [math.nan if e.prior is None else e.prior[1] for e in shown],
+        **_intervals(shown),
     }
     sets = result.sets
     data = [item.data for item in sets]
@@ -72,6 +76,17 @@ def fit_dataset(result: FitResult) -> xr.Dataset:
     }
     arrays |= check_arrays(result)
     return build_fit(arrays, {**result.attributes(), **check_attributes(result)})
+
+
+def _intervals(shown: list[Estimate]) -> dict[str, list[float]]:
+    """The ends of the profile intervals, NaN where they were not looked for."""
+    found: dict[str, list[float]] = {}
+    for level in RISE:
+        ends = [e.interval(level) for e in shown]
+        name = f"{100 * level:.0f}"
+        found[f"lower_{name}"] = [math.nan if i is None else i.lower for i in ends]
+        found[f"upper_{name}"] = [math.nan if i is None else i.upper for i in ends]
+    return found
 
 
 def _correlation(result: FitResult, shown: list[Estimate]) -> Vector:

@@ -225,6 +225,7 @@ def _parameter_sheet(fit: xr.Dataset) -> Table:
         remark = {"fixed": "fixed", "tied": f"= {tie}", "free": ""}[role]
         if stuck != "none":
             remark = f"at its {stuck} bound"
+        remark = "; ".join(part for part in (remark, *_known_of(fit, n)) if part)
         unit = str(fit["parameter_units"].values[n])
         free = role == "free"
         sheet.add_row(
@@ -236,6 +237,20 @@ def _parameter_sheet(fit: xr.Dataset) -> Table:
             Text(remark),
         )
     return sheet
+
+
+def _known_of(fit: xr.Dataset, n: int) -> list[str]:
+    """Prior and 95 % interval of one parameter, where the fit has them."""
+    found = []
+    if "prior" in fit and math.isfinite(float(fit["prior"][n])):
+        error = float(fit["prior_error"][n])
+        found.append(f"prior {with_uncertainty(float(fit['prior'][n]), error)}")
+    if "lower_95" in fit:
+        low, high = float(fit["lower_95"][n]), float(fit["upper_95"][n])
+        if not (math.isnan(low) and math.isnan(high)):
+            ends = ["?" if math.isnan(x) else plain(x, 5) for x in (low, high)]
+            found.append(f"95 %: {ends[0]} … {ends[1]}")
+    return found
 
 
 def _bounds(low: float, high: float) -> str:
