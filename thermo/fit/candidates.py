@@ -37,7 +37,7 @@ import numpy as np
 from thermo.errors import RangeError, StudyError
 from thermo.fit import full_solver, single_fit
 from thermo.fit.next_point import Instrument, Proposal, from_data, propose, read_instruments
-from thermo.fit.residual_tests import FEW_RUNS, UNLIKELY, along, chance, durbin_watson, runs_score
+from thermo.fit.residual_tests import FEW_RUNS, UNLIKELY, along, chance, durbin_watson, noticed_runs
 from thermo.fit.result import FitResult
 from thermo.fit.starts import FURTHER_STARTS
 from thermo.fit.strict import Section, did_you_mean
@@ -283,7 +283,7 @@ def _ranked(names: Sequence[str], results: Sequence[FitResult]) -> list[Candidat
             share = (item.residual / item.uncertainty)[order] if np.all(item.uncertainty > 0) else (
                 item.residual[order]
             )  # fmt: skip
-            runs[item.data.name] = runs_score(share)
+            runs[item.data.name] = noticed_runs(share)
             watson[item.data.name] = durbin_watson(share)
         found.append(
             Candidate(

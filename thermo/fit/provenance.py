@@ -12,7 +12,7 @@ from typing import Any
 
 import numpy as np
 
-from thermo.fit.residual_tests import along, durbin_watson, runs_score
+from thermo.fit.residual_tests import along, durbin_watson, noticed_runs
 from thermo.fit.result import FitResult
 
 LIBRARIES = ("numpy", "scipy", "numba", "xarray", "netCDF4", "matplotlib")
@@ -26,7 +26,7 @@ def check_arrays(result: FitResult) -> dict[str, Any]:
     for item in result.sets:
         order = along(item.data.temperature, item.data.field)
         share = item.residual / np.where(item.uncertainty > 0, item.uncertainty, 1.0)
-        runs.append(runs_score(share[order]))
+        runs.append(noticed_runs(share[order]))
         watson.append(durbin_watson(share[order]))
     arrays: dict[str, Any] = {"dataset_runs": runs, "dataset_durbin_watson": watson}
     if window is None:

@@ -14,6 +14,8 @@ FEWEST = 10
 #: Chance of a score below this, or of a χ² as large, for a model that is right: 0.1 %.
 UNLIKELY = 1e-3
 FEW_RUNS = -3.09
+#: What rounding leaves of exact points, in units of their uncertainties, is no trend.
+NOTICED = 0.1
 
 
 def along(temperature: Vector, field: Vector) -> NDArray[np.int64]:
@@ -37,6 +39,14 @@ def runs_score(residual: Vector) -> float:
     expected = 1 + 2 * up * (n - up) / n
     variance = (expected - 1) * (expected - 2) / (n - 1)
     return (runs - expected) / math.sqrt(variance) if variance > 0 else math.nan
+
+
+def noticed_runs(residual: Vector) -> float:
+    """``runs_score`` of residuals (n,) in order and in units of their uncertainties; NaN where all
+    are so small that a trend among them matters to nobody."""
+    if float(np.abs(residual).max(initial=0.0)) <= NOTICED:
+        return math.nan
+    return runs_score(residual)
 
 
 def durbin_watson(residual: Vector) -> float:
