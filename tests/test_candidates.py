@@ -232,12 +232,12 @@ def test_shared_parameters_reach_those_that_have_them(tmp_path):
 
 
 def test_the_proposal_is_where_closed_forms_differ_most(tmp_path):
-    """Two dimers of fixed J, 60 and 66 K, over a grid: C by its closed form at every point."""
+    """Two dimers of fixed J, 62 and 64 K, over a grid: C by its closed form at every point."""
     error = 0.2 * dimer_chi(T, 63.0, 2.1)
     content = rival_study(tmp_path, T, noisy(dimer_chi(T, 63.0, 2.1), error, 0), error, ("dimer",))
     content["candidate"] = [
         {"name": f"{J:g} K", "model": network("dimer"), "parameters": {"J": {"fixed": J}, "g": {}}}
-        for J in (60.0, 66.0)
+        for J in (62.0, 64.0)
     ]
     content["instrument"] = [
         {
@@ -253,7 +253,7 @@ def test_the_proposal_is_where_closed_forms_differ_most(tmp_path):
     assert found.conclusion == "undecided"
     (proposal,) = found.proposals
     t = proposal.grid.temperature
-    low, high = dimer_heat(t, 60.0), dimer_heat(t, 66.0)
+    low, high = dimer_heat(t, 62.0), dimer_heat(t, 64.0)
     # C does not depend on g, the one free parameter, so only the instrument's precision counts.
     precision = np.hypot(0.02 * (low + high) / 2, 0.01)
     expected = np.abs(low - high) / precision
