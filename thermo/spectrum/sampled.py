@@ -24,6 +24,7 @@ from thermo.hilbert.orbits import Orbits, find_orbits
 from thermo.model.calibration import Sampling, calibrated_table
 from thermo.model.level_table import LevelTable, energy_scale
 from thermo.model.spin_model import SpinModel
+from thermo.spectrum import sampling_plan
 from thermo.spectrum.full import FullSolver, energy_bounds
 from thermo.spectrum.harvest import harvest, ritz_pairs
 from thermo.spectrum.moments import exact_moments
@@ -117,29 +118,24 @@ class SampledSolver:
     def pieces(self) -> list[Piece]:
         """All pieces, one M after the other."""
         found = []
-        moves = len(self._full.moves.site_i)
+        below, steps = _given(self.settings.full_below), self.settings.steps
         for k, magnetic in enumerate(self.plan.magnetic):
             name = self._name(magnetic)
-            rows = magnetic.orbits
-            if len(self.sampled_sectors(magnetic)) < len(magnetic.sectors):
-                cost = sum(
-                    0.05 * s.dimension**3 for s in magnetic.sectors
-                    if s.dimension <= _given(self.settings.full_below)
-                )  # fmt: skip
+            sampled = self.sampled_sectors(magnetic)
+            if sampled:
+                cost = sampling_plan.tile_seconds(self.plan, magnetic, self.family, steps)
+                for family in range(self.families):
+                    for index in range(len(self._tiles(magnetic))):
+                        key = f"{name}/tile/{family}/{index}"
+                        label = f"{name}, vectors {family + 1}.{index + 1}"
+                        found.append(Piece(key, label, cost, "tile", k, family, index))
+                walk = sampling_plan.trace_seconds(self.plan, magnetic, self.settings.trace_order)
+                # Whoever is first at an M finds its links.
+                walk += sampling_plan.build_seconds(self.plan, magnetic)
+                found.append(Piece(f"{name}/traces", f"{name}, traces", walk, "traces", k))
+            if len(sampled) < len(magnetic.sectors):
+                cost = sampling_plan.full_seconds(magnetic, below)
                 found.append(Piece(f"{name}/full", f"{name}, small sectors", cost, "full", k))
-            if not self.sampled_sectors(magnetic):
-                continue
-            walk = 50.0 * rows * max(1, moves // 2) ** 2
-            found.append(Piece(f"{name}/traces", f"{name}, traces", walk, "traces", k))
-            cost = 0.5 * rows * moves * tile.WIDTH * self.settings.steps
-            for family in range(self.families):
-                for index in range(len(self._tiles(magnetic))):
-                    label = f"{name}, vectors {family + 1}.{index + 1}"
-                    found.append(
-                        Piece(
-                            f"{name}/tile/{family}/{index}", label, cost, "tile", k, family, index
-                        )
-                    )
         return found
 
     def _name(self, magnetic: MagneticSector) -> str:

@@ -30,11 +30,12 @@ FULL_SHARE = 0.25
 LARGEST_FULL = 4000
 
 # Seconds on the machine these were measured on (tests/bench/), one thread: per link, column and
-# step in the cache and beyond it, per row, column and vector of a family, per link found and
-# symmetry element, per step of a local walk, per tridiagonal matrix of 100 steps.
-_LINK, _FAR_LINK, _ROW = 0.8e-9, 1.6e-9, 1.2e-9
+# step in the cache and beyond it; per row, column and vector of a family; per link found and
+# symmetry element; per row and squared links of a local walk; per tridiagonal matrix of 100
+# steps; to begin.
+_LINK, _FAR_LINK, _ROW = 0.8e-9, 1.6e-9, 0.8e-9
 _CACHE_BYTES = 16 * 2**20
-_FIND, _WALK, _RITZ = 3.0e-9, 4.0e-9, 3.0e-3
+_FIND, _WALK, _RITZ, _BEGIN = 5.0e-9, 6.0e-8, 1.0e-3, 0.3
 _PROBE_SECONDS = 0.0115
 
 
@@ -194,26 +195,44 @@ def cost(plan: SymmetryPlan, settings: Settings, limit: int, cores: int) -> Cost
     return Cost(at_once, max(1, cores // at_once), memory, seconds)
 
 
+def full_seconds(magnetic: MagneticSector, below: int) -> float:
+    """All sectors of one M up to a dimension, diagonalised."""
+    small = [s for s in magnetic.sectors if s.dimension <= below]
+    return sum(planning.block_cost(s.dimension, s.real) for s in small)
+
+
+def build_seconds(plan: SymmetryPlan, magnetic: MagneticSector) -> float:
+    """Orbits and links of one M."""
+    return _FIND * magnetic.orbits * magnetic.elements.order * (1 + links_per_row(plan, magnetic))
+
+
+def trace_seconds(plan: SymmetryPlan, magnetic: MagneticSector, order: int) -> float:
+    """Exact traces of one M; the walks merge, so that they grow as links squared at most."""
+    share = (0.0, 0.02, 0.15, 1.0)[(order + 1) // 2]
+    return _WALK * magnetic.orbits * links_per_row(plan, magnetic) ** 2 * share
+
+
+def tile_seconds(plan: SymmetryPlan, magnetic: MagneticSector, family: int, steps: int) -> float:
+    """One tile of one M, all its steps."""
+    rows = float(magnetic.orbits)
+    near = min(1.0, _CACHE_BYTES / (rows * 16 * tile.WIDTH))
+    link = near * _LINK + (1 - near) * _FAR_LINK
+    return steps * rows * tile.WIDTH * (links_per_row(plan, magnetic) * link + _ROW * family)
+
+
 def _reference_seconds(plan: SymmetryPlan, settings: Settings) -> float:
     """Seconds of one thread of the reference machine."""
     vectors, below = settings.vectors or 2, settings.full_below or 0
     family = family_size(vectors)
-    total = 0.3
+    total = _BEGIN
     for m in plan.magnetic:
-        small = [s for s in m.sectors if s.dimension <= below]
-        sampled = len(m.sectors) - len(small)
-        total += sum(planning.block_cost(s.dimension, s.real) for s in small)
+        sampled = sum(s.dimension > below for s in m.sectors)
+        total += full_seconds(m, below)
         if not sampled:
             continue
-        links = links_per_row(plan, m)
-        rows = float(m.orbits)
-        total += _FIND * rows * m.elements.order * (1 + links)
-        walks = max(1.0, links) ** ((settings.trace_order + 1) // 2)
-        total += _WALK * rows * walks if settings.trace_order else 0.0
         tiles = -(-sampled // (tile.WIDTH // family)) * -(-vectors // family)
-        far = rows * 16 * tile.WIDTH > _CACHE_BYTES
-        step = rows * tile.WIDTH * (links * (_FAR_LINK if far else _LINK) + _ROW * (1 + family))
-        total += tiles * settings.steps * step
+        total += build_seconds(plan, m) + trace_seconds(plan, m, settings.trace_order)
+        total += tiles * tile_seconds(plan, m, family, settings.steps)
         total += sampled * vectors * _RITZ * (settings.steps / 100) ** 2
     return total
 
