@@ -83,7 +83,7 @@ def _many(count: Any, noun: str) -> str:
     return f"{grouped(number)} {noun}{'' if number == 1 else 's'}"
 
 
-_METHODS = {"none": "none: too large for full spectra"}
+_METHODS = {"none": "none: neither a full nor a sampled spectrum fits"}
 
 
 def plan_rows(facts: Mapping[str, Any]) -> list[tuple[str, str]]:
@@ -131,8 +131,21 @@ def plan_rows(facts: Mapping[str, Any]) -> list[tuple[str, str]]:
         rows.append(("time", duration(float(facts["seconds"]))))
     if facts.get("method"):
         method = str(facts["method"])
-        rows.append(("method", _METHODS.get(method, method)))
+        text = _METHODS.get(method, method)
+        if method == "sampled":
+            text += f": {_sampled_text(facts)}"
+        rows.append(("method", text))
     return rows
+
+
+def _sampled_text(facts: Mapping[str, Any]) -> str:
+    """Who is sampled: "132 blocks by 2 random vectors each, 38 small ones solved fully"."""
+    blocks = [s if isinstance(s, Mapping) else vars(s) for s in facts.get("sectors") or ()]
+    sampled = sum(b.get("method") == "sampled" for b in blocks)
+    text = f"{_many(sampled, 'block')} by {_many(int(facts.get('vectors', 0)), 'random vector')}"
+    text += " each" if sampled > 1 else ""
+    full = len(blocks) - sampled
+    return text + (f", {_many(full, 'small one')} solved fully" if full else "")
 
 
 def blocks_text(sectors: Any) -> str:
