@@ -319,7 +319,7 @@ def test_plan_far_beyond_any_machine() -> None:
     assert "far beyond any machine; 4.0 GiB allowed" in text
     assert "over 1000 years" in text
     assert "1.153×10¹⁸" in text
-    assert "none: too large for full spectra" in text
+    assert "none: neither a full nor a sampled spectrum fits" in text
     assert "e+" not in text
 
 
