@@ -291,36 +291,32 @@ def fit(
             "--picture", metavar="FILE", help="Picture of data, fit and residuals (.png .svg .pdf)."
         ),
     ] = None,
+    report: Annotated[
+        Path | None,
+        typer.Option(metavar="FILE", help="The whole report as one page (.html)."),
+    ] = None,
     memory: Memory = None,
     threads: Threads = None,
 ) -> None:
-    """Fit exchange constants to measured curves and print the result."""
+    """Fit exchange constants to measured curves, or compare rival models, and print the result."""
     check_source(study)
     if output is not None:
         check_target(output, (".nc",), sources=(study,))
     if picture is not None:
         check_target(picture, PICTURES, sources=(study,))
+    if report is not None:
+        check_target(report, (".html", ".htm"), sources=(study,))
     _set_threads(threads)
-    import thermo
-    from thermo.report import print_fit
+    from thermo.fit_command import run_fit
 
-    problem = thermo.read_study(study)
-    tell_notes(problem.model.notes)
-    found = work(lambda report: thermo.fit(problem, progress=report, memory=memory))
-    result = found.to_dataset()
-    print_fit(result)
-    tell_notes(found.cautions)
-    if output is not None:
-        thermo.write(result, output)
-        confirm(f"wrote {output}")
-    if picture is not None:
-        thermo.plot(result, picture)
-        confirm(f"wrote {picture}")
+    run_fit(study, output, picture, report, memory)
 
 
 @app.command()
 def plot(
-    file: Annotated[Path, typer.Argument(metavar="FILE", help="Curves, fit or levels file.")],
+    file: Annotated[
+        Path, typer.Argument(metavar="FILE", help="Curves, fit, comparison or levels file.")
+    ],
     output: Annotated[
         Path | None,
         typer.Option(
@@ -335,7 +331,7 @@ def plot(
         typer.Option(
             metavar="NAMES",
             help='Curves to draw, for example "specific_heat,chi_T", or the name of a data set of '
-            "a fit; default: all there is.",
+            'a fit or comparison, or "next" of the latter; default: all there is.',
         ),
     ] = None,
     units: Annotated[
@@ -358,32 +354,47 @@ def plot(
 
 @app.command()
 def export(
-    file: Annotated[Path, typer.Argument(metavar="FILE", help="Curves, fit or levels file.")],
+    file: Annotated[
+        Path, typer.Argument(metavar="FILE", help="Curves, fit, comparison or levels file.")
+    ],
     output: Annotated[
         Path | None,
-        typer.Option("--output", "-o", metavar="FILE", help=".csv; default: standard output."),
+        typer.Option(
+            "--output",
+            "-o",
+            metavar="FILE",
+            help=".csv, or .tex (a fit's parameters, a comparison's candidates); default: CSV to "
+            "standard output.",
+        ),
     ] = None,
     what: Annotated[
         str | None,
         typer.Option(
             metavar="NAMES",
             help='Columns of curves, for example "specific_heat,chi_T"; of a fit: points (default) '
-            "or parameters.",
+            "or parameters; of a comparison: candidates (default), parameters, points or next.",
         ),
     ] = None,
     units: Annotated[
         Units | None, typer.Option(help="Units of the curves; default: those of the file.")
     ] = None,
 ) -> None:
-    """Write the table in a file as CSV, with units in its header."""
+    """Write the table in a file as CSV, with units in its header, or as LaTeX."""
     check_source(file)
     if output is not None:
-        check_target(output, (".csv",), sources=(file,))
+        check_target(output, (".csv", ".tex"), sources=(file,))
     import thermo
 
     system = None if units is None else units.value
-    target = sys.stdout if output is None else output
-    thermo.export_csv(_read(file), target, units_system=system, what=what)
+    if output is not None and output.suffix.lower() == ".tex":
+        if what is not None or system is not None:
+            raise RangeError(
+                "a LaTeX table holds what it holds, in its own units; leave --what and --units out"
+            )
+        thermo.export_latex(_read(file), output)
+    else:
+        target = sys.stdout if output is None else output
+        thermo.export_csv(_read(file), target, units_system=system, what=what)
     if output is not None:
         confirm(f"wrote {output}")
 

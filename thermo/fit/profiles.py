@@ -94,7 +94,6 @@ def add_profiles(
         ),
         cautions=tuple(cautions),
         n_solves=result.forward.cache.n_solves,
-        n_evaluations=result.n_evaluations + problem.n_evaluations,
     )
 
 
