@@ -140,6 +140,16 @@ def test_tables_drop_spurious_levels_and_tell_the_orders():
     assert trace_misfit(again, again.sampling) < 1e-12
 
 
+def test_a_group_whose_sampled_levels_stand_for_nothing_is_exact():
+    """All its states may have been found exactly, with copies of them left over."""
+    levels, moments, center, scale = one_group(3, vectors=1, full_below=1000)
+    energy = np.append(levels["energy"], levels["energy"][:3])
+    raw = np.append(levels["raw"], np.zeros(3))
+    weight, degree = calibrate(energy, raw, np.arange(len(raw)) >= 160, moments, center, scale)
+    assert degree == 6
+    np.testing.assert_array_equal(weight, raw)
+
+
 def test_a_group_that_cannot_have_its_states_is_refused():
     sectors = invented(5, ((0, 1, 40),))
     table = sampled_table(sectors, 2, 1)

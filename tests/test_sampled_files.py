@@ -263,6 +263,10 @@ def test_tables_and_pictures_show_the_errors(levels, tmp_path, capsys):
     print_curves(curves)
     heat = next(line for line in capsys.readouterr().out.splitlines() if "specific_heat" in line)
     assert "(" in heat  # the value with its error, as in 3.17(17)
+    listed = io.StringIO()
+    thermo.export_csv(levels, listed)
+    rows = list(csv.DictReader(io.StringIO(listed.getvalue())))
+    assert [int(row["vector"]) for row in rows] == levels["vector"].values.tolist()
     for name, dataset in (("curves", curves), ("levels", levels)):
         plot(dataset, tmp_path / f"{name}.png")
         assert (tmp_path / f"{name}.png").stat().st_size > 5000

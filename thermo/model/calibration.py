@@ -89,11 +89,11 @@ def calibrate(
     Only sampled weights change. Where a factor 1 + q would be negative at a level of positive
     weight, or the levels are too few, the degree is the next lower one that serves: the traces
     up to the returned degree then hold. −1: not even the number of states can be met (nothing is
-    changed). A group without sampled levels returns K. Cost: O(L K²).
+    changed). A group without sampled levels of any weight returns K. Cost: O(L K²).
     """
     weight = np.array(raw_weight, dtype=np.float64)
     highest = len(moments) - 1
-    if not np.any(is_sampled):
+    if not np.any(weight[is_sampled] > 0):
         return weight, highest
     basis = chebyshev_values((energy - center) / scale, highest)
     sampled = basis[is_sampled]

@@ -36,7 +36,8 @@ def export_csv(
     holds all) and 0 below 10⁻³⁰ of their column's largest; ``units_system`` converts molar ones
     to "molar-si" or "molar-cgs", and ``what`` chooses columns by name (a list, or names with
     commas: "specific_heat,chi_T"), by default all stored ones and chi_T. Levels: energy, weight
-    (number of states), S or M where resolved, and block, one row each. A fit: ``what`` is
+    (number of states), S or M where resolved, block, and of sampled levels the random vector (−1:
+    exact), one row each. A fit: ``what`` is
     "points" (the default: data, prediction and residual of each) or "parameters". A comparison:
     "candidates" (the default), "parameters", "points" or "next", what to measure. A missing value
     is an empty cell. Raises FileFormatError, UnavailableError or UnitsError.
@@ -133,6 +134,9 @@ def _levels(levels: xr.Dataset) -> Table:
         columns.append(levels[resolved].values)
     header.append("block")
     columns.append(levels["sector"].values)
+    if np.any(levels["vector"].values >= 0):
+        header.append("vector")
+        columns.append(levels["vector"].values)
     return header, (
         [_number(v, _LEVEL_DIGITS) if v.dtype.kind == "f" else str(v) for v in row]
         for row in zip(*columns, strict=True)
