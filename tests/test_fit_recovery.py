@@ -67,7 +67,8 @@ def study(folder, number):
         lowest = 0.6 * true["J"]  # there rings of 10 and 14 agree to 10^-4
         values = {"J": true["J"]}
         if kind == "alternating":
-            true["K"] = values["K"] = true["J"] * rng.uniform(0.2, 0.6)
+            true["ratio"] = rng.uniform(0.2, 0.6)
+            values["K"] = true["J"] * true["ratio"]
         T = np.geomspace(lowest, 300.0, 50)
         large = thermo.read_model(model(kind, 14)).with_couplings(values)
         curves = thermo.curves(thermo.solve(large), temperature=T, units="molar-cgs", g=true["g"])
@@ -80,7 +81,9 @@ def study(folder, number):
     size = 0.003 if kind == "alternating" else rng.choice([0.003, 0.01, 0.02])
     error = size * np.abs(chi) + 1e-6
     write_csv(folder / "chi.csv", "T,chi,error", T, chi + error * rng.standard_normal(50), error)
-    starts = {"J": {"start": 40.0}} | ({"K": {"start": 20.0}} if kind == "alternating" else {})
+    starts = {"J": {"start": 40.0}}
+    if kind == "alternating":  # whose couplings exchanged give the same curve: one is the larger
+        starts |= {"K": {"tied": "ratio*J"}, "ratio": {"start": 0.5, "lower": 0.0, "upper": 1.0}}
     prior = [true["g"] + 0.01 * rng.standard_normal(), 0.01]  # a resonance, with its own error
     return {
         "format": 1, "title": f"{kind} {number}", "model": model(kind, 10), "window": "off",
@@ -102,7 +105,7 @@ def test_intervals_hold_the_truth_as_often_as_they_say(tmp_path):
         assert result.converged, mapping["title"]
         assert not (result.trustworthy and result.at_bound)
         if not result.identifiable:
-            # Two couplings that noise makes equal: said so, and no error claimed.
+            # What the noise hides is said to be so, and no error claimed.
             refused += 1
             assert all(np.isnan(e.standard_error) for e in result.parameters)
             continue
@@ -116,7 +119,8 @@ def test_intervals_hold_the_truth_as_often_as_they_say(tmp_path):
                     hits.append(hit)
                 if level == 0.68:
                     by_name.setdefault(name, []).append(hit)
-        if abs(result["J"].value - true["J"]) > 5 * result["J"].standard_error:
+        off = abs(result["J"].value - true["J"]) / result["J"].standard_error
+        if result.trustworthy and off > 5:
             wrong.append((mapping["title"], str(result["J"]), true["J"]))
     shares = {level: float(np.mean(hits)) for level, hits in inside.items()}
     print(shares, {name: round(float(np.mean(hits)), 3) for name, hits in by_name.items()}, wrong)

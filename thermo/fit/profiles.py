@@ -83,7 +83,7 @@ def add_profiles(
         )
     if skipped:
         cautions.append(
-            f"profile intervals of {', '.join(skipped)}, near a bound or strongly correlated, "
+            f"profile intervals of {', '.join(skipped)}, whose standard errors may mislead, "
             f"were left out, since they take more than {PATIENCE:.0f} s; name them in the study's "
             "profile to have them"
         )
@@ -98,7 +98,10 @@ def add_profiles(
 
 
 def _needy(result: FitResult) -> list[str]:
-    """Free parameters whose standard error may mislead: near a bound, or strongly correlated."""
+    """Free parameters whose standard error may mislead: near a bound, strongly correlated, or all
+    with one at its bound, since the others' errors then know nothing of its leaving it."""
+    if result.at_bound:
+        return list(result.free_names)
     found = []
     correlation = np.nan_to_num(result.correlation) - np.eye(len(result.free_names))
     for k, name in enumerate(result.free_names):
@@ -106,7 +109,7 @@ def _needy(result: FitResult) -> list[str]:
         reach = NEAR * e.standard_error
         near = e.value - e.lower < reach or e.upper - e.value < reach
         strong = bool(np.any(np.abs(correlation[k]) > STRONG))
-        if e.at_bound or near or strong:
+        if near or strong:
             found.append(name)
     return found
 
