@@ -21,7 +21,7 @@ from numpy.typing import NDArray
 
 from thermo.hilbert import encoding, sparse, tile
 from thermo.hilbert.orbits import Orbits, find_orbits
-from thermo.model.calibration import Sampling, calibrated_table
+from thermo.model.calibration import NEGLIGIBLE, Sampling, calibrated_table
 from thermo.model.level_table import LevelTable, energy_scale
 from thermo.model.spin_model import SpinModel
 from thermo.spectrum import sampling_plan
@@ -276,24 +276,26 @@ class SampledSolver:
                 number += 1
             if f"{name}/traces" in results:
                 moments[g] = mirror * results[f"{name}/traces"]["moments"]
-        joined = np.concatenate(energy)
-        order = np.argsort(joined, kind="stable")
+        joined, raw, unit = np.concatenate(energy), np.concatenate(weight), np.concatenate(unit_of)
+        # Spurious copies of converged levels stand for no states at all.
+        order = np.flatnonzero((unit < 0) | (raw > NEGLIGIBLE))
+        order = order[np.argsort(joined[order], kind="stable")]
+        joined, raw, unit = joined[order], raw[order], unit[order]
         group = np.concatenate(group_of)[order]
         twice_m = np.array([abs(m.twice_m) for m in self.plan.magnetic])[group]
         if self.plan.conserved.modulus:
             twice_m = np.full(len(joined), -1, dtype=np.int64)
-        raw = np.concatenate(weight)[order]
         for g in range(len(moments)):
             if not moments[g].any():  # no random vector here: whatever the levels give is exact
                 mine = group == g
-                x = (joined[order][mine] - self.center) / self.half_width
+                x = (joined[mine] - self.center) / self.half_width
                 moments[g] = [float(raw[mine] @ x**k) for k in range(moments.shape[1])]
         sampling = Sampling(
-            np.concatenate(unit_of)[order], group, raw, np.array(unit_sector, dtype=np.int64),
+            unit, group, raw, np.array(unit_sector, dtype=np.int64),
             moments, self.center, self.half_width, np.zeros(len(moments), dtype=np.int64),
         )  # fmt: skip
         table = LevelTable(
-            joined[order], raw, np.full(len(joined), -1, dtype=np.int64), twice_m,
+            joined, raw, np.full(len(joined), -1, dtype=np.int64), twice_m,
             self.plan.resolved, self.plan.terms.n_sites,
         )  # fmt: skip
         calibrated = calibrated_table(table, sampling)
