@@ -20,10 +20,11 @@ from thermo import errors
 if TYPE_CHECKING:
     from thermo.ensemble import curves
     from thermo.fit import fit, read_study
+    from thermo.fit.candidates import compare
     from thermo.model import read_model
     from thermo.model.level_table import read_checked as read
     from thermo.model.level_table import read_levels
-    from thermo.report import export_csv, plot
+    from thermo.report import export_csv, export_latex, html_report, plot
     from thermo.solving import solve
     from thermo.spectrum import survey
     from thermo.spectrum.executors import Distributed, Local
@@ -34,10 +35,13 @@ __version__ = "0.1.0"
 __all__ = [
     "Distributed",
     "Local",
+    "compare",
     "curves",
     "errors",
     "export_csv",
+    "export_latex",
     "fit",
+    "html_report",
     "plot",
     "read",
     "read_levels",
@@ -51,9 +55,12 @@ __all__ = [
 _HOMES = {
     "Distributed": ("thermo.spectrum.executors", "Distributed"),
     "Local": ("thermo.spectrum.executors", "Local"),
+    "compare": ("thermo.fit.candidates", "compare"),
     "curves": ("thermo.ensemble", "curves"),
     "export_csv": ("thermo.report", "export_csv"),
+    "export_latex": ("thermo.report", "export_latex"),
     "fit": ("thermo.fit", "fit"),
+    "html_report": ("thermo.report", "html_report"),
     "plot": ("thermo.report", "plot"),
     "read": ("thermo.model.level_table", "read_checked"),
     "read_levels": ("thermo.model.level_table", "read_levels"),

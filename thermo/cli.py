@@ -35,6 +35,7 @@ from thermo.messages import confirm, note, say, tell_notes
 from thermo.options import (
     Accuracy,
     AccuracyRange,
+    AnyFile,
     CheckpointFile,
     ExactStates,
     FullBelow,
@@ -43,6 +44,8 @@ from thermo.options import (
     MethodWord,
     ModelFile,
     Per,
+    PictureFile,
+    ReportFile,
     Scale,
     Scheduler,
     Seed,
@@ -285,20 +288,12 @@ def fit(
         Path | None,
         typer.Option("--output", "-o", metavar="FILE", help="Where the result goes (.nc)."),
     ] = None,
-    picture: Annotated[
-        Path | None,
-        typer.Option(
-            "--picture", metavar="FILE", help="Picture of data, fit and residuals (.png .svg .pdf)."
-        ),
-    ] = None,
-    report: Annotated[
-        Path | None,
-        typer.Option(metavar="FILE", help="The whole report as one page (.html)."),
-    ] = None,
+    picture: PictureFile = None,
+    report: ReportFile = None,
     memory: Memory = None,
     threads: Threads = None,
 ) -> None:
-    """Fit exchange constants to measured curves, or compare rival models, and print the result."""
+    """Fit exchange constants to measured curves; rivals are compared."""
     check_source(study)
     if output is not None:
         check_target(output, (".nc",), sources=(study,))
@@ -314,9 +309,7 @@ def fit(
 
 @app.command()
 def plot(
-    file: Annotated[
-        Path, typer.Argument(metavar="FILE", help="Curves, fit, comparison or levels file.")
-    ],
+    file: AnyFile,
     output: Annotated[
         Path | None,
         typer.Option(
@@ -354,9 +347,7 @@ def plot(
 
 @app.command()
 def export(
-    file: Annotated[
-        Path, typer.Argument(metavar="FILE", help="Curves, fit, comparison or levels file.")
-    ],
+    file: AnyFile,
     output: Annotated[
         Path | None,
         typer.Option(
@@ -379,7 +370,7 @@ def export(
         Units | None, typer.Option(help="Units of the curves; default: those of the file.")
     ] = None,
 ) -> None:
-    """Write the table in a file as CSV, with units in its header, or as LaTeX."""
+    """Write the table in a file as CSV, units in its header, or LaTeX."""
     check_source(file)
     if output is not None:
         check_target(output, (".csv", ".tex"), sources=(file,))

@@ -105,3 +105,16 @@ Workers = Annotated[
     int | None,
     typer.Option(metavar="N", help="Work in N processes of this machine, through Dask."),
 ]
+AnyFile = Annotated[
+    Path, typer.Argument(metavar="FILE", help="Curves, fit, comparison or levels file.")
+]
+PictureFile = Annotated[
+    Path | None,
+    typer.Option(
+        "--picture", metavar="FILE", help="Picture of data, fit and residuals (.png .svg .pdf)."
+    ),
+]
+ReportFile = Annotated[
+    Path | None,
+    typer.Option("--report", metavar="FILE", help="The whole report as one page (.html)."),
+]

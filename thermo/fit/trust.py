@@ -97,7 +97,7 @@ def again(study: Study, last: FitResult, first: FitResult, fit_once: FitOnce) ->
         for p in study.parameters.all
     )
     start = {e.name: e.start for e in first.parameters}
-    result = fit_once(replace(study, parameters=warm), True)
+    result = fit_once(replace(study, parameters=warm, starts=None), True)
     return replace(
         result,
         study=study,

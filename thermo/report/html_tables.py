@@ -113,8 +113,11 @@ def sets(fit: xr.Dataset) -> str:
 
 def parameters(fit: xr.Dataset) -> str:
     """Every parameter with its error, unit, start and bounds."""
-    heads = [Cell("parameter"), Cell("value", True), Cell("unit"), Cell("start", True),
-             Cell("bounds"), Cell("")]  # fmt: skip
+    profiled = any(name in fit and bool(np.isfinite(fit[name].values).any())
+                   for name in ("lower_95", "upper_95"))  # fmt: skip
+    heads = [Cell("parameter"), Cell("value", True), Cell("unit")]
+    heads += [Cell("68 %", True), Cell("95 %", True)] if profiled else []
+    heads += [Cell("start", True), Cell("bounds"), Cell("")]
     rows = []
     for n, name in enumerate(fit["parameter_name"].values):
         role = flag_word(fit["parameter_role"], n)
@@ -123,6 +126,10 @@ def parameters(fit: xr.Dataset) -> str:
         remark = {"fixed": "fixed", "tied": f"= {tie}", "free": ""}[role]
         if stuck != "none":
             remark = f"at its {stuck} bound"
+        prior = float(fit["prior"][n]) if "prior" in fit else math.nan
+        if not math.isnan(prior):
+            told = f"prior {valued(prior, float(fit['prior_error'][n]))}"
+            remark = f"{remark}; {told}" if remark else told
         unit = str(fit["parameter_units"].values[n])
         free = role == "free"
         rows.append(
@@ -130,6 +137,7 @@ def parameters(fit: xr.Dataset) -> str:
                 Cell(str(name)),
                 Cell(valued(float(fit["value"][n]), float(fit["standard_error"][n])), True),
                 Cell("" if unit == "1" else unit),
+                *([Cell(_interval(fit, n, level), True) for level in (68, 95)] if profiled else []),
                 Cell(number(float(fit["start"][n]), 5) if free else "", True),
                 Cell(_bounds(fit, n) if free else ""),
                 Cell(remark),
@@ -138,6 +146,15 @@ def parameters(fit: xr.Dataset) -> str:
     return table(
         "Values with standard errors of the last digits in brackets", heads, rows
     )  # fmt: skip
+
+
+def _interval(fit: xr.Dataset, n: int, level: int) -> str:
+    """A profile interval; "" where it was not looked for."""
+    low, high = (float(fit[f"{end}_{level}"][n]) for end in ("lower", "upper"))
+    if math.isnan(low) and math.isnan(high):
+        return ""
+    ends = ["?" if math.isnan(x) else plain(x, 5).translate(MINUS) for x in (low, high)]
+    return f"{ends[0]} to {ends[1]}"
 
 
 def _bounds(fit: xr.Dataset, n: int) -> str:
