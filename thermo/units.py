@@ -214,6 +214,39 @@ def _parse(unit: str) -> dict[str, int] | None:
     return None if outer else {name: power for name, power in powers.items() if power}
 
 
+_PREFIX = {"m": 1e-3, "u": 1e-6, "μ": 1e-6}
+
+
+def molar_twin(quantity: str, unit: str) -> tuple[str, str, float] | None:
+    """A unit per gram, per kilogram or of a whole sample as the unit per mole it stands for.
+
+    Returns the molar unit's name, "g" (of an amount of 1 g or 1 kg) or "sample", and the factor
+    that takes a value in ``unit`` to the molar unit times 1 g/mol (for "sample": times 1 mol).
+    None where it is neither: "emu/g" is ("emu/mol", "g", 1), "uJ/K" ("J/(mol K)", "sample", 1e-6).
+    """
+    powers = _parse(unit)
+    if not powers or "mol" in powers:
+        return None
+    per, factor = "sample", 1.0
+    for name, grams in (("g", 1.0), ("kg", 1000.0)):
+        if powers.get(name) == -1:
+            del powers[name]
+            per, factor = "g", 1 / grams
+            break
+    for name in list(powers):
+        if len(name) > 1 and name[0] in _PREFIX and name[1:] == "J" and powers[name] == 1:
+            factor *= _PREFIX[name[0]]
+            powers["J"] = powers.pop(name)
+    magnetic = quantity in ("susceptibility", "chi_T")
+    if per == "sample" and magnetic and "emu" in powers and "Oe" not in powers:
+        return None  # a moment that was not yet divided by its field, most likely
+    powers["mol"] = -1
+    for name in _factors(quantity):
+        if _parse(name) == powers:
+            return name, per, factor
+    return None
+
+
 def check_units_system(units_system: str) -> str:
     """The name itself, or a UnitsError that lists the three there are."""
     if units_system not in UNITS_SYSTEMS:

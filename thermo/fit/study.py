@@ -33,6 +33,9 @@ Every key of a study file (positions in lists count from 0; paths are relative t
                                   the temperature_unit
                  field_range      [lowest, highest] field to use, in T
                  leave_out        [[from, to], ...] temperatures not to use, in K
+                 molar_mass       in g/mol, of what per counts, for units per gram ("emu/g",
+                                  "J/(g K)"), and then also
+                 mass             in mg, for units of the whole sample ("emu", "emu/Oe", "uJ/K")
                  flags            the flags of rows to use, where columns names a flag column;
                                   left out: rows whose flag is empty or 0
                  sample           a word; parameters named after it (g_A, chi0_A,

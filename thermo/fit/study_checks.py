@@ -26,6 +26,11 @@ from thermo.fit.strict import did_you_mean
 if TYPE_CHECKING:
     from thermo.fit.study import Study
 
+# Two sets of the same quantity this many times apart are in different units.
+UNLIKE = 10.0
+# Points that two sets must have in common to be compared.
+FEWEST = 3
+
 
 def check_study(study: Study) -> None:
     """Raise StudyError, DataError or UnavailableError for the first fault found."""
@@ -68,6 +73,7 @@ def check_study(study: Study) -> None:
             f"{name}: data set {felt[0].name!r} needs one g common to all sites and directions, "
             "but the model's g differs; give the model one g, or fit zero-field specific heat only"
         )
+    _check_alike(study)
     _check_priors(study)
     _check_lattice(study)
     for asked in study.asked:
@@ -85,6 +91,47 @@ def check_study(study: Study) -> None:
                 f"{name}: parameters.{parameter.name} is free, but nothing in the data depends "
                 "on it; fix it, or add data that do"
             )
+
+
+def _check_alike(study: Study) -> None:
+    """Two sets of one quantity at one field cannot differ by a factor of ten: units do."""
+    for k, second in enumerate(study.sets):
+        for first in study.sets[:k]:
+            ratio = _ratio(study, first, second)
+            if ratio is not None and not 1 / UNLIKE < ratio < UNLIKE:
+                factor = max(ratio, 1 / ratio)
+                raise DataError(
+                    f"{study.source}: data sets {first.name!r} and {second.name!r} measure the "
+                    f"same at the same temperatures but differ by a factor of {factor:.3g}; check "
+                    "their units and per"
+                )
+
+
+def _ratio(study: Study, first: Measured, second: Measured) -> float | None:
+    """Median of the second set over the first where both measure the same; None where not."""
+    curves = []
+    for data in (first, second):
+        field = np.unique(data.field)
+        if len(field) > 1 or data.quantity == "magnetization":
+            return None
+        value = data.value / (study.model.ions_per_formula if data.per == "formula" else 1.0)
+        if data.quantity == "chi_T":
+            value = value / data.temperature
+        if data.quantity == "specific_heat_over_T":
+            value = value * data.temperature
+        order = np.argsort(data.temperature)
+        curves.append((data.quantity.split("_")[0], data.temperature[order], value[order], field))
+    (kind, t, v, b), (other, u, w, c) = curves
+    same = {kind, other} <= {"susceptibility", "chi"} or kind == other == "specific"
+    inside = (u >= t[0]) & (u <= t[-1])
+    # A susceptibility at a small field is that at none; a specific heat is not.
+    if not same or inside.sum() < FEWEST or (kind == "specific" and b[0] != c[0]):
+        return None
+    reference = np.interp(u[inside], t, v)
+    usable = (reference != 0) & (w[inside] != 0)
+    if usable.sum() < FEWEST:
+        return None
+    return float(np.median(np.abs(w[inside][usable] / reference[usable])))
 
 
 def _check_priors(study: Study) -> None:
