@@ -188,9 +188,16 @@ def window_tables(
     counts = np.concatenate([*count, *none])
     found = np.concatenate([*amplitude, *none])[order].astype(np.complex128) / scale
     found = np.concatenate([found, spare])
-    columns = np.array(fields, dtype=np.uint64).reshape(-1, 6).T.copy()
+    low_bits, masks, low_bits_2, masks_2, strides, bases = (
+        np.array(fields, dtype=np.uint64).reshape(-1, 6).T.copy()
+    )
     return WindowTables(
-        *columns,
+        low_bits,
+        masks,
+        low_bits_2,
+        masks_2,
+        strides,
+        bases,
         energy=np.concatenate([*energy, *none]).astype(np.float64),
         start=(np.cumsum(counts) - counts).astype(np.uint64),
         count=counts.astype(np.uint64),
