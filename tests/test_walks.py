@@ -260,7 +260,7 @@ def test_few_windows_serve_many_pairs() -> None:
 
 def test_links_foretold() -> None:
     """A ring of 24 has 12 moves per configuration on average. Counted with plain sets from 50
-    random configurations, one, two and three moves reached 13, 90 and 427 others by 12, 153
+    random configurations, one, two and three moves reached 13, 90 and 427 by 12, 153
     and 1007 links."""
     prepared = Prepared(ring(24))
     arguments = (prepared.code, prepared.moves, prepared.tables)
