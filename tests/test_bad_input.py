@@ -141,12 +141,6 @@ def test_sixty_spins_are_surveyed_but_not_solved(partita: Command, tmp_path: Pat
     assert not (tmp_path / "levels.nc").exists()
 
 
-def test_sampled_spectra_are_refused_for_now(partita: Command, tmp_path: Path) -> None:
-    (tmp_path / "model.toml").write_text(MODEL)
-    done = partita("solve", "model.toml", "--method", "sampled", "-o", "levels.nc")
-    refused(done, 3, "sampled")
-
-
 # ---------------------------------------------------------------- data and studies
 
 
