@@ -19,7 +19,7 @@ Vector = NDArray[np.float64]
 MAX_EVALUATIONS = 300
 # Relative tolerances of cost, step and gradient: tight, since an evaluation without a solve is
 # cheap and rounding in the levels is about 1e-14.
-TOLERANCE = 1e-12
+TOLERANCE = 1e-10
 # A further start is followed roughly, and to the end only where it leads lower by this share.
 EVALUATIONS_FOLLOWING = 30
 TOLERANCE_FOLLOWING = 1e-5
