@@ -90,7 +90,7 @@ def sets(fit: xr.Dataset) -> str:
     scatter = by_scatter(fit)
     heads = [Cell("data set"), Cell("quantity"), Cell("units"), Cell("points", True)]
     heads += [] if scatter else [Cell("χ²", True)]
-    tested = "dataset_runs" in fit
+    tested = "dataset_runs" in fit and "dataset_durbin_watson" in fit
     heads += [Cell("runs (σ)", True), Cell("Durbin–Watson", True)] if tested else []
     rows = []
     owner = fit["point_dataset"].values
