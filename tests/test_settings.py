@@ -13,7 +13,7 @@ from thermo.spectrum.settings import Settings, check_sampling
 
 
 def test_defaults() -> None:
-    assert check_sampling() == Settings(None, 200, 1, None, None, 6, None)
+    assert check_sampling() == Settings(None, 200, 1, None, None, None, None)
 
 
 def test_whole_numbers_of_any_library() -> None:

@@ -71,7 +71,9 @@ ExactStates = Annotated[
 TraceOrder = Annotated[
     int | None,
     typer.Option(
-        metavar="K", help="Weights reproduce the traces up to H^K, 0 for none; default: 6."
+        metavar="K",
+        help="Weights reproduce the traces up to H^K, 0 for none; default: 6, or less where that "
+        "costs more than the vectors.",
     ),
 ]
 Accuracy = Annotated[

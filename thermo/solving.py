@@ -29,7 +29,7 @@ def solve(
     seed: int = Settings.seed,
     full_below: int | None = None,
     exact_states: int | None = None,
-    trace_order: int = Settings.trace_order,
+    trace_order: int | None = Settings.trace_order,
     accuracy: float | None = None,
     accuracy_range: Sequence[float] | None = None,
     memory: int | float | str | None = None,
@@ -47,7 +47,8 @@ def solve(
     For sampled spectra: ``vectors`` random vectors per sector (None: 2, or more where they cost
     nothing), ``steps`` Lanczos steps each, ``seed``; sectors up to dimension ``full_below`` are
     solved fully (None: what pays off); at most ``exact_states`` converged states at each edge of
-    a sector enter exactly (None: all); weights reproduce the traces up to H^``trace_order``.
+    a sector enter exactly (None: all); weights reproduce the traces up to H^``trace_order``
+    (None: 6, or less where that would cost more than the vectors).
     ``accuracy``: the relative standard error of C and χ to reach by adding vectors, over the
     temperatures ``accuracy_range`` = (low, high) in the unit that curves have (None: from a
     tenth of the largest coupling to ten times it). ``checkpoint``: a file that keeps finished

@@ -15,6 +15,7 @@ from collections.abc import Callable
 from pathlib import Path
 from typing import Any
 
+import llvmlite.binding
 import numba
 import platformdirs
 
@@ -76,3 +77,44 @@ def fast_kernel(function: Callable[..., Any]) -> Any:
         error_model="numpy",
         fastmath={"contract", "nnan", "ninf", "nsz"},
     )(function)
+
+
+def _prefetch_intrinsic() -> Any:
+    """An instruction that asks for a row of a 2-D array ahead of its use; it changes nothing."""
+    from llvmlite import ir
+    from numba import types
+    from numba.core import cgutils
+
+    def prefetch(typing: Any, array: Any, row: Any, column: Any) -> Any:
+        def generate(context: Any, builder: Any, signature: Any, arguments: Any) -> Any:
+            kind = signature.args[0]
+            made = context.make_array(kind)(context, builder, arguments[0])
+            pointer = cgutils.get_item_pointer(
+                context, builder, kind, made, arguments[1:], wraparound=False, boundscheck=False
+            )
+            byte, word = ir.IntType(8).as_pointer(), ir.IntType(32)
+            function = cgutils.get_or_insert_function(
+                builder.module,
+                ir.FunctionType(ir.VoidType(), [byte, word, word, word]),
+                "llvm.prefetch.p0",
+            )
+            # For reading, to stay in every cache, data.
+            flags = [word(0), word(3), word(1)]
+            builder.call(function, [builder.bitcast(pointer, byte), *flags])
+            return context.get_dummy_value()
+
+        return types.void(array, row, column), generate
+
+    return numba.extending.intrinsic(prefetch)
+
+
+def _no_prefetch(array: Any, row: Any, column: Any) -> None:
+    """Where the compiler has no such instruction, or nothing is compiled."""
+
+
+if numba.config.DISABLE_JIT:
+    prefetch = _no_prefetch
+elif llvmlite.binding.llvm_version_info[0] < 17:
+    prefetch = kernel(_no_prefetch)
+else:
+    prefetch = _prefetch_intrinsic()

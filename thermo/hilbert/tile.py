@@ -24,13 +24,15 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from thermo.hilbert.jit import fast_kernel
+from thermo.hilbert.jit import fast_kernel, prefetch
 from thermo.hilbert.sparse import SparseLinks
 
 # Columns of a tile. The kernel below is written out for it: eight lanes stay in registers.
 WIDTH = 8
 # Rows whose contributions to a sum are added up before they meet the others'.
 CHUNK = 1024
+# Links between asking for a row and using it: a row beyond the cache takes as long to come.
+AHEAD = 16
 # A residual vector this much shorter than H's scale is rounding: the Krylov space is complete.
 EXHAUSTED = 1e-13
 
@@ -48,6 +50,7 @@ def _multiply(start, target, code, diagonal, F, scale, back, V, U, lo, hi):
     m4, m5, m6, m7 = scale[4], scale[5], scale[6], scale[7]
     n0, n1, n2, n3 = back[0], back[1], back[2], back[3]
     n4, n5, n6, n7 = back[4], back[5], back[6], back[7]
+    last = target.shape[0] - 1
     for row in range(lo, hi):
         # Unsigned indices need no test for counting from the end.
         r = np.uintp(row)
@@ -61,6 +64,9 @@ def _multiply(start, target, code, diagonal, F, scale, back, V, U, lo, hi):
         x6, y6 = d * V[r, 6], d * V[r, 14]
         x7, y7 = d * V[r, 7], d * V[r, 15]
         for p in range(start[row], start[row + 1]):
+            ahead = np.uintp(target[min(p + AHEAD, last)])
+            prefetch(V, ahead, 0)
+            prefetch(V, ahead, WIDTH)
             t, g = np.uintp(target[p]), np.uintp(code[p])
             c0, s0, a0, b0 = F[g, 0], F[g, 8], V[t, 0], V[t, 8]
             c1, s1, a1, b1 = F[g, 1], F[g, 9], V[t, 1], V[t, 9]

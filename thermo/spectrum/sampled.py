@@ -27,11 +27,12 @@ from thermo.model.spin_model import SpinModel
 from thermo.spectrum import sampling_plan
 from thermo.spectrum.full import FullSolver, energy_bounds
 from thermo.spectrum.harvest import harvest, ritz_pairs
-from thermo.spectrum.moments import exact_moments
+from thermo.spectrum.moments import exact_moments, orbit_images
 from thermo.spectrum.sampling_plan import family_size
 from thermo.spectrum.settings import Settings
 from thermo.spectrum.tasks import run_tasks
 from thermo.spectrum.threads import thread_count
+from thermo.symmetry.automorphisms import automorphism_group, colour_matrix
 from thermo.symmetry.sectors import MagneticSector, Sector
 
 Arrays = dict[str, NDArray[Any]]
@@ -91,6 +92,7 @@ class SampledSolver:
         self.kinds = sparse.amplitude_kinds(self._full.moves)
         low, high = energy_bounds(scaled)
         self.center, self.half_width = 0.5 * (low + high), 0.5 * (high - low) or 1.0
+        self.generators = automorphism_group(colour_matrix(self.plan.terms)).generators
         self._lock = threading.Lock()
         self._shared: tuple[int, _Shared] | None = None
 
@@ -129,7 +131,8 @@ class SampledSolver:
                         key = f"{name}/tile/{family}/{index}"
                         label = f"{name}, vectors {family + 1}.{index + 1}"
                         found.append(Piece(key, label, cost, "tile", k, family, index))
-                walk = sampling_plan.trace_seconds(self.plan, magnetic, self.settings.trace_order)
+                order = _given(self.settings.trace_order)
+                walk = sampling_plan.trace_seconds(self.plan, magnetic, order)
                 # Whoever is first at an M finds its links.
                 walk += sampling_plan.build_seconds(self.plan, magnetic)
                 found.append(Piece(f"{name}/traces", f"{name}, traces", walk, "traces", k))
@@ -186,9 +189,14 @@ class SampledSolver:
         return _Shared(orbits, structure, np.flatnonzero(orbits.stabiliser > 1))
 
     def _solve_traces(self, magnetic: MagneticSector, shared: _Shared) -> Arrays:
+        # Symmetries that split no sector still save walks.
+        images = orbit_images(
+            self._full.encoding, shared.orbits, magnetic.elements, self.generators
+        )
         moments = exact_moments(
             self._full.encoding, shared.orbits, magnetic.elements.order, self._full.moves,
-            self.tables, self.center, self.half_width, self.settings.trace_order, self.threads,
+            self.tables, self.center, self.half_width, _given(self.settings.trace_order),
+            self.threads, images,
         )  # fmt: skip
         return {"moments": moments}
 
@@ -245,7 +253,7 @@ class SampledSolver:
         group_of: list[NDArray[np.int64]] = []
         unit_of: list[NDArray[np.int64]] = []
         unit_sector: list[int] = []
-        moments = np.zeros((len(self.plan.magnetic), self.settings.trace_order + 1))
+        moments = np.zeros((len(self.plan.magnetic), _given(self.settings.trace_order) + 1))
         number = 0
 
         def add(e: Any, w: Any, sector: int, group: int, unit: int) -> None:

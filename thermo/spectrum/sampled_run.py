@@ -94,7 +94,7 @@ def solve_sampled(
         "steps": settings.steps,
         "full_below": settings.full_below or 0,
         "exact_states": -1 if settings.exact_states is None else settings.exact_states,
-        "trace_order": settings.trace_order,
+        "trace_order": settings.trace_order or 0,
     }
     if settings.accuracy is not None:
         attrs |= {"accuracy_wanted": settings.accuracy, "accuracy_reached": reached}

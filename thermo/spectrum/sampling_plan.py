@@ -7,6 +7,7 @@ command gives the same levels everywhere.
 from __future__ import annotations
 
 import functools
+import math
 import time
 from dataclasses import dataclass, replace
 
@@ -18,7 +19,7 @@ from thermo.hilbert import tile
 from thermo.hilbert.sparse import SparseLinks
 from thermo.spectrum import planning
 from thermo.spectrum.memory import size_text
-from thermo.spectrum.settings import Settings
+from thermo.spectrum.settings import LARGEST_TRACE_ORDER, Settings
 from thermo.symmetry.sectors import MagneticSector, SymmetryPlan
 
 # Vectors of a sector that travel together and know their overlaps; more come in such families.
@@ -28,14 +29,16 @@ SMALLEST_SAMPLED = 400
 # Larger ones too, while all of them cost no more than this share of the sampling.
 FULL_SHARE = 0.25
 LARGEST_FULL = 4000
+# The traces may cost this much of what the vectors do.
+TRACE_SHARE = 1.5
 
 # Seconds on the machine these were measured on (tests/bench/), one thread: per link, column and
 # step in the cache and beyond it; per row, column and vector of a family; per link found and
-# symmetry element; per row and squared links of a local walk; per tridiagonal matrix of 100
+# symmetry element; per link of a local walk; per tridiagonal matrix of 100
 # steps; to begin.
 _LINK, _FAR_LINK, _ROW = 0.8e-9, 1.6e-9, 0.8e-9
 _CACHE_BYTES = 16 * 2**20
-_FIND, _WALK, _RITZ, _BEGIN = 5.0e-9, 6.0e-8, 1.0e-3, 0.3
+_FIND, _WALK, _RITZ, _BEGIN = 5.0e-9, 8.0e-9, 1.0e-3, 0.3
 _PROBE_SECONDS = 0.0115
 
 
@@ -96,15 +99,16 @@ def _moving_share(dimension: NDArray[np.int64], a: int, b: int, magnetic: Magnet
 
 
 def complete(plan: SymmetryPlan, settings: Settings) -> Settings:
-    """The settings with the number of vectors and ``full_below`` filled in.
+    """The settings with vectors, ``full_below`` and ``trace_order`` filled in.
 
     Two vectors, or where the largest M has so few sectors that a tile would stay empty, as many
     as fill it. Sectors are solved fully while all that are cost less than a share of the rest.
+    The order of the traces is six, or less where they cost more than the vectors.
     """
     below = settings.full_below
     if below is None:
         below = SMALLEST_SAMPLED
-        probe = replace(settings, full_below=below, vectors=settings.vectors or 2)
+        probe = replace(settings, full_below=below, vectors=settings.vectors or 2, trace_order=0)
         budget = FULL_SHARE * _reference_seconds(plan, probe)
         costs: dict[int, float] = {}
         for s in plan.sectors:
@@ -122,7 +126,18 @@ def complete(plan: SymmetryPlan, settings: Settings) -> Settings:
     if vectors is None:
         most = max(sum(s.dimension > below for s in m.sectors) for m in plan.magnetic)
         vectors = 8 if most == 1 else 4 if most in (2, 3) else 2
-    return replace(settings, vectors=vectors, full_below=below)
+    done = replace(
+        settings, vectors=vectors, full_below=below, trace_order=settings.trace_order or 0
+    )
+    if settings.trace_order is not None:
+        return done
+    # Two orders more cost one more application of H to every walk.
+    sampling = _reference_seconds(plan, done)
+    magnetic = sampled_magnetic(plan, done)
+    for order in range(LARGEST_TRACE_ORDER, 0, -2):
+        if sum(trace_seconds(plan, m, order) for m in magnetic) <= TRACE_SHARE * sampling:
+            return replace(done, trace_order=order)
+    return done
 
 
 @dataclass(frozen=True)
@@ -207,9 +222,18 @@ def build_seconds(plan: SymmetryPlan, magnetic: MagneticSector) -> float:
 
 
 def trace_seconds(plan: SymmetryPlan, magnetic: MagneticSector, order: int) -> float:
-    """Exact traces of one M; the walks merge, so that they grow as links squared at most."""
-    share = (0.0, 0.02, 0.15, 1.0)[(order + 1) // 2]
-    return _WALK * magnetic.orbits * links_per_row(plan, magnetic) ** 2 * share
+    """Exact traces of one M: walks from one representative of all that symmetry joins.
+
+    With a moves per configuration, mostly of disjoint pairs, k of them in any order reach some
+    a^k/k! configurations.
+    """
+    a = links_per_row(plan, magnetic)
+    reached = links = 0.0
+    for k in range((order + 1) // 2):
+        reached = min(reached + a**k / math.factorial(k), float(magnetic.configurations))
+        links += a * reached
+    joined = max(1.0, 0.9 * plan.group_order / plan.abelian.order)
+    return _WALK * magnetic.orbits * links / joined
 
 
 def tile_seconds(plan: SymmetryPlan, magnetic: MagneticSector, family: int, steps: int) -> float:
@@ -231,7 +255,7 @@ def _reference_seconds(plan: SymmetryPlan, settings: Settings) -> float:
         if not sampled:
             continue
         tiles = -(-sampled // (tile.WIDTH // family)) * -(-vectors // family)
-        total += build_seconds(plan, m) + trace_seconds(plan, m, settings.trace_order)
+        total += build_seconds(plan, m) + trace_seconds(plan, m, settings.trace_order or 0)
         total += tiles * tile_seconds(plan, m, family, settings.steps)
         total += sampled * vectors * _RITZ * (settings.steps / 100) ** 2
     return total

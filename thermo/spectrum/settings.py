@@ -26,7 +26,8 @@ class Settings:
     steps: Lanczos steps per vector. seed: of all random vectors, with sector and vector.
     full_below: sectors up to this dimension are solved fully (None: what pays off; 0: none).
     exact_states: most exact states per sector at each edge (None: all that converge; 0: none).
-    trace_order: highest power of H whose exact trace the weights reproduce (0: none).
+    trace_order: highest power of H whose exact trace the weights reproduce (0: none; None: 6, or
+    less where traces would cost more than the vectors).
     accuracy: relative standard error to reach by adding vectors (None: as many as stated).
     """
 
@@ -35,7 +36,7 @@ class Settings:
     seed: int = 1
     full_below: int | None = None
     exact_states: int | None = None
-    trace_order: int = 6
+    trace_order: int | None = None
     accuracy: float | None = None
 
     def identity(self) -> dict[str, str | int | float]:
@@ -49,7 +50,7 @@ class Settings:
             "seed": self.seed,
             "full_below": "automatic" if self.full_below is None else self.full_below,
             "exact_states": "all" if self.exact_states is None else self.exact_states,
-            "trace_order": self.trace_order,
+            "trace_order": "automatic" if self.trace_order is None else self.trace_order,
         }
 
 
@@ -60,7 +61,7 @@ _RANGES: Mapping[str, tuple[int, int, bool, str]] = {
     "seed": (0, LARGEST_SEED, False, "the same seed gives the same levels"),
     "full_below": (0, LARGEST_DIMENSION, True, "0 samples every sector"),
     "exact_states": (0, LARGEST_COUNT, True, "0 takes none, leaving it out all that converge"),
-    "trace_order": (0, LARGEST_TRACE_ORDER, False, "0 leaves the weights as they are sampled"),
+    "trace_order": (0, LARGEST_TRACE_ORDER, True, "0 leaves the weights as they are sampled"),
 }
 
 
@@ -70,7 +71,7 @@ def check_sampling(
     seed: int = Settings.seed,
     full_below: int | None = Settings.full_below,
     exact_states: int | None = Settings.exact_states,
-    trace_order: int = Settings.trace_order,
+    trace_order: int | None = Settings.trace_order,
     accuracy: float | None = Settings.accuracy,
 ) -> Settings:
     """The settings, each checked; RangeError names the first that cannot be."""
