@@ -10,6 +10,7 @@ series through the order of the traces.
 
 from __future__ import annotations
 
+import functools
 from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING
 
@@ -142,11 +143,20 @@ def chebyshev_values(x: Array, highest: int) -> Array:
 
 def chebyshev_moments(moments: Array) -> Array:
     """Traces of T_k(x) from those of xᵏ, along the last axis."""
-    n = moments.shape[-1]
-    powers = np.zeros((n, n))
+    return np.asarray(moments @ _coefficients(moments.shape[-1]).T)
+
+
+@functools.cache
+def _coefficients(n: int) -> Array:
+    """Row k: T_k in powers of x, from T_k = 2x T_{k−1} − T_{k−2}."""
+    table = np.zeros((n, n))
     for k in range(n):
-        powers[k, : k + 1] = chebyshev.cheb2poly(np.eye(n)[k])[: k + 1]
-    return np.asarray(moments @ powers.T)
+        if k < 2:
+            table[k, k] = 1
+        else:
+            table[k, 1:] = 2 * table[k - 1, :-1]
+            table[k] -= table[k - 2]
+    return table
 
 
 def calibrated_table(table: LevelTable, sampling: Sampling) -> LevelTable:
