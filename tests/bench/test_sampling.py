@@ -170,3 +170,78 @@ def test_ring_of_28_is_complete_in_an_hour_and_8_gib() -> None:
 def test_square_of_24_is_complete() -> None:
     mapping = "lattice_mapping('square', [6, 4])"
     complete(mapping, "lattice_mapping('square', [4, 3])", "lattice_mapping")
+
+
+ONE_SECTOR = """
+import functools, time
+import thermo
+from tests.bench.measure import ring_mapping
+from thermo.spectrum import sampled, sampling_plan
+from thermo.spectrum.executors import Local, run_pieces
+from thermo.spectrum.settings import Settings
+from thermo.spectrum.threads import blas_threads, thread_count
+from thermo.symmetry.sectors import plan_symmetry
+thermo.solve(thermo.read_model(ring_mapping(12)), method='sampled', full_below=0)
+model = thermo.read_model(ring_mapping({sites}))
+plan = plan_symmetry(model, use_total_spin=False)
+settings = sampling_plan.complete(plan, Settings(steps={steps}))
+cost = sampling_plan.cost(plan, settings, {limit} * 2**30, thread_count())
+solver = sampled.SampledSolver(model, settings, cost.threads)
+middle = next(k for k, m in enumerate(solver.plan.magnetic) if m.twice_m == {twice_m})
+pieces = [p for p in solver.pieces() if p.magnetic == middle][:{most}]
+start = time.perf_counter()
+with blas_threads(1):
+    found = run_pieces(
+        pieces, functools.partial(sampled.solve_piece, model, settings, cost.threads),
+        executor=Local(), workers=cost.at_once,
+    )
+seconds = time.perf_counter() - start
+share = sum(p.cost for p in pieces) / sum(p.cost for p in solver.pieces())
+magnetic = solver.plan.magnetic[middle]
+lowest = 0.0
+if {most} > 10:
+    for k, families in solver.ritz(magnetic, found):
+        for family in families:
+            lowest = min(lowest, min(r.value[0] for r in family))
+result = dict(
+    seconds=seconds, all=seconds / share, planned=cost.memory_bytes, energy=float(lowest),
+    orbits=magnetic.orbits, states=magnetic.configurations, pieces=len(pieces),
+    columns=sum(len(t) for t in solver.tiles(magnetic)) * solver.family,
+)
+"""
+
+
+def test_ring_of_30_has_one_complete_sector() -> None:
+    """All characters of M = 0 at 30 sites, two vectors each, and what all M would take."""
+    found = in_own_process(ONE_SECTOR.format(sites=30, steps=150, limit=8, twice_m=0, most=10**6))
+    print(
+        f"\n30 sites, M = 0: {found['orbits']} orbits, {found['pieces']} pieces in "
+        f"{found['seconds']:.0f} s with {found['peak'] / 2**20:.0f} MiB; all M would take "
+        f"{found['all'] / 60:.0f} min and {found['planned'] / 2**20:.0f} MiB; "
+        f"E0 = {found['energy']:.9f}"
+    )
+    assert found["peak"] < 8 * 2**30
+
+
+def test_cost_per_state_and_bond_is_flat() -> None:
+    """One tile of M = 0 from 20 to 28 sites: seconds per column, step, state and bond."""
+    flat = []
+    for sites in range(20, 29, 2):
+        found = in_own_process(ONE_SECTOR.format(sites=sites, steps=60, limit=8, twice_m=0, most=1))
+        per = found["seconds"] / (60 * tile.WIDTH * found["orbits"] * sites)
+        flat.append(per)
+        print(
+            f"\n{sites} sites: {found['orbits']} orbits, one tile of 60 steps (links found too) in "
+            f"{found['seconds']:.2f} s: {per * 1e9:.3f} ns per column, step, orbit and bond"
+        )
+    print(f"largest over smallest {max(flat) / min(flat):.2f}")
+
+
+def test_accuracy_of_the_ring_of_24() -> None:
+    """What two vectors leave of noise at 24 sites, by their own error bars."""
+    levels = thermo.solve(thermo.read_model(ring_mapping(24)), method="sampled")
+    curves = thermo.curves(levels, temperature=[0.05, *TEMPERATURES])
+    for name in ("specific_heat", "susceptibility"):
+        relative = 100 * curves[name + "_standard_error"] / curves[name]
+        print(f"\n{name}: " + ", ".join(f"{float(e):.2g} %" for e in relative[:, 0]))
+        assert float(relative.max()) < 3

@@ -112,7 +112,8 @@ class SampledSolver:
         """Vectors per sector: families are never split."""
         return self.families * self.family
 
-    def _tiles(self, magnetic: MagneticSector) -> list[list[Sector]]:
+    def tiles(self, magnetic: MagneticSector) -> list[list[Sector]]:
+        """The sectors of one M that share a tile."""
         chosen = self.sampled_sectors(magnetic)
         per_tile = tile.WIDTH // self.family
         return [chosen[k : k + per_tile] for k in range(0, len(chosen), per_tile)]
@@ -127,7 +128,7 @@ class SampledSolver:
             if sampled:
                 cost = sampling_plan.tile_seconds(self.plan, magnetic, self.family, steps)
                 for family in range(self.families):
-                    for index in range(len(self._tiles(magnetic))):
+                    for index in range(len(self.tiles(magnetic))):
                         key = f"{name}/tile/{family}/{index}"
                         label = f"{name}, vectors {family + 1}.{index + 1}"
                         found.append(Piece(key, label, cost, "tile", k, family, index))
@@ -202,7 +203,7 @@ class SampledSolver:
 
     def _solve_tile(self, magnetic: MagneticSector, shared: _Shared, piece: Piece) -> Arrays:
         size = self.family
-        sectors = self._tiles(magnetic)[piece.index]
+        sectors = self.tiles(magnetic)[piece.index]
         elements = magnetic.elements
         identity = np.zeros(elements.order, dtype=np.int64)
         columns = [s for s in sectors for _ in range(size)]
@@ -266,7 +267,7 @@ class SampledSolver:
             name = self._name(magnetic)
             mirror = 2.0 if magnetic.sectors[0].mirrored else 1.0
             small = results.get(f"{name}/full", {})
-            ritz = dict(self._ritz(magnetic, results))
+            ritz = dict(self.ritz(magnetic, results))
             for k, sector in enumerate(magnetic.sectors):
                 if str(k) in small:
                     e = small[str(k)]
@@ -309,14 +310,14 @@ class SampledSolver:
         calibrated = calibrated_table(table, sampling)
         return calibrated.scaled(self.unit), np.concatenate(sector_of)[order]
 
-    def _ritz(
+    def ritz(
         self, magnetic: MagneticSector, results: Mapping[str, Arrays]
     ) -> Iterator[tuple[int, list[list[Any]]]]:
         """For each sampled sector of an M, its index there and the Ritz pairs by family."""
         size = self.family
         name = self._name(magnetic)
         place = {id(s): k for k, s in enumerate(magnetic.sectors)}
-        for index, sectors in enumerate(self._tiles(magnetic)):
+        for index, sectors in enumerate(self.tiles(magnetic)):
             for position, sector in enumerate(sectors):
                 families = []
                 for family in range(self.families):
