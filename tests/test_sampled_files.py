@@ -159,6 +159,7 @@ def test_every_curve_has_its_error_in_its_units(levels):
         assert curves[name].attrs["ancillary_variables"] == beside.name
         assert beside.attrs["units"] == curves[name].attrs["units"]
         assert np.all(beside >= 0)
+    assert np.all(curves.magnetization_standard_error.sel(field=0) == 0)  # by symmetry
     per_site = units.GAS_CONSTANT / 8
     np.testing.assert_allclose(
         curves.specific_heat_standard_error, error.specific_heat * per_site, rtol=1e-9

@@ -362,13 +362,15 @@ def _totals(
         z += q.sum(axis=1) * full[0]
         energy += q.sum(axis=1) * full[1] + (q @ offset) * full[0]
         moment += (q @ group.m) * full[0]
-    mean, m = energy / z, moment / z
+    # Without a field ⟨M⟩ vanishes in every replicate, and rounding must not say otherwise.
+    mean, m = energy / z, moment / z if h else np.zeros(len(t))
     spread, m_spread = np.zeros(len(t)), np.zeros(len(t))
     states: list[tuple[Array, ...]] = []
     for group, (full, _), q, offset in zip(groups, sums, weights, offsets, strict=True):
         o, d = offset - mean[:, None], group.m - m[:, None]
         a0, a1, a2 = q.sum(axis=1), (q * o).sum(axis=1), (q * o**2).sum(axis=1)
-        b1, b2 = (q * d).sum(axis=1), (q * d**2).sum(axis=1)
+        b1 = (q * d).sum(axis=1) if h else np.zeros(len(t))
+        b2 = (q * d**2).sum(axis=1)
         spread += a0 * full[2] + 2 * a1 * full[1] + a2 * full[0]
         m_spread += b2 * full[0]
         states.append((a0, a1, a2, b1, b2))
