@@ -54,4 +54,6 @@ def print_comparison(comparison: xr.Dataset, console: Console | None = None) -> 
 
 
 def _number(value: float) -> str:
-    return "" if math.isnan(value) else plain(value, 3)
+    if math.isnan(value):
+        return ""
+    return f"{value:.0f}" if value >= 100 else plain(value, 3)
