@@ -5,6 +5,7 @@ from __future__ import annotations
 import io
 import math
 from dataclasses import replace
+from pathlib import Path
 
 import numpy as np
 import pytest
@@ -428,3 +429,17 @@ def test_an_unknown_candidate_is_told(tmp_path):
     found = compare(rival_study(tmp_path, T, dimer_chi(T, 60.0, 2.1), error, ("dimer",)))
     with pytest.raises(StudyError, match="no candidate 'timer'; did you mean 'dimer'"):
         found["timer"]
+
+
+def test_the_demo_of_rivals_says_what_its_readme_says():
+    """Undecided above 40 K, with the uniform chain ruled out and something to measure next."""
+    demo = Path(__file__).parents[1] / "data_demo"
+    assert "invented" in (demo / "rivals.toml").read_text()
+    found = compare(demo / "rivals.toml")
+    assert found.conclusion == "undecided"
+    assert {c.name for c in found.standing} == {"ladder", "alternating chain"}
+    assert "Ruled out: 'uniform chain'" in found.verdict
+    assert [p.instrument.name for p in found.proposals] == ["calorimeter", "magnetometer"]
+    readme = " ".join((demo.parent / "README.md").read_text().split())
+    assert found.verdict in readme
+    assert str(found.proposals[0])[:60] in readme
