@@ -71,21 +71,21 @@ def test_units_of_vectors_and_groups_of_m_come_back(levels):
     np.testing.assert_array_equal(number[sampling.group], levels["magnetic_number"].values)
 
 
-def test_groups_may_be_given_where_m_is_not_conserved(levels):
-    """Then no magnetic number tells them apart."""
-    of_sector = np.searchsorted(
-        levels["trace_magnetic_number"].values, levels["sector_magnetic_number"].values
-    )
-    given = levels.assign(
-        sector_trace_group=("block", of_sector.astype("i4")),
+def test_groups_come_back_where_m_is_not_conserved(levels):
+    """No magnetic number tells them apart then; their numbers of states do."""
+    unnamed = levels.assign(
         trace_magnetic_number=("trace_group", np.full(levels.sizes["trace_group"], np.nan)),
         sector_magnetic_number=("block", np.full(levels.sizes["block"], np.nan)),
     )
     np.testing.assert_array_equal(
-        table_from_dataset(given).sampling.group, table_from_dataset(levels).sampling.group
+        table_from_dataset(unnamed).sampling.group, table_from_dataset(levels).sampling.group
     )
+    wrong = changed(unnamed, "trace", lambda t: t.__setitem__((0, 0), t[0, 0] + 1))
     with pytest.raises(FileFormatError, match="do not fit together"):
-        table_from_dataset(given.drop_vars("sector_trace_group"))
+        table_from_dataset(wrong)
+    mixed = levels.assign(trace_magnetic_number=unnamed["trace_magnetic_number"])
+    with pytest.raises(FileFormatError, match="do not fit together"):
+        table_from_dataset(mixed)
 
 
 @pytest.mark.parametrize(

@@ -56,8 +56,6 @@ _LEVELS = (
     # Of sampled levels only:
     _v("raw_weight", "level", "f8", "1", "number of states before the weights were calibrated",
        required=False, note="equal to weight for an exact level"),
-    _v("sector_trace_group", "block", "i4", "1", "index along trace_group of the sector's group",
-       required=False),
     _v("trace_magnetic_number", "trace_group", "f8", "1",
        "absolute magnetic quantum number |M| of the group's states", finite=False, required=False,
        note="missing where it is not conserved"),

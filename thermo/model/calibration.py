@@ -234,18 +234,19 @@ def sampling_from_dataset(levels: xr.Dataset) -> Sampling | None:
 
 def _group_of_sector(levels: xr.Dataset) -> Integers:
     number = levels["trace_magnetic_number"].values
-    if "sector_trace_group" in levels:
-        given: Integers = np.asarray(levels["sector_trace_group"].values, dtype=np.int64)
-        if np.all((given >= 0) & (given < len(number))):
-            return given
-    else:
-        # By |M|; where it is not conserved there can be one group only.
-        own = np.abs(levels["sector_magnetic_number"].values)
-        if len(number) == 1 and np.all(np.isnan(own) == np.isnan(number[0])):
-            return np.zeros(len(own), dtype=np.int64)
+    own = np.abs(levels["sector_magnetic_number"].values)
+    if not np.any(np.isnan(own)):
         same = own[:, None] == number
         if np.all(same.sum(axis=1) == 1):
             return np.asarray(np.argmax(same, axis=1), dtype=np.int64)
+    elif np.all(np.isnan(own)) and np.all(np.isnan(number)):
+        # Nothing conserved tells groups apart, but sectors are listed group by group, and the
+        # trace of order 0 is a group's number of states.
+        states = levels["sector_dimension"].values * levels["sector_multiplicity"].values
+        last = np.rint(np.cumsum(levels["trace"].values[:, 0]))
+        end = np.rint(np.cumsum(states))
+        if np.all(np.isin(last, end)) and last[-1] == end[-1]:
+            return np.asarray(np.searchsorted(last, end), dtype=np.int64)
     raise FileFormatError(
         "the sectors of the sampled levels and their groups of traces do not fit together; "
         "solve the model again"
