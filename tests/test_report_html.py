@@ -18,6 +18,7 @@ from tests.rivals import network, parameters, rival_study
 from thermo.errors import FileFormatError, UnavailableError
 from thermo.report import export_latex, html_report
 from thermo.report.conversions import forms
+from thermo.report.html_tables import between
 from thermo.report.latex import escape, number
 
 VOID = {"meta", "img", "br", "link", "hr", "input"}
@@ -344,3 +345,20 @@ g = { lower = 1.5 }
         assert words in done.stderr
         assert len(done.stderr.strip().splitlines()) == 1
         assert not list(tmp_path.glob("x.*"))
+
+
+@pytest.mark.parametrize(
+    ("low", "high", "text"),
+    [
+        (123.238, 131.12, "123.2 to 131.1"),
+        (-3.6745e-5, 1.7578e-5, "(\u22123.7 to 1.8)×10⁻⁵"),
+        (0.0, 0.062289, "0 to 0.062"),
+        (0.0085573, 0.049632, "0.009 to 0.050"),
+        (2.0018, 2.0021, "2.00180 to 2.00210"),
+        (float("nan"), 2.1, "? to 2.1"),
+        (-np.inf, 150.0, "\u2212∞ to 150"),
+        (0.0, 0.0, "0 to 0"),
+    ],
+)
+def test_intervals_to_two_digits_of_their_width(low, high, text):
+    assert between(low, high) == text

@@ -29,14 +29,15 @@ from __future__ import annotations
 import math
 import os
 from collections.abc import Callable, Mapping, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING
 
 import numpy as np
 
 from thermo.errors import RangeError, StudyError
-from thermo.fit import full_solver, single_fit
+from thermo.fit import PROFILES, full_solver, single_fit
 from thermo.fit.next_point import Instrument, Proposal, from_data, propose, read_instruments
+from thermo.fit.profiles import add_profiles
 from thermo.fit.residual_tests import FEW_RUNS, UNLIKELY, along, chance, durbin_watson, noticed_runs
 from thermo.fit.result import FitResult
 from thermo.fit.starts import FURTHER_STARTS
@@ -228,15 +229,19 @@ def compare(
     progress: Progress | None = None,
     memory: int | float | str | None = None,
     starts: int = FURTHER_STARTS,
+    profiles: str = "auto",
 ) -> Comparison:
     """Fit every candidate of a study to the same points and say what the data decide.
 
-    ``progress``, ``memory`` and ``starts`` as for ``fit``. Cost: one or two fits for each
-    candidate, and two diagonalisations for each left standing.
+    ``progress``, ``memory``, ``starts`` and ``profiles`` as for ``fit``, the last for candidates
+    left standing. Cost: one or two fits for each candidate, and for each left standing two
+    diagonalisations and its profiles.
     Raises what ``fit`` raises, with the candidate's name.
     """
     if isinstance(starts, bool) or not isinstance(starts, int) or not 0 <= starts <= 1000:
         raise RangeError(f"starts = {starts!r} must be a whole number from 0 to 1000")
+    if profiles not in PROFILES:
+        raise RangeError(f"profiles = {profiles!r} is unknown; use {', '.join(PROFILES)}")
     rivals = source if isinstance(source, Rivals) else read_rivals(source)
     count = len(rivals.names)
     solvers = [full_solver(study, memory) for study in rivals.studies]
@@ -254,6 +259,12 @@ def compare(
     results, cautions = cut_alike(rivals.names, rivals.studies, alone, fits)
     ranked = _ranked(rivals.names, results)
     candidates, conclusion, verdict = conclude(ranked)
+    candidates = [
+        replace(c, result=add_profiles(c.result, profiles, told(rivals.names.index(c.name))))
+        if c.standing
+        else c
+        for c in candidates
+    ]
     standing = [c for c in candidates if c.standing]
     proposals: tuple[Proposal, ...] = ()
     if conclusion == "undecided":

@@ -7,6 +7,7 @@ import math
 import numpy as np
 import xarray as xr
 
+from thermo.numbers import SUPERSCRIPTS
 from thermo.report.conversions import coupling_kinds, forms
 from thermo.report.export import flag_word
 from thermo.report.html_parts import Cell, paragraph, table
@@ -151,10 +152,30 @@ def parameters(fit: xr.Dataset) -> str:
 def _interval(fit: xr.Dataset, n: int, level: int) -> str:
     """A profile interval; "" where it was not looked for."""
     low, high = (float(fit[f"{end}_{level}"][n]) for end in ("lower", "upper"))
-    if math.isnan(low) and math.isnan(high):
-        return ""
-    ends = ["?" if math.isnan(x) else plain(x, 5).translate(MINUS) for x in (low, high)]
-    return f"{ends[0]} to {ends[1]}"
+    return "" if math.isnan(low) and math.isnan(high) else between(low, high)
+
+
+def between(low: float, high: float) -> str:
+    """An interval to two digits of its width; "?" for an end not found, ∞ for none."""
+    known = [abs(x) for x in (low, high) if math.isfinite(x)]
+    largest = max(known, default=0.0)
+    width = high - low if len(known) == 2 and high > low else largest
+    if largest == 0 or width == 0:
+        return " to ".join(_end(x, 0) for x in (low, high))
+    top = math.floor(math.log10(largest))
+    power = top if top < -3 or top > 5 else 0
+    places = max(power - math.floor(math.log10(width)) + 1, 0)
+    text = " to ".join(_end(x / 10.0**power, places) for x in (low, high))
+    return f"({text})×10{str(power).translate(SUPERSCRIPTS)}" if power else text
+
+
+def _end(value: float, places: int) -> str:
+    if math.isnan(value):
+        return "?"
+    if math.isinf(value):
+        return "\u221e" if value > 0 else "\u2212\u221e"
+    text = f"{value:.{places}f}"
+    return ("0" if not float(text) else text).translate(MINUS)
 
 
 def _bounds(fit: xr.Dataset, n: int) -> str:
