@@ -30,6 +30,7 @@ def fit(
     starts: int = FURTHER_STARTS,
     cache: str | os.PathLike[str] | None = None,
     profiles: str = "auto",
+    method: str = "full",
 ) -> FitResult:
     """Fit a study: a ``Study``, or what ``read_study`` takes.
 
@@ -41,6 +42,8 @@ def fit(
     folder that keeps every spectrum found, for this fit and later ones of the same cluster.
     ``profiles`` says which parameters get profile intervals: "auto" (those the study asks for, and
     where it takes little time those near a bound or strongly correlated), "asked", "all", "none".
+    ``method`` "sampled" is for clusters too large to diagonalise: random vectors, the same ones at
+    every step, slopes by differences (see ``thermo.fit.sampled_levels``).
 
     A periodic cluster that is not ``finite`` is held against another size of its lattice, and by
     default (``window`` of the study) data sets without a stated range are fitted only above the
@@ -59,7 +62,13 @@ def fit(
         raise RangeError(f"starts = {starts!r} must be a whole number from 0 to 1000")
     if profiles not in PROFILES:
         raise RangeError(f"profiles = {profiles!r} is unknown; use {', '.join(PROFILES)}")
+    if method not in ("full", "sampled"):
+        raise RangeError(f"method = {method!r} is unknown; use 'full' or 'sampled'")
     study = study if isinstance(study, Study) else read_study(study)
+    if method == "sampled" and solver is None:
+        from thermo.fit.sampled_levels import SampledLevels
+
+        solver = SampledLevels(study.model, memory=memory)
     if solver is not None:  # whose levels no other cluster is known to share
         found = _fit_once(study, solver, progress, starts, cache)
         return add_profiles(replace(found, window=without_edge(study)), profiles, progress)

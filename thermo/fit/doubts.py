@@ -12,6 +12,7 @@ from thermo.fit.measured import Measured
 from thermo.fit.parameters import Parameters, Values
 from thermo.fit.residual_tests import FEW_RUNS
 from thermo.fit.roles import CHI0, FRACTION, INTERCLUSTER
+from thermo.fit.spectra import SpectrumCache
 from thermo.model.spin_model import SpinModel
 from thermo.numbers import plain
 
@@ -26,6 +27,21 @@ STRONG_FIELD = 0.3
 PULLED = 3.0
 # More outliers than this are not named one by one.
 SHOWN = 3
+
+
+def of_solver(cache: SpectrumCache) -> list[str]:
+    """What the way the levels were found leaves out of the errors."""
+    if getattr(cache.solver, "method", "full") == "sampled":
+        return [
+            "the levels are sampled: the standard errors leave out what the random vectors leave "
+            "open; fit again with another seed, or more vectors, to see it"
+        ]
+    if hasattr(cache.solver, "sloped") and not cache.exact:
+        return [
+            "eigenvectors of the cluster exceed the memory limit: slopes were taken by differences, "
+            "at two more spectra for each independent coupling and step"
+        ]
+    return []
 
 
 def of_surroundings(

@@ -13,7 +13,7 @@ from numpy.typing import ArrayLike, NDArray
 
 from thermo.errors import RangeError, StudyError
 from thermo.fit.cautions import find_cautions
-from thermo.fit.doubts import of_residuals, of_surroundings
+from thermo.fit.doubts import of_residuals, of_solver, of_surroundings
 from thermo.fit.forward import Forward, Points
 from thermo.fit.measured import QUANTITIES, Measured
 from thermo.fit.minimise import Minimum
@@ -312,7 +312,7 @@ class FitResult:
             "model_digest": model.digest,
             "model_couplings": json.dumps(dict(self.couplings)),
             "study_text": self.study.text,
-            "method": "full",
+            "method": str(getattr(self.forward.cache.solver, "method", "full")),
             "error_basis": self.error_basis,
             "message": self.message,
             "cautions": "\n".join(self.cautions),
@@ -413,7 +413,8 @@ def _doubts(
     study: Study, problem: Problem, values: Values, sets: list[SetResult]
 ) -> tuple[str, ...]:
     found = [problem.forward.evaluate(points, values, slopes=False) for points in problem.sets]
-    told = of_surroundings(study.model, study.parameters, values, study.sets, found)
+    told = of_solver(problem.forward.cache)
+    told += of_surroundings(study.model, study.parameters, values, study.sets, found)
     for item in sets:
         scores = item.residual / np.where(item.uncertainty > 0, item.uncertainty, 1.0)
         # What rounding leaves of exact points is no trend.
