@@ -114,7 +114,8 @@ def test_exact_slopes_take_a_fraction_of_the_solves_and_of_the_time(tmp_path):
                             ("one-sided, kept", "2-point", True),
                             ("two-sided, plain", "3-point", False),
                             ("two-sided, kept", "3-point", True)):  # fmt: skip
-        seconds, solves, end = by_differences(found, jac, keep)
+        tries = [by_differences(found, jac, keep) for _ in range(3)]
+        seconds, solves, end = min(tries, key=lambda t: t[0])
         rows[name] = solves / result.n_solves, seconds / ours
         print(
             f"differences, {name}: {seconds:.2f} s, {solves} solves; "

@@ -38,8 +38,8 @@ def of_solver(cache: SpectrumCache) -> list[str]:
         ]
     if hasattr(cache.solver, "sloped") and not cache.exact:
         return [
-            "eigenvectors of the cluster exceed the memory limit: slopes were taken by differences, "
-            "at two more spectra for each independent coupling and step"
+            "eigenvectors of the cluster exceed the memory limit: slopes were taken by "
+            "differences, at two more spectra for each independent coupling and step"
         ]
     return []
 

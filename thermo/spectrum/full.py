@@ -141,8 +141,8 @@ class FullSolver:
     ) -> SlopedLevels:
         """The checked levels with their slopes by every coupling, for generic solvers.
 
-        Cost: 5 to 10 times that of the levels alone for large blocks (eigenvectors), one and a
-        half to 3 times for small ones. Raises MemoryLimitError where the eigenvectors do not fit.
+        Cost: one and a half (small blocks) to 3 times (large ones) that of the levels alone, and
+        the memory of three blocks in place of one, for the eigenvectors. Raises MemoryLimitError where the eigenvectors do not fit.
         """
         if not self._generic:
             raise UnavailableError("slopes by the couplings need a solver with generic symmetries")
