@@ -121,6 +121,21 @@ def test_without_uncertainties_the_scatter_is_one_parameter_more(tmp_path):
     assert found.conclusion == "undecided"
 
 
+def test_a_prior_counts_as_one_more_point(tmp_path):
+    error = 0.01 * dimer_chi(T, 60.0, 2.1)
+    content = dimer_study(tmp_path, noisy(dimer_chi(T, 60.0, 2.1), error, 3), error)
+    for entry in content["candidate"]:
+        entry["parameters"]["g"] = {"prior": [2.0, 0.01]}
+    for c in compare(content, profiles="none").candidates:
+        pull = (c.result["g"].value - 2.0) / 0.01
+        assert abs(pull) > 1
+        badness = c.result.chi_square + pull**2
+        assert criteria(c.result)[1] == pytest.approx(
+            badness + c.n_parameters * math.log(61), rel=1e-9
+        )
+        assert c.probability == pytest.approx(chance(badness, 61 - c.n_parameters), rel=1e-6)
+
+
 # ---------------------------------------------------------------- verdicts
 
 

@@ -188,7 +188,7 @@ def test_forms_of_couplings():
     ("change", "words"),
     [
         ({"converged": 0}, "did not converge"),
-        ({"chi_square": 400.0}, "does not describe the data within their uncertainties"),
+        ({"reduced_chi_square": 4.0}, "does not describe the data within their uncertainties"),
         ({"dataset_runs": [-6.0, 0.0]}, "follow a trend"),
         ({"at_bound": [1, 0, 0, 0, 0]}, "at a bound"),
         ({}, "describes the data"),

@@ -164,7 +164,7 @@ _COMPARISON = (
     _v("candidate_name", "candidate", "str", None, "name of the candidate", label=True),
     _v("candidate_model", "candidate", "str", None, "title of its model"),
     _v("candidate_bond_term", "candidate", "str", None, "sign and factor of its couplings"),
-    _v("candidate_digest", "candidate", "str", None, "SHA-256 of its fitted Hamiltonian"),
+    _v("candidate_digest", "candidate", "str", None, "SHA-256 of the Hamiltonian in its file"),
     _v("candidate_remark", "candidate", "str", None, "what the comparison says of it"),
     _v("candidate_parameters", "candidate", "i4", "1", "number of free parameters"),
     _v("candidate_chi_square", "candidate", "f8", "1",

@@ -27,7 +27,7 @@ def comparison_dataset(comparison: Comparison) -> xr.Dataset:
         "candidate_name": [c.name for c in candidates],
         "candidate_model": [r.study.model.title for r in results],
         "candidate_bond_term": [r.study.model.bond_term for r in results],
-        "candidate_digest": [r.model.digest for r in results],
+        "candidate_digest": [r.study.model.digest for r in results],
         "candidate_remark": [c.remark for c in candidates],
         "candidate_parameters": [c.n_parameters for c in candidates],
         "candidate_chi_square": [r.chi_square for r in results],

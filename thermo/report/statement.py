@@ -33,7 +33,8 @@ def fit_statement(fit: xr.Dataset) -> tuple[str, str, str]:
             "The residuals show no trend, but without stated uncertainties χ² cannot test the "
             "model: the standard errors hold only if it is right.",
         )  # fmt: skip
-    chi, dof = float(fit["chi_square"]), int(fit["degrees_of_freedom"])
+    dof = int(fit["degrees_of_freedom"])
+    chi = whole_chi_square(fit)
     chance = chance_of(fit)
     size = f"χ² = {plain(chi, 4)} with {dof} degrees of freedom"
     if chance < UNLIKELY:
@@ -69,7 +70,13 @@ def chance_of(fit: xr.Dataset) -> float:
     dof = int(fit["degrees_of_freedom"])
     if by_scatter(fit) or dof <= 0:
         return math.nan
-    return float(chi2.sf(float(fit["chi_square"]), dof))
+    return float(chi2.sf(whole_chi_square(fit), dof))
+
+
+def whole_chi_square(fit: xr.Dataset) -> float:
+    """χ² with the priors' share, which the degrees of freedom count too."""
+    reduced, dof = float(fit["reduced_chi_square"]), int(fit["degrees_of_freedom"])
+    return reduced * dof if math.isfinite(reduced) else float(fit["chi_square"])
 
 
 def trending(fit: xr.Dataset) -> list[str]:
