@@ -38,12 +38,12 @@ from thermo.errors import RangeError, StudyError
 from thermo.fit import PROFILES, full_solver, single_fit
 from thermo.fit.next_point import Instrument, Proposal, from_data, propose, read_instruments
 from thermo.fit.profiles import add_profiles
-from thermo.fit.residual_tests import FEW_RUNS, UNLIKELY, along, chance, durbin_watson, noticed_runs
+from thermo.fit.residual_tests import FEW_RUNS, UNLIKELY, along, durbin_watson, noticed_runs
 from thermo.fit.result import FitResult
 from thermo.fit.starts import FURTHER_STARTS
 from thermo.fit.strict import Section, did_you_mean
 from thermo.fit.study import Content, Study, build_study, load_content
-from thermo.fit.trust import cut_alike, fit_in_window
+from thermo.fit.trust import chance_of, cut_alike, fit_in_window
 from thermo.fit.verdict import conclude
 from thermo.model import read_model
 
@@ -287,7 +287,6 @@ def _ranked(names: Sequence[str], results: Sequence[FitResult]) -> list[Candidat
     aicc, bic = zip(*(criteria(result) for result in results), strict=True)
     found = []
     for k, (name, result) in enumerate(zip(names, results, strict=True)):
-        weighted = result.error_basis == "stated"
         runs, watson = {}, {}
         for item in result.sets:
             order = along(item.data.temperature, item.data.field)
@@ -304,7 +303,7 @@ def _ranked(names: Sequence[str], results: Sequence[FitResult]) -> list[Candidat
                 bic[k] - min(bic),
                 _weights(aicc)[k],
                 _weights(bic)[k],
-                chance(result.chi_square, result.degrees_of_freedom) if weighted else math.nan,
+                chance_of(result),
                 runs,
                 watson,
             )
@@ -318,8 +317,12 @@ def criteria(result: FitResult) -> tuple[float, float]:
 
     AICc is NaN where there are too few points for its correction.
     """
-    n, k = result.n_points, len(result.free_names)
+    k = len(result.free_names)
+    # A prior counts as one more point, in χ² and among the degrees of freedom.
+    n = result.degrees_of_freedom + k
     badness = result.chi_square
+    if result.error_basis == "stated" and result.degrees_of_freedom > 0:
+        badness = result.reduced_chi_square * result.degrees_of_freedom
     if result.error_basis != "stated":
         k += 1
         squares = 0.0

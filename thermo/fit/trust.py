@@ -151,8 +151,7 @@ def cut_alike(
     StudyError where no points are left.
     """
     windows = [result.window or without_edge(s) for result, s in zip(results, studies, strict=True)]
-    alive = [not chance(r.chi_square, r.degrees_of_freedom) < HOPELESS or r.error_basis != "stated"
-             for r in results]  # fmt: skip
+    alive = [not chance_of(r) < HOPELESS for r in results]
     counted = [k for k, lives in enumerate(alive) if lives] or list(range(len(results)))
     cut, told = {}, []
     for data in studies[0].sets:
@@ -197,6 +196,12 @@ def cut_alike(
             )
         )
     return found, told
+
+
+def chance_of(result: FitResult) -> float:
+    """The probability of a χ², priors included, as large by chance; NaN where not known."""
+    dof = result.degrees_of_freedom
+    return chance(result.reduced_chi_square * dof, dof)
 
 
 def find_edges(
