@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import os
 import signal
+import threading
 import time
 from dataclasses import dataclass
 from pathlib import Path
@@ -74,6 +75,17 @@ def die_once(piece: Piece, number: int, mark: str) -> dict[str, NDArray[Any]]:
             return arrays(piece.number)
         time.sleep(0.2)
         os.kill(os.getpid(), signal.SIGKILL)
+    return arrays(piece.number)
+
+
+def die_with_its_results(piece: Piece, number: int, mark: str) -> dict[str, NDArray[Any]]:
+    """The worker of this piece is killed at once after it has finished, results and all."""
+    if piece.number == number:
+        try:
+            Path(mark).touch(exist_ok=False)
+        except FileExistsError:
+            return arrays(piece.number)
+        threading.Timer(0.05, os.kill, (os.getpid(), signal.SIGKILL)).start()
     return arrays(piece.number)
 
 

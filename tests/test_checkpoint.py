@@ -19,9 +19,7 @@ import pytest
 
 from tests import pieces
 from thermo.errors import CheckpointError
-from thermo.model import read_model
-from thermo.spectrum.checkpoint import Checkpoint, discard, run_identity
-from thermo.spectrum.settings import Settings
+from thermo.spectrum.checkpoint import Checkpoint, discard
 
 ROOT = Path(__file__).resolve().parent.parent
 RUN = {"model": "a" * 64, "seed": 1, "steps": 200, "program version": "0.1.0"}
@@ -161,23 +159,6 @@ def test_another_run_is_refused(
         assert word in text
     with Checkpoint(path, RUN) as kept:
         assert kept.keys() == ["one"]
-
-
-def test_the_identity_of_a_run() -> None:
-    mapping = {
-        "format": 1,
-        "energy_unit": "1",
-        "bond_term": "+J S.S",
-        "couplings": {"J": 1.0},
-        "lattice": {"name": "chain", "size": [4], "spin": 0.5, "couplings": {"nearest": "J"}},
-    }
-    model = read_model(mapping)
-    first = run_identity(model, Settings().identity())
-    assert {type(v) for v in first.values()} <= {str, int, float}
-    assert first["seed"] == 1
-    other = run_identity(read_model(mapping | {"couplings": {"J": 1.5}}), Settings().identity())
-    assert {k for k in first if first[k] != other[k]} >= {"couplings"}
-    assert run_identity(model, Settings(accuracy=0.1).identity()) == first
 
 
 def test_foreign_files(tmp_path: Path) -> None:

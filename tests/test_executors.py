@@ -213,9 +213,10 @@ def nothing_left() -> Iterator[None]:
 
 
 @pytest.mark.usefixtures("nothing_left")
-def test_a_worker_killed_in_its_task(tmp_path: Path) -> None:
+@pytest.mark.parametrize("how", ["die_once", "die_with_its_results"])
+def test_a_worker_killed_in_its_task(tmp_path: Path, how: str) -> None:
     mark = tmp_path / "mark"
-    solve = functools.partial(pieces.die_once, number=1, mark=str(mark))
+    solve = functools.partial(getattr(pieces, how), number=1, mark=str(mark))
     with Checkpoint(tmp_path / "c", RUN) as kept:
         found = run_pieces(SIX, solve, executor=Distributed(workers=2), checkpoint=kept)
         assert mark.exists()
@@ -324,3 +325,44 @@ def test_no_scheduler(monkeypatch: pytest.MonkeyPatch) -> None:
 def test_workers_of_another_version() -> None:
     with pytest.raises(WorkerError, match="install the same version everywhere"):
         cluster._task(pieces.solve, Piece(1), 1, "0.0.1")
+
+
+class Future:
+    """A stand-in for a future of the library, whose state changes when it is fetched."""
+
+    def __init__(self, status: str, raises: BaseException | None = None, then: str = "") -> None:
+        self.status, self.raises, self.then = status, raises, then or status
+
+    def result(self, timeout: float) -> dict[str, Any]:
+        assert timeout > 0
+        self.status = self.then
+        if self.raises is not None:
+            raise self.raises
+        return pieces.arrays(1)
+
+    def exception(self) -> BaseException:
+        return ModuleNotFoundError("No module named 'thermo'")
+
+
+@pytest.mark.parametrize(
+    ("future", "found"),
+    [
+        (Future("finished"), "arrays"),
+        (Future("pending"), "again"),
+        (Future("lost"), "again"),
+        (Future("finished", TimeoutError(), "pending"), "again"),
+        (Future("finished", OSError("comm closed")), "scheduler was lost"),
+        (Future("finished", RuntimeError("lost on the way"), "cancelled"), "scheduler was lost"),
+        (Future("cancelled"), "scheduler was lost"),
+        (Future("error"), "cannot load what it needs"),
+        (Future("finished", RuntimeError("lost on the way"), "error"), "cannot load"),
+    ],
+)
+def test_every_state_of_a_future(future: Future, found: str) -> None:
+    if found == "arrays":
+        assert pieces.same(dict(cluster._result(future, "x") or {}), 1)
+    elif found == "again":
+        assert cluster._result(future, "x") is None
+    else:
+        with pytest.raises(WorkerError, match=found):
+            cluster._result(future, "x")

@@ -308,19 +308,6 @@ class Checkpoint:
         return False
 
 
-def run_identity(model: Any, settings: Mapping[str, str | int | float]) -> dict[str, Any]:
-    """The identity of a run: program version, model and couplings, then the settings."""
-    from thermo.variables import software_version
-
-    couplings = {name: float(value) for name, value in model.couplings.items()}
-    return {
-        "program version": software_version(),
-        "model": model.digest,
-        "couplings": json.dumps(couplings, sort_keys=True),
-        **settings,
-    }
-
-
 def discard(path: str | os.PathLike[str]) -> None:
     """Remove a checkpoint that is no longer needed, with sqlite's journal; missing is fine."""
     for name in (os.fspath(path), os.fspath(path) + "-journal"):

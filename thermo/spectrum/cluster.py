@@ -19,8 +19,10 @@ from typing import TYPE_CHECKING, Any
 
 from numpy.typing import NDArray
 
-from thermo.errors import PartitaError, UnavailableError, WorkerError
+from thermo.errors import UnavailableError, WorkerError
 from thermo.spectrum.threads import blas_threads, thread_count
+
+Arrays = Mapping[str, NDArray[Any]]
 
 if TYPE_CHECKING:
     from thermo.spectrum.executors import Distributed
@@ -29,14 +31,15 @@ CONNECT_SECONDS = 10
 CLOSE_SECONDS = 5
 _POLL = 0.1
 _LOOK = 2.0  # seconds between looks at who is working
+_FETCH_SECONDS = 60
 
 
 def in_cluster(
     pieces: Sequence[Any],
-    solve: Callable[[Any], Mapping[str, NDArray[Any]]],
+    solve: Callable[[Any], Arrays],
     executor: Distributed,
     beat: Callable[[str], None],
-) -> Generator[tuple[int, Mapping[str, NDArray[Any]]], None, None]:
+) -> Generator[tuple[int, Arrays], None, None]:
     """(index, arrays) as pieces finish; ``beat(note)`` is called several times a second.
 
     Raises UnavailableError without the library, WorkerError where no scheduler answers, it is
@@ -53,16 +56,16 @@ def in_cluster(
             )
             futures[future] = index
         try:
-            for future in _finished(client, futures, beat):
-                index = futures.pop(future)
-                yield index, _result(future, pieces[index].label)
+            labels = [piece.label for piece in pieces]
+            for future, result in _finished(client, futures, labels, beat):
+                yield futures.pop(future), result
         finally:
             with contextlib.suppress(Exception):
                 client.cancel(list(futures))
 
 
 def _task(
-    solve: Callable[[Any], Mapping[str, NDArray[Any]]],
+    solve: Callable[[Any], Arrays],
     piece: Any,
     threads: int | None,
     version: str,
@@ -190,9 +193,12 @@ def _plugin() -> Any:
 
 
 def _finished(
-    client: Any, futures: Mapping[Any, int], beat: Callable[[str], None]
-) -> Iterator[Any]:
-    """Futures as they finish, with a heartbeat while none does."""
+    client: Any,
+    futures: Mapping[Any, int],
+    labels: Sequence[str],
+    beat: Callable[[str], None],
+) -> Iterator[tuple[Any, Arrays]]:
+    """Futures with their arrays as they finish, with a heartbeat while none does."""
     from distributed import as_completed
 
     waiting, left = as_completed(list(futures), loop=client.loop), len(futures)
@@ -200,8 +206,12 @@ def _finished(
     while left:
         batch = waiting.next_batch(block=False)
         for future in batch:
-            left -= 1
-            yield future
+            result = _result(future, labels[futures[future]])
+            if result is None:
+                waiting.add(future)
+            else:
+                left -= 1
+                yield future, result
         if batch:
             continue
         if time.monotonic() - looked > _LOOK:
@@ -211,23 +221,40 @@ def _finished(
         time.sleep(_POLL)
 
 
-def _result(future: Any, label: str) -> Mapping[str, NDArray[Any]]:
+def _result(future: Any, label: str) -> Arrays | None:
+    """The arrays; None where the worker died with them, before they were fetched: the scheduler
+    has the piece done again, and the future finishes once more."""
     from distributed import KilledWorker
 
     if future.status == "finished":
-        result: Mapping[str, NDArray[Any]] = future.result()
-        return result
-    if future.status == "error":
-        fault = future.exception()
-        if isinstance(fault, KilledWorker):
-            raise WorkerError(
-                f"the piece {label} ended {fault.allowed_failures + 1} workers one after the "
-                "other, most likely for lack of memory; run fewer of them on a machine"
-            ) from None
-        if isinstance(fault, ImportError) and not isinstance(fault, PartitaError):
-            raise WorkerError(
-                f"a worker cannot load what it needs ({fault}); install this program, in the same "
-                "version, where the workers run"
-            ) from None
-        raise fault
-    raise WorkerError("the connection to the scheduler was lost; start it again")
+        try:
+            result: Arrays = future.result(timeout=_FETCH_SECONDS)
+            return result
+        except TimeoutError:
+            return None
+        except OSError as fault:
+            raise _lost() from fault
+        except Exception:
+            # It was lost on the way, and doing it again has failed: told below.
+            if future.status not in ("error", "cancelled"):
+                raise
+    if future.status in ("pending", "lost"):
+        return None
+    if future.status != "error":
+        raise _lost()
+    failure = future.exception()
+    if isinstance(failure, KilledWorker):
+        raise WorkerError(
+            f"the piece {label} ended {failure.allowed_failures + 1} workers one after the other, "
+            "most likely for lack of memory; run fewer of them on a machine"
+        )
+    if isinstance(failure, ImportError):
+        raise WorkerError(
+            f"a worker cannot load what it needs ({failure}); install this program, in the same "
+            "version, where the workers run"
+        )
+    raise failure
+
+
+def _lost() -> WorkerError:
+    return WorkerError("the connection to the scheduler was lost; start it again")
