@@ -65,15 +65,16 @@ def fit(
     if method not in ("full", "sampled"):
         raise RangeError(f"method = {method!r} is unknown; use 'full' or 'sampled'")
     study = study if isinstance(study, Study) else read_study(study)
-    if method == "sampled" and solver is None:
-        from thermo.fit.sampled_levels import SampledLevels
-
-        solver = SampledLevels(study.model, memory=memory)
     if solver is not None:  # whose levels no other cluster is known to share
         found = _fit_once(study, solver, progress, starts, cache)
         return add_profiles(replace(found, window=without_edge(study)), profiles, progress)
-    full = full_solver(study, memory)
-    found = fit_in_window(study, single_fit(full, progress, starts, cache), memory)
+    if method == "sampled":
+        from thermo.fit.sampled_levels import SampledLevels
+
+        levels: Solver = SampledLevels(study.model, memory=memory)
+    else:
+        levels = full_solver(study, memory)
+    found = fit_in_window(study, single_fit(levels, progress, starts, cache), memory)
     return add_profiles(found, profiles, progress)
 
 

@@ -11,6 +11,7 @@ and both are held against the data. At and above a set's lower edge
 
 from __future__ import annotations
 
+import contextlib
 import math
 from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass, fields, replace
@@ -37,6 +38,7 @@ FitOnce = Callable[[Study, bool], FitResult]
 # A larger cluster is cheap up to so many states and seconds.
 CHEAP_STATES = 2**17
 CHEAP_SECONDS = 3.0
+MOST_SECONDS = 60.0
 # The cut and the fit depend on each other; they settle in two or three turns.
 TURNS = 5
 # Points that a new cut would bring back are worth another turn from this share of all on.
@@ -118,23 +120,22 @@ class Relative:
 
 
 def find_relative(study: Study, memory: int | float | str | None = None) -> Relative | None:
-    """A larger cluster of the lattice where that is cheap, else a smaller one; None for neither."""
+    """A larger cluster of the lattice where that is cheap, else the largest smaller one that can be
+    diagonalised in a minute (of a sampled cluster the next may not); None for neither."""
     from thermo.spectrum.full import FullSolver
     from thermo.spectrum.planning import time_needed
 
     if not can_resize(study.model):
         return None
     bigger = larger(study.model, CHEAP_STATES)
-    for found in (bigger, smaller(study.model)):
-        if found is None:
-            continue
-        try:
+    found = bigger or smaller(study.model)
+    while found is not None:
+        limit = CHEAP_SECONDS if found is bigger else MOST_SECONDS
+        with contextlib.suppress(MemoryLimitError):
             solver = FullSolver(found, memory)
-        except MemoryLimitError:
-            continue
-        if found is bigger and time_needed(solver.plan) > CHEAP_SECONDS:
-            continue
-        return Relative(found, make_forward(replace(study, model=found), solver))
+            if time_needed(solver.plan) <= limit:
+                return Relative(found, make_forward(replace(study, model=found), solver))
+        found = smaller(study.model if found is bigger else found)
     return None
 
 
