@@ -50,6 +50,19 @@ class PointSlopes:
     by_field: PointValues
 
 
+@dataclass(frozen=True, eq=False)
+class _States:
+    """States (J,) that the groups' levels stand for: their group, M, how many are alike, the mean
+    of their M², and the pairs with M > 0 and −M."""
+
+    owner: NDArray[np.int64]
+    m: Array
+    count: NDArray[np.int64] | Array
+    square: Array
+    positive: NDArray[np.int64]
+    negative: NDArray[np.int64]
+
+
 class PointSums:
     """Sums over the levels at given temperatures, ready to be asked at any fields.
 
@@ -73,8 +86,28 @@ class PointSums:
         a = groups.excess
         self._columns = np.vstack([np.ones_like(a), a > 0, a, a * a, s, a * s, a * a * s]).T
         different, self._row = np.unique(temperature, return_inverse=True)
-        self._sums = self._group_sums(different)
-        self._positive, self._negative = _pairs(groups.m, groups.owner)
+        sums, k = self._group_sums(different), self._k
+        # Of each group at each temperature, (nT, K): Z, Z without the lowest level, mean and
+        # variance of the excess; (k, nT, K): mean slope, its covariance with the excess, and
+        # ⟨δa² δs⟩.
+        self._z, self._excited = sums[..., 0], sums[..., 1]
+        moments = np.moveaxis(sums[..., 2:] / sums[..., :1], -1, 0)
+        self._mean = np.ascontiguousarray(moments[0])
+        self._variance = np.maximum(moments[1] - self._mean**2, 0.0)
+        self._slope, a_s, aa_s = (moments[2 + i * k : 2 + (i + 1) * k] for i in range(3))
+        self._cross = a_s - self._mean * self._slope
+        self._third = aa_s - self._slope * moments[1] - 2 * self._mean * self._cross
+        count = np.bincount(groups.owner)
+        square = np.bincount(groups.owner, groups.m**2) / count
+        none = np.empty(0, dtype=np.int64)
+        # In no field a group's states are alike: one of them then stands for all.
+        self._alike = _States(
+            np.arange(len(count)), np.zeros(len(count)), count, square, none, none
+        )
+        self._apart = _States(
+            groups.owner, groups.m, np.ones(len(groups.m)), groups.m**2,
+            *_pairs(groups.m, groups.owner),
+        )  # fmt: skip
 
     def _group_sums(self, temperature: Array) -> Array:
         """Σ w e^{−a/T} × columns for every group, (nT, K, columns)."""
@@ -99,51 +132,46 @@ class PointSums:
         return found[0] if len(found) == 1 else _joined(found)
 
     def _at(self, h: Array, part: slice) -> PointSlopes:
-        groups, k, row = self._groups, self._k, self._row[part]
+        groups, row = self._groups, self._row[part]
+        states = self._apart if np.any(h) else self._alike
+        owner = states.owner
         t = self._temperature[part]
         beta = 1 / t
         # (n, J) for each state j of each group, or (k, n, J).
-        sums = self._sums[row][:, groups.owner]
-        z, excited = sums[..., 0], sums[..., 1]
-        moments = np.moveaxis(sums[..., 2:] / z[..., None], -1, 0)
-        mean, square = moments[0], moments[1]
-        variance = np.maximum(square - mean**2, 0.0)
-        s, a_s, aa_s = (moments[2 + i * k : 2 + (i + 1) * k] for i in range(3))
-        cross = a_s - mean * s
-        third = aa_s - s * square - 2 * mean * cross
+        z, excited = self._z[row][:, owner], self._excited[row][:, owner]
+        mean, variance = self._mean[row][:, owner], self._variance[row][:, owner]
+        cross, third, s = (a[:, row][:, :, owner] for a in (self._cross, self._third, self._slope))
 
-        zeeman = h[:, None] * groups.m
-        lowest = groups.lowest[groups.owner] - zeeman
+        floor = groups.lowest[owner]
+        lowest = floor - h[:, None] * states.m
         base = lowest.min(axis=1)
         lowest = lowest - base[:, None]
         at_ground = lowest <= groups.tolerance
         lowest[at_ground] = 0.0
-        boltzmann = np.exp(np.maximum(-lowest * beta[:, None], -800.0))
+        boltzmann = states.count * np.exp(np.maximum(-lowest * beta[:, None], -800.0))
         q = z * boltzmann
         p = q / q.sum(axis=1)[:, None]
         relative = lowest + mean
         u = np.einsum("nj,nj->n", p, relative)
         x = relative - u[:, None]
         # ln Z = ln(ground weight) + ln(1 + the rest): the rest may be far below rounding.
-        ground_weight = (groups.lowest_weight[groups.owner] * at_ground).sum(axis=1)
+        ground_weight = (groups.lowest_weight[owner] * states.count * at_ground).sum(axis=1)
         rest = np.where(at_ground, excited * boltzmann, q).sum(axis=1)
         log_z = np.log(ground_weight) + np.log1p(rest / ground_weight)
 
         # p(M) − p(−M) from their ratio e^{−2|h|M/T}, exact for the smallest field.
-        size = groups.m[self._positive]
-        up = (h >= 0)[:, None]
-        favoured = np.where(up, p[:, self._positive], p[:, self._negative])
-        odd = (
-            np.sign(h)[:, None] * favoured * -np.expm1(-2 * np.abs(h)[:, None] * size / t[:, None])
-        )
-        odd = odd * size
+        size = states.m[states.positive]
+        favoured = np.where((h >= 0)[:, None], p[:, states.positive], p[:, states.negative])
+        bias = -np.expm1(-2 * np.abs(h * beta)[:, None] * size)
+        odd = np.sign(h)[:, None] * favoured * bias * size
         m = odd.sum(axis=1)
-        mu = groups.m - m[:, None]
-        p_mu2 = p * mu**2
+        mu = states.m - m[:, None]
+        p_mu = p * mu
+        p_mu2 = p_mu * mu if len(states.positive) else p * states.square
         var_m = p_mu2.sum(axis=1)
         # Without the field's part, so that M's odd sums see what both signs share.
-        shared = (groups.lowest[groups.owner] + mean)[:, self._positive]
-        shared = shared - np.einsum("nj,nj->n", p, groups.lowest[groups.owner] + mean)[:, None]
+        shared = floor + mean
+        shared = shared[:, states.positive] - np.einsum("nj,nj->n", p, shared)[:, None]
         mixed = np.einsum("nj,nj->n", odd, shared) - h * var_m
         spread = variance + x**2
         value = PointValues(
@@ -155,25 +183,25 @@ class PointSums:
             mixed=mixed,
         )
 
-        y = self._first[:, None, groups.owner] + s
+        y = self._first[:, None, owner] + s
         average = np.einsum("nj,knj->kn", p, y)
         y = y - average[..., None]
         c_y = cross + x * y
         covariance = np.einsum("nj,knj->kn", p, c_y)
         cubic = np.einsum("nj,knj->kn", p, third + 2 * x * cross + spread * y)
-        with_m = np.einsum("nj,knj->kn", odd, y[:, :, self._positive])
+        with_m = np.einsum("nj,knj->kn", odd, y[:, :, states.positive])
         by_slope = PointValues(
             energy=self._reference[:, None] + average - beta * covariance,
             entropy=-(beta**2) * covariance,
             heat=beta**2 * (2 * covariance - beta * cubic),
             moment=-beta * with_m,
             variance=-beta * np.einsum("nj,knj->kn", p_mu2, y),
-            mixed=with_m - beta * np.einsum("nj,knj->kn", p * mu, c_y),
+            mixed=with_m - beta * np.einsum("nj,knj->kn", p_mu, c_y),
         )
         by_field = PointValues(
             energy=-m + beta * mixed,
             entropy=beta**2 * mixed,
-            heat=beta**2 * (-2 * mixed + beta * np.einsum("nj,nj->n", p * mu, spread)),
+            heat=beta**2 * (-2 * mixed + beta * np.einsum("nj,nj->n", p_mu, spread)),
             moment=beta * var_m,
             variance=beta * np.einsum("nj,nj->n", p_mu2, mu),
             mixed=-var_m + beta * np.einsum("nj,nj->n", p_mu2, x),

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
 from dataclasses import dataclass
 
 import numpy as np
@@ -32,11 +31,43 @@ class SlopedLevels:
     slopes: NDArray[np.float64]
 
 
-def check_slopes(found: SlopedLevels, model: SpinModel) -> None:
+@dataclass(frozen=True, eq=False)
+class ExactMoments:
+    """Of a model's couplings: Tr H_p/n ``mean`` (P,), Tr H_p H_q/n ``gram`` (P, P), and the
+    largest element of each H_p's tensors, ``largest`` (P,)."""
+
+    mean: NDArray[np.float64]
+    gram: NDArray[np.float64]
+    largest: NDArray[np.float64]
+
+
+def exact_moments(model: SpinModel) -> ExactMoments:
+    """The exact traces that slopes are held against; halves of differences of squares are exact.
+
+    Cost: one sum over the bonds for each pair of couplings.
+    """
+    names = tuple(model.couplings)
+    bare = dict.fromkeys(names, 0.0)
+
+    def traces(*shifted: str) -> tuple[float, float]:
+        _, mean, square = exact_traces(model.with_couplings({**bare, **dict.fromkeys(shifted, 1)}))
+        return mean, square
+
+    single = [traces(name) for name in names]
+    gram = np.diag([square for _, square in single])
+    for p, first in enumerate(names):
+        for q in range(p):
+            both = traces(first, names[q])[1]
+            gram[p, q] = gram[q, p] = (both - single[p][1] - single[q][1]) / 2
+    largest = [_largest(model, name) for name in names]
+    return ExactMoments(np.array([mean for mean, _ in single]), gram, np.array(largest))
+
+
+def check_slopes(found: SlopedLevels, model: SpinModel, exact: ExactMoments | None = None) -> None:
     """Hold slopes against Σ c_p ∂E/∂c_p = E (Euler) and the traces of H_p and H·H_p.
 
-    Raises SpectrumError on a mismatch. Cost: a few passes over the levels and, for each
-    coupling, three sums over the bonds.
+    ``exact`` are the model's moments, where they are known already.
+    Raises SpectrumError on a mismatch. Cost: a few passes over the levels.
     """
     unit = energy_scale(model) or 1.0
     table, c = found.table, np.array([model.couplings[name] for name in found.names]) / unit
@@ -47,13 +78,16 @@ def check_slopes(found: SlopedLevels, model: SpinModel) -> None:
     misfit = float(np.abs(c @ found.slopes - energy).max()) if len(c) else 0.0
     if not misfit <= SLOPE_TOLERANCE * scale:
         raise SpectrumError(_sentence("their sum with the couplings is", misfit / scale))
-    for name, slope in zip(found.names, found.slopes, strict=True):
-        mean, cross = _exact_moments(model, name, unit)
+    if exact is None:
+        exact = exact_moments(model)
+    order = [list(model.couplings).index(name) for name in found.names]
+    cross = exact.gram[np.ix_(order, order)] @ c
+    for k, (name, slope) in enumerate(zip(found.names, found.slopes, strict=True)):
         # A term may vanish to rounding: judged by what went into it.
-        own = max(float(np.abs(slope).max()), 1e-6 * _largest(model, name), 1e-100)
+        own = max(float(np.abs(slope).max()), 1e-6 * exact.largest[order[k]], 1e-100)
         faults = (
-            abs(float(share @ slope) - mean) / own,
-            abs(float(share @ (slope * energy)) - cross) / (own * scale),
+            abs(float(share @ slope) - exact.mean[order[k]]) / own,
+            abs(float(share @ (slope * energy)) - cross[k]) / (own * scale),
         )
         if not max(faults) <= SLOPE_TOLERANCE:
             raise SpectrumError(_sentence(f"the traces of coupling {name} are", max(faults)))
@@ -63,18 +97,6 @@ def _largest(model: SpinModel, name: str) -> float:
     terms = [b.matrix for b in model.bonds if b.coupling == name]
     terms += [ion.matrix for ion in model.ions if ion.coupling == name]
     return max((float(np.abs(a).max()) for a in terms), default=0.0)
-
-
-def _exact_moments(model: SpinModel, name: str, unit: float) -> tuple[float, float]:
-    """Tr H_p / n and Tr(H H_p) / n, H in ``unit``: halves of differences of a square are exact."""
-    values: Mapping[str, float] = {key: c / unit for key, c in model.couplings.items()}
-
-    def traces(shift: float) -> tuple[float, float]:
-        _, mean, square = exact_traces(model.with_couplings({**values, name: values[name] + shift}))
-        return mean, square
-
-    (up, up2), (down, down2) = traces(1.0), traces(-1.0)
-    return (up - down) / 2, (up2 - down2) / 4
 
 
 def _sentence(what: str, size: float) -> str:

@@ -14,7 +14,12 @@ from thermo.errors import SpectrumError, UnavailableError
 from thermo.hilbert import blocks, encoding, operators
 from thermo.hilbert.orbits import Links, Orbits, find_images, find_links, find_orbits
 from thermo.hilbert.slopes import block_slopes
-from thermo.model.level_slopes import SlopedLevels, check_slopes
+from thermo.model.level_slopes import (
+    ExactMoments,
+    SlopedLevels,
+    check_slopes,
+    exact_moments,
+)
 from thermo.model.level_table import LevelTable, check_levels, energy_scale
 from thermo.model.spin_model import SpinModel
 from thermo.model.traces import total_matrices
@@ -91,6 +96,7 @@ class FullSolver:
             self.encoding, pair, ion, n_channels, self.plan.conserved.modulus
         )
         self._structures: dict[int, _Structure] = {}
+        self._exact: ExactMoments | None = None
 
     def structure(self, magnetic: MagneticSector) -> _Structure:
         """Orbits, links and images of one M; kept for the next couplings while small."""
@@ -142,14 +148,17 @@ class FullSolver:
         """The checked levels with their slopes by every coupling, for generic solvers.
 
         Cost: one and a half (small blocks) to 3 times (large ones) that of the levels alone, and
-        the memory of three blocks in place of one, for the eigenvectors. Raises MemoryLimitError where the eigenvectors do not fit.
+        the memory of three blocks in place of one, for the eigenvectors. Raises MemoryLimitError
+        where the eigenvectors do not fit.
         """
         if not self._generic:
             raise UnavailableError("slopes by the couplings need a solver with generic symmetries")
         planning.refuse_if_too_large(self.plan, self._limit, slopes=True)
         table, _, slopes = self._solve(couplings, progress, slopes=True)
         found = SlopedLevels(table, self.plan.terms.names, slopes)
-        check_slopes(found, self.model.with_couplings(couplings or {}))
+        if self._exact is None:
+            self._exact = exact_moments(self.model)
+        check_slopes(found, self.model.with_couplings(couplings or {}), self._exact)
         return found
 
     def _solve(
