@@ -218,3 +218,12 @@ def test_a_second_fit_of_a_study_is_the_same(tmp_path, long_chain):
     first, second = fit(read_study(content)), fit(read_study(content))
     assert first["J"].value == second["J"].value
     assert first["J"].start == 50.0
+
+
+def test_a_sampled_fit_has_its_window_too(tmp_path, long_chain):
+    content = study(tmp_path, long_chain, 0.003 * long_chain)
+    full, sampled = fit(content), fit(content, method="sampled", profiles="none")
+    assert sampled.window.status == "checked"
+    # So small a cluster is sampled without noise, its states all being exact ones.
+    assert sampled.window.cut == full.window.cut
+    assert sampled["J"].value == pytest.approx(full["J"].value, rel=1e-5)
