@@ -34,9 +34,12 @@ Vector = NDArray[np.float64]
 CONVERGED = 1e-9
 # Ritz values closer than this (in the same unit) belong to one eigenvalue.
 SAME_LEVEL = 1e-8
-# A normalised Gram matrix of random projections is singular below this, regular above: with one
-# state too many its smallest eigenvalue is of order one and below 1e-6 once in a million.
-SINGULAR = 1e-6
+# A normalised Gram matrix of random projections is singular below this, regular above. Rounding
+# leaves 1e-8 at most; with one state too many the smallest eigenvalue is of order one, and falls
+# below this once in several million.
+SINGULAR = 1e-7
+# Halves of a Gram matrix that differ by more were found by recursions that lost their way.
+ASYMMETRIC = 1e-5
 # A projection shorter than this (squared) is known too badly to count states with.
 FAINT = 1e-13
 
@@ -115,8 +118,7 @@ def _degeneracy(members: Sequence[tuple[Ritz, _Cluster]]) -> int | None:
     if np.any(norm**2 < FAINT):
         return None
     gram /= np.outer(norm, norm)
-    # Both halves were found independently: they differ where the recursion lost its way.
-    if np.abs(gram - gram.conj().T).max() > SINGULAR**0.5:
+    if np.abs(gram - gram.conj().T).max() > ASYMMETRIC:
         return None
     rank = int(np.sum(np.linalg.eigvalsh((gram + gram.conj().T) / 2) > SINGULAR))
     return rank if 0 < rank < size else None
