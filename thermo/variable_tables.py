@@ -81,6 +81,15 @@ _CURVES = (
     _v("magnetization", _GRID, "f8", "@moment", "magnetic moment along the field",
        required=False),
 )  # fmt: skip
+_EXCLUDED = (
+    _v("excluded_temperature", "excluded_point", "f8", "@temperature",
+       "temperature of a point left out because the cluster's size shows there", required=False),
+    _v("excluded_field", "excluded_point", "f8", "@field", "its magnetic field", required=False),
+    _v("excluded_observed", "excluded_point", "f8", None, "its measured value", note=_OWN,
+       required=False),
+    _v("excluded_dataset", "excluded_point", "i4", "1", "index along dataset of its dataset",
+       required=False),
+)  # fmt: skip
 _FIT = (
     _v("parameter_name", "parameter", "str", None, "name of the parameter", label=True),
     _v("parameter_units", "parameter", "str", None, "units of the parameter"),
@@ -152,13 +161,7 @@ _FIT = (
     _v("dataset_durbin_watson", "dataset", "f8", "1",
        "Durbin-Watson statistic of the residuals", required=False, finite=False,
        note="near 2 for independent residuals, towards 0 where neighbours resemble each other"),
-    _v("excluded_temperature", "excluded_point", "f8", "@temperature",
-       "temperature of a point left out because the cluster's size shows there", required=False),
-    _v("excluded_field", "excluded_point", "f8", "@field", "its magnetic field", required=False),
-    _v("excluded_observed", "excluded_point", "f8", None, "its measured value", note=_OWN,
-       required=False),
-    _v("excluded_dataset", "excluded_point", "i4", "1", "index along dataset of its dataset",
-       required=False),
+    *_EXCLUDED,
 )  # fmt: skip
 _COMPARISON = (
     _v("candidate_name", "candidate", "str", None, "name of the candidate", label=True),
@@ -212,6 +215,7 @@ _COMPARISON = (
     _v("dataset_window", "dataset", "f8", "@temperature",
        "lowest temperature at which the size of no periodic cluster shows in the data",
        finite=False, note="0: at none of the dataset's points; missing: not known"),
+    *_EXCLUDED,
     _v("curve_temperature", "curve_point", "f8", "@temperature", "temperature along the curves"),
     _v("curve_field", "curve_point", "f8", "@field", "magnetic field along the curves"),
     _v("curve_dataset", "curve_point", "i4", "1", "index along dataset of the curve's dataset"),

@@ -9,6 +9,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from thermo.fit.dataset import ROLES, fine_lines
+from thermo.fit.provenance import excluded_arrays
 from thermo.variables import build_comparison
 
 if TYPE_CHECKING:
@@ -82,6 +83,8 @@ def comparison_dataset(comparison: Comparison) -> xr.Dataset:
             for r in results
         ],
     }  # fmt: skip
+    if results[0].window is not None:
+        arrays |= excluded_arrays(results[0].window, names)
     arrays |= _proposals(comparison)
     energy_units = {r.study.model.energy_unit for r in results}
     return build_comparison(

@@ -6,6 +6,7 @@ import hashlib
 import json
 import math
 import platform
+from collections.abc import Sequence
 from importlib import metadata
 from pathlib import Path
 from typing import Any
@@ -14,6 +15,7 @@ import numpy as np
 
 from thermo.fit.residual_tests import along, durbin_watson, noticed_runs
 from thermo.fit.result import FitResult
+from thermo.fit.window import Window
 
 LIBRARIES = ("numpy", "scipy", "numba", "xarray", "netCDF4", "matplotlib")
 
@@ -32,15 +34,20 @@ def check_arrays(result: FitResult) -> dict[str, Any]:
     if window is None:
         return arrays
     arrays["dataset_window"] = [window.lower.get(name, math.nan) for name in names]
+    return arrays | excluded_arrays(window, names)
+
+
+def excluded_arrays(window: Window, names: Sequence[str]) -> dict[str, Any]:
+    """The points left out of the data sets of these names; nothing where there are none."""
     gone = [(k, window.excluded[name]) for k, name in enumerate(names) if name in window.excluded]
-    if gone:
-        arrays |= {
-            "excluded_temperature": np.concatenate([d.temperature for _, d in gone]),
-            "excluded_field": np.concatenate([d.field for _, d in gone]),
-            "excluded_observed": np.concatenate([d.value / d.to_si for _, d in gone]),
-            "excluded_dataset": np.concatenate([np.full(d.n_points, k) for k, d in gone]),
-        }
-    return arrays
+    if not gone:
+        return {}
+    return {
+        "excluded_temperature": np.concatenate([d.temperature for _, d in gone]),
+        "excluded_field": np.concatenate([d.field for _, d in gone]),
+        "excluded_observed": np.concatenate([d.value / d.to_si for _, d in gone]),
+        "excluded_dataset": np.concatenate([np.full(d.n_points, k) for k, d in gone]),
+    }
 
 
 def check_attributes(result: FitResult) -> dict[str, str | int | float]:

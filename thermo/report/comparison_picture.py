@@ -10,13 +10,15 @@ from matplotlib.axes import Axes
 
 from thermo.errors import UnavailableError
 from thermo.report import style
-from thermo.report.fit_picture import shade_untrusted
+from thermo.report.fit_picture import shade_untrusted, untrusted
 from thermo.report.quantities import SYMBOLS, axis_label, power_of_thousand
 
 COLOURS = (style.VERMILION, style.BLUE, style.GREEN, style.ORANGE)
 DASHES = ("-", "--", "-.", ":")
 # Residuals of more candidates than this are not drawn.
 MOST_RESIDUALS = 4
+# Names up to so many letters stand two in a row.
+SHORT = 28
 NEXT = "next"
 
 
@@ -91,10 +93,18 @@ def _draw_dataset(
     lower[len(lower) // 2].set_ylabel(r"residual ($\sigma$)" if weighted else "residual")
     symbol = SYMBOLS.get(str(found["dataset_quantity"].values[index]), r"\mathrm{value}")
     upper.set_ylabel(axis_label(symbol, str(found["dataset_units"].values[index]), power))
-    upper.legend(loc="best", fontsize=6.5)
     upper.tick_params(labelbottom=False)
     lower[-1].set_xlabel(axis_label(SYMBOLS[over], str(found[over].attrs.get("units", "1"))))
-    low, high = float(x.min()), float(x.max())
+    gone, edge = untrusted(found, index) if over == "temperature" else ((x[:0], x[:0]), 0.0)
+    upper.plot(gone[0], gone[1] / unit, "x", markersize=2.4, markeredgewidth=0.6,
+               color=style.GREY, zorder=1, label="left out" if gone[0].size else None)  # fmt: skip
+    low, high = float(np.concatenate([x, gone[0]]).min()), float(x.max())
+    # Above the panel, where no candidate's curve can run through it.
+    longest = max(len(text) for text in upper.get_legend_handles_labels()[1])
+    upper.legend(
+        loc="lower left", bbox_to_anchor=(0, 1), fontsize=6.5, borderaxespad=0.2,
+        ncols=2 if longest <= SHORT else 1,
+    )  # fmt: skip
     if over == "temperature" and style.wants_log(np.unique(x), scaling):
         upper.set_xlim(low / 1.1, high * 1.1)
         style.log_axis(upper)
@@ -102,9 +112,7 @@ def _draw_dataset(
     else:
         margin = 0.03 * (high - low) or 1.0
         upper.set_xlim(low - margin, high + margin)
-    if over == "temperature":
-        edge = float(found["dataset_window"].values[index])
-        shade_untrusted((upper, *lower), edge if np.isfinite(edge) else 0.0, word=False)
+    shade_untrusted((upper, *lower), edge, word=False)
     if np.all(observed >= 0):
         upper.set_ylim(bottom=0)
     upper.figure.align_ylabels([upper, *lower])

@@ -129,7 +129,7 @@ def _draw_dataset(
         lower.plot(x[these], left / sigma[these] if weighted else left / scale, "o",
                    markersize=marker_size - 0.5, markerfacecolor="none", markeredgewidth=0.7,
                    color=colour)  # fmt: skip
-    gone, edge = _untrusted(fit, index) if over == "temperature" else (None, 0.0)
+    gone, edge = untrusted(fit, index) if over == "temperature" else (None, 0.0)
     if gone is not None and gone[0].size:
         upper.plot(gone[0], gone[1] / scale, "x", markersize=marker_size, markeredgewidth=0.6,
                    color=style.GREY, zorder=1, label="left out")  # fmt: skip
@@ -163,7 +163,7 @@ def _draw_dataset(
     upper.figure.align_ylabels([upper, lower])
 
 
-def _untrusted(fit: xr.Dataset, index: int) -> tuple[tuple[Any, Any], float]:
+def untrusted(fit: xr.Dataset, index: int) -> tuple[tuple[Any, Any], float]:
     """The points left out of a data set, as (temperature, value), and its window's lower edge."""
     gone: tuple[Any, Any] = (np.empty(0), np.empty(0))
     if "excluded_dataset" in fit:
