@@ -35,6 +35,8 @@ if TYPE_CHECKING:
 
 # From this dimension on a block is worth all threads when no other keeps them busy.
 ALONE_FROM = 1000
+# Σ n³ of blocks that are done before a thread would have started: some 10 ms.
+AT_ONCE = 1e7
 # Λ in units of the width of the energy bounds; above ½ the windows of different S are apart.
 SHIFT = 0.6
 # Pairs with more states than this get a bound in closed form.
@@ -202,6 +204,11 @@ class FullSolver:
     ) -> Iterator[tuple[Sector, NDArray[np.float64]]]:
         ordered = sorted(magnetic.sectors, key=lambda s: -planning.block_cost(s.dimension, s.real))
         width = thread_count()
+        if sum(s.dimension**3 for s in ordered) < AT_ONCE:
+            with blas_threads(1):
+                for s in ordered:
+                    yield s, self.solve_block(s, magnetic, structure, tables, 1, slopes)
+            return
         alone, together = self._schedule(ordered, structure, width, slopes)
         for group, workers, blas in ((alone, 1, width), (together, width, 1)):
             if not group:
