@@ -36,6 +36,7 @@ class Cell:
     superlattice: tuple[Vector, ...] = ()
     periodic: tuple[bool, ...] = ()
     path: str = "site"
+    positions: tuple[tuple[float, ...], ...] = ()  # of the sites, in cell vectors; () if not known
 
 
 @dataclass(frozen=True)

@@ -3,8 +3,8 @@
 To add one, add an entry to LATTICES: the basis sites, how many directions repeat, and for each
 role the bonds of one cell as (from, to, offset of the cell of "to"), each bond once. Bonds that
 carry a vector or an asymmetric matrix run from the first site to the second. ``positions`` and
-``vectors`` (in units of the nearest or cell distance) only serve the tests, which find the
-neighbours again by distance.
+``vectors`` (in units of the nearest or cell distance) serve the structure factor, and the tests,
+which find the neighbours again by distance.
 """
 
 from __future__ import annotations
@@ -16,6 +16,7 @@ from typing import Any
 
 from thermo.model.cells import Cell
 from thermo.model.checks import Table, fault, listing, near, show, string
+from thermo.model.positions import fractional
 from thermo.model.repetition import read_boundary, read_superlattice
 from thermo.model.spin_model import Matrix
 from thermo.model.terms import (
@@ -182,6 +183,7 @@ def read_lattice(value: object, couplings: Mapping[str, float], factor: float) -
         superlattice=superlattice,
         periodic=periodic,
         path="lattice.size",
+        positions=fractional(lattice.vectors, lattice.positions),
     )
 
 

@@ -31,6 +31,8 @@ and one of the three ways to state the cluster:
                  boundary         "periodic" (default) or "open", or one word for each direction
     [[cell.site]], [[cell.bond]], [[cell.ion]]    as above, and in a bond
                  offset           the cell of its second site, default the same cell
+                 position         of a site in units of the cell's vectors, one number for each
+                                  direction; for all sites or none; only S(q) needs it
 
     [lattice]    name             required: chain, ladder, square, triangular, honeycomb,
                                   kagome, cubic
@@ -61,6 +63,7 @@ from thermo.errors import ModelError
 from thermo.model.cells import Cell, expand
 from thermo.model.checks import Table, fault, listing, number, show, string, whole, word
 from thermo.model.lattices import read_lattice
+from thermo.model.positions import check_positions, read_position
 from thermo.model.repetition import read_boundary, read_superlattice
 from thermo.model.spin_model import SpinModel
 from thermo.model.terms import (
@@ -264,6 +267,7 @@ def build(data: dict[str, Any], text: str, source: str) -> SpinModel:
         finite=finite,
         superlattice=cell.superlattice,
         periodic=cell.periodic,
+        basis=cell.positions,
     )
 
 
@@ -309,10 +313,11 @@ def read_cell(
 ) -> Cell:
     """The sites, bonds and ion terms listed one by one, of a cell or of the whole cluster."""
     names: list[str] = []
-    spins, tensors = [], []
+    spins, tensors, positions = [], [], []
     where = prefix + "site"
     for k, entry in enumerate(listing(table.get("site", []), where, f"one [[{where}]] for each")):
-        site = Table(entry, f"{where}[{k}]", ("name", "spin", "g"))
+        keys = ("name", "spin", "g", "position") if rows else ("name", "spin", "g")
+        site = Table(entry, f"{where}[{k}]", keys)
         name = string(site.get("name", str(k)), site.at("name"))
         if name in names:
             raise fault(
@@ -323,8 +328,11 @@ def read_cell(
         names.append(name)
         spins.append(read_spin(site.need("spin", "the spin, such as 0.5"), site.at("spin")))
         tensors.append(read_g(site.get("g", DEFAULT_G), site.at("g")))
+        if site.has("position"):
+            positions.append(read_position(site.get("position"), site.at("position"), len(rows)))
     if not names:
         raise fault(where, f"the cluster is empty; give at least one [[{where}]]")
+    check_positions(positions, names, where)
     bonds = read_bonds(table.get("bond", []), prefix + "bond", names, couplings, factor, len(rows))
     ions = read_ions(table.get("ion", []), prefix + "ion", names, couplings)
     return Cell(
@@ -336,4 +344,5 @@ def read_cell(
         rows,
         periodic,
         prefix + ("repeat" if rows else "site"),
+        tuple(positions),
     )

@@ -63,6 +63,8 @@ class SpinModel:
     term). ``text`` is the model's source, from which ``read_model_text`` makes it again.
     ``finite`` says that the cluster is all there is, a molecule; else ``superlattice`` (rows, in
     cells) and ``periodic`` (one for each row) tell how a cell was repeated, empty without a cell.
+    ``basis`` holds the positions of the cell's sites in units of its vectors, empty where they
+    are not known; further numbers than there are rows run across the repeating directions.
     """
 
     title: str
@@ -80,6 +82,7 @@ class SpinModel:
     finite: bool = False
     superlattice: tuple[tuple[int, ...], ...] = ()
     periodic: tuple[bool, ...] = ()
+    basis: tuple[tuple[float, ...], ...] = ()
 
     @property
     def spins(self) -> NDArray[np.float64]:
