@@ -198,6 +198,13 @@ def settings_of_environment() -> dict[str, str]:
     return {k: v for k, v in os.environ.items() if not k.startswith("PYTEST")}
 
 
+def told(process: psutil.Process) -> str:
+    try:
+        return " ".join(process.cmdline())
+    except psutil.Error:  # has ended
+        return ""
+
+
 @pytest.fixture
 def nothing_left() -> Iterator[None]:
     """No process, no folder and no changed environment is left by a run."""
@@ -207,9 +214,11 @@ def nothing_left() -> Iterator[None]:
     yield
     assert set(glob.glob(pattern)) == before
     assert settings_of_environment() == environment
+    # The interpreter's own process that tracks shared resources stays; killed ones may take a
+    # moment to vanish.
     left = set(psutil.Process().children(recursive=True)) - children
-    # The interpreter's own process that tracks shared resources stays.
-    assert [p for p in left if "resource_tracker" not in " ".join(p.cmdline())] == []
+    _, alive = psutil.wait_procs([p for p in left if "resource_tracker" not in told(p)], timeout=3)
+    assert alive == []
 
 
 @pytest.mark.usefixtures("nothing_left")
