@@ -49,8 +49,8 @@ def averages(cluster, temperature=T, field=0.0, components=False):
 def hold_against_twin(cluster, field=0.0, components=True):
     found = averages(cluster, field=field, components=components)
     size = max(s * (s + 1) for s in cluster.spins)
-    for n, t in enumerate(T):
-        twin = naive_correlations.correlations(*cluster.naive_terms(), t, field)
+    twins = naive_correlations.correlations(*cluster.naive_terms(), T, field)
+    for n, twin in enumerate(twins):
         np.testing.assert_allclose(found["total"][n], twin.sum(axis=0), rtol=0, atol=1e-9 * size)
         for a, form in enumerate(AXES if components else ()):
             np.testing.assert_allclose(found[form][n], twin[a], rtol=0, atol=1e-9 * size)
