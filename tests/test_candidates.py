@@ -459,3 +459,20 @@ def test_the_demo_of_rivals_says_what_its_readme_says():
     readme = " ".join((demo.parent / "README.md").read_text().split())
     assert found.verdict in readme
     assert str(found.proposals[0])[:60] in readme
+
+
+def test_a_trend_within_the_errors_speaks_against_these(tmp_path):
+    """A smooth wave far below the stated errors: the model stands, and the trend is told."""
+    chi = dimer_chi(T, 60.0, 2.1)
+    error = 0.05 * chi
+    wave = chi * (1 + 0.012 * np.sin(np.linspace(0, 9, len(T))))
+    (only,) = compare(rival_study(tmp_path, T, wave, error, ("dimer",)), profiles="none").candidates
+    assert only.runs["chi"] < -3.09
+    assert only.adequate
+    assert "a trend in 'chi' within their errors" in only.remark
+    # The same wave above the errors is the model's fault.
+    (only,) = compare(
+        rival_study(tmp_path, T, wave, 0.1 * error, ("dimer",)), profiles="none"
+    ).candidates
+    assert not only.adequate
+    assert "follow a trend" in only.remark

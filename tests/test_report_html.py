@@ -189,7 +189,8 @@ def test_forms_of_couplings():
     [
         ({"converged": 0}, "did not converge"),
         ({"reduced_chi_square": 4.0}, "does not describe the data within their uncertainties"),
-        ({"dataset_runs": [-6.0, 0.0]}, "follow a trend"),
+        ({"dataset_runs": [-6.0, 0.0], "reduced_chi_square": 1.2}, "The model misses something"),
+        ({"dataset_runs": [-6.0, 0.0], "reduced_chi_square": 0.3}, "too large, or not independent"),
         ({"at_bound": [1, 0, 0, 0, 0]}, "at a bound"),
         ({}, "describes the data"),
     ],

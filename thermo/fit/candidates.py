@@ -38,7 +38,14 @@ from thermo.errors import RangeError, StudyError
 from thermo.fit import PROFILES, full_solver, single_fit
 from thermo.fit.next_point import Instrument, Proposal, from_data, propose, read_instruments
 from thermo.fit.profiles import add_profiles
-from thermo.fit.residual_tests import FEW_RUNS, UNLIKELY, along, durbin_watson, noticed_runs
+from thermo.fit.residual_tests import (
+    COMFORTABLE,
+    FEW_RUNS,
+    UNLIKELY,
+    along,
+    durbin_watson,
+    noticed_runs,
+)
 from thermo.fit.result import FitResult
 from thermo.fit.starts import FURTHER_STARTS
 from thermo.fit.strict import Section, did_you_mean
@@ -94,9 +101,18 @@ class Candidate:
 
     @property
     def adequate(self) -> bool:
-        """Whether neither χ² nor the runs of the residuals speak against it."""
-        likely = not self.probability < UNLIKELY
-        return likely and not any(score < FEW_RUNS for score in self.runs.values())
+        """Whether neither χ² nor the runs of the residuals speak against it.
+
+        A trend well within the uncertainties speaks against these, not against the model.
+        """
+        return not self.probability < UNLIKELY and (
+            not self.trending or self.probability > COMFORTABLE
+        )
+
+    @property
+    def trending(self) -> tuple[str, ...]:
+        """Data sets whose residuals have too few runs for chance."""
+        return tuple(name for name, score in self.runs.items() if score < FEW_RUNS)
 
 
 @dataclass(frozen=True, eq=False, repr=False)

@@ -14,6 +14,9 @@ FEWEST = 10
 #: Chance of a score below this, or of a χ² as large, for a model that is right: 0.1 %.
 UNLIKELY = 1e-3
 FEW_RUNS = -3.09
+#: With a χ² more probable than this a trend lies within the uncertainties: these are too large, or
+#: not independent, and the trend speaks against them rather than the model.
+COMFORTABLE = 0.5
 #: What rounding leaves of exact points, in units of their uncertainties, is no trend.
 NOTICED = 0.1
 

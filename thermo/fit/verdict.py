@@ -7,7 +7,7 @@ from collections.abc import Sequence
 from dataclasses import replace
 from typing import TYPE_CHECKING
 
-from thermo.fit.residual_tests import FEW_RUNS, UNLIKELY
+from thermo.fit.residual_tests import UNLIKELY
 from thermo.numbers import plain
 
 if TYPE_CHECKING:
@@ -49,6 +49,10 @@ def _how_well(c: Candidate) -> str:
         text = "describes the data"
         if math.isnan(c.probability):
             text = "its residuals show no trend"
+        elif c.trending:
+            text += (
+                f", with a trend in {_listed([repr(n) for n in c.trending])} within their errors"
+            )
     else:
         text = _against(c)
     stuck = c.result.at_bound
@@ -63,9 +67,9 @@ def _against(c: Candidate) -> str:
             f"χ² of {plain(c.result.chi_square, 4)} with {c.result.degrees_of_freedom} degrees "
             "of freedom is too large for chance"
         )
-    few = [name for name, score in c.runs.items() if score < FEW_RUNS]
-    if few:
-        told.append("the residuals of " + _listed([repr(n) for n in few]) + " follow a trend")
+    if c.trending:
+        who = _listed([repr(name) for name in c.trending])
+        told.append(f"the residuals of {who} follow a trend")
     return " and ".join(told)
 
 

@@ -13,6 +13,8 @@ from thermo.report.quantities import by_scatter
 #: Chance below which a χ² or a score of the runs speaks against a model.
 UNLIKELY = 1e-3
 FEW_RUNS = -3.09
+#: With a χ² more probable than this a trend lies within the uncertainties.
+COMFORTABLE = 0.5
 
 
 def fit_statement(fit: xr.Dataset) -> tuple[str, str, str]:
@@ -43,6 +45,13 @@ def fit_statement(fit: xr.Dataset) -> tuple[str, str, str]:
             "bad", "does not fit",
             f"The model does not describe the data within their uncertainties: {size} is too "
             f"large for chance{also}. Do not use these constants.",
+        )  # fmt: skip
+    if trend and chance > COMFORTABLE:
+        return (
+            "open", "errors too large?",
+            f"The model describes the data within their uncertainties ({size}), but {trend}: these "
+            "uncertainties are too large, or not independent from point to point, and the standard "
+            "errors with them.",
         )  # fmt: skip
     if trend:
         return "bad", "does not fit", f"The model misses something: {trend} ({size})."
