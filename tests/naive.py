@@ -56,7 +56,12 @@ def kron_all(spins, local):
 
 
 def hamiltonian(spins, bonds=(), ions=(), field=None, g=None):
-    """Dense H = sum S_i^T A S_j + sum S_i^T D S_i - sum_i b^T g_i S_i.
+    """Dense H; see ``sparse_hamiltonian``."""
+    return sparse_hamiltonian(spins, bonds, ions, field, g).toarray()
+
+
+def sparse_hamiltonian(spins, bonds=(), ions=(), field=None, g=None):
+    """H = sum S_i^T A S_j + sum S_i^T D S_i - sum_i b^T g_i S_i.
 
     bonds: (i, j, A); ions: (i, D); field: the vector mu_B B in energy units; g: one number or
     3x3 matrix per site (1 if left out).
@@ -85,7 +90,7 @@ def hamiltonian(spins, bonds=(), ions=(), field=None, g=None):
             for a in range(3):
                 if vector[a] != 0:
                     total = total - vector[a] * kron_all(spins, {i: own[a]})
-    return total.toarray()
+    return total
 
 
 def total_spin_operators(spins):

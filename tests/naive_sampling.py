@@ -125,3 +125,47 @@ def invented_sectors(rng, sizes, width=2.0):
 
     ``sizes`` lists (twice_m, multiplicity, dimension)."""
     return [(m, g, rng.normal(scale=width, size=n)) for m, g, n in sizes]
+
+
+def plain_lanczos(multiply, first, partners, steps):
+    """Lanczos 1950 with the whole basis kept and orthogonalised twice: alpha (m,), beta (m,),
+    overlaps of the partners with each basis vector (m, F); m ≤ steps, fewer where the space is
+    used up. ``multiply`` is H on a vector."""
+    basis = [first / np.linalg.norm(first)]
+    alpha, beta, dots = [], [], []
+    for _ in range(steps):
+        v = basis[-1]
+        dots.append([np.vdot(p, v) for p in partners])
+        w = multiply(v)
+        alpha.append(np.vdot(v, w).real)
+        for _ in range(2):
+            known = np.array(basis)
+            w = w - known.T @ (known.conj() @ w)
+        beta.append(np.linalg.norm(w))
+        if beta[-1] < 1e-10:
+            break
+        basis.append(w / beta[-1])
+    return np.array(alpha), np.array(beta), np.array(dots).reshape(len(alpha), len(partners))
+
+
+def several_lanczos(diagonal, vectors, steps, rng):
+    """Lanczos without any orthogonalisation for ``vectors`` random complex vectors of a diagonal
+    matrix: the vectors (R, d), alpha (m, R), beta (m, R), and dots (m, R−1, R), the overlap
+    of vector k+f+1 (modulo R) with the basis of vector k at [j, f, k]."""
+    d = len(diagonal)
+    r = rng.standard_normal((vectors, d)) + 1j * rng.standard_normal((vectors, d))
+    r /= np.linalg.norm(r, axis=1)[:, None]
+    v, u, b = r.copy(), np.zeros_like(r), np.zeros(vectors)
+    alpha, beta = np.zeros((steps, vectors)), np.zeros((steps, vectors))
+    dots = np.zeros((steps, vectors - 1, vectors), dtype=complex)
+    for j in range(steps):
+        overlap = r.conj() @ v.T
+        for f in range(vectors - 1):
+            dots[j, f] = [overlap[(k + f + 1) % vectors, k] for k in range(vectors)]
+        w = diagonal * v - b[:, None] * u
+        alpha[j] = np.sum(v.conj() * w, axis=1).real
+        w -= alpha[j][:, None] * v
+        b = np.linalg.norm(w, axis=1)
+        beta[j] = b
+        u, v = v, w / b[:, None]
+    return r, alpha, beta, dots
