@@ -238,11 +238,13 @@ def test_one_model_is_one_candidate(tmp_path):
 def test_shared_parameters_reach_those_that_have_them(tmp_path):
     content = rival_study(tmp_path, T, T, T, ("dimer", "ladder"))
     content["parameters"] = {"K": {"start": 5.0}, "chi0": {"start": 0.0}}
+    content["profile"] = ["K", "g"]
     for entry in content["candidate"]:
         entry["parameters"].pop("K", None)
     rivals = read_rivals(content)
     free = [[p.name for p in s.parameters.free] for s in rivals.studies]
     assert free == [["J", "g", "chi0"], ["J", "K", "g", "chi0"]]
+    assert [s.asked for s in rivals.studies] == [("g",), ("K", "g")]
 
 
 # ---------------------------------------------------------------- what to measure next

@@ -227,3 +227,27 @@ def test_a_sampled_fit_has_its_window_too(tmp_path, long_chain):
     # So small a cluster is sampled without noise, its states all being exact ones.
     assert sampled.window.cut == full.window.cut
     assert sampled["J"].value == pytest.approx(full["J"].value, rel=1e-5)
+
+
+def test_the_command_tells_of_points_left_out_and_of_none_left(partita, tmp_path, long_chain):
+    head = 'format = 1\nenergy_unit = "K"\nbond_term = "+J S.S"\ncouplings = { J = 60.0 }\n'
+    ring = '[lattice]\nname = "chain"\nsize = [8]\nspin = 0.5\ng = 2.1\n'
+    ring += 'couplings = { nearest = "J" }\n'
+    (tmp_path / "ring.toml").write_text(head + ring)
+    (tmp_path / "study.toml").write_text(
+        'format = 1\nmodel = "ring.toml"\n[[data]]\nname = "chi"\nfile = "chi.csv"\n'
+        'quantity = "susceptibility"\nunits = "emu/mol"\n'
+        'columns = { temperature = "T", value = "chi", uncertainty = "error" }\n'
+        "[parameters]\nJ = { start = 50.0, lower = 1.0, upper = 200.0 }\n"
+    )
+    for few, code in ((T > 0, 0), (T < 12, 3)):
+        chi = long_chain[few]
+        write_csv(tmp_path / "chi.csv", "T,chi,error", T[few], chi, 0.002 * chi)
+        done = partita("fit", "study.toml", "-o", f"{code}.nc")
+        assert done.returncode == code, done.stderr
+        assert ("were left out" if code == 0 else "outside the window of trust") in done.stderr
+        assert (tmp_path / f"{code}.nc").exists() == (code == 0)
+    assert len(done.stderr.strip().splitlines()) == 1
+    # The same numbers from a molecule, which has no other size, are fitted whole.
+    (tmp_path / "ring.toml").write_text("finite = true\n" + head + ring)
+    assert partita("fit", "study.toml", "-o", "molecule.nc").returncode == 0

@@ -6,7 +6,7 @@ A study that lists rivals has no ``model``; its keys, besides those of ``thermo.
                      model            required: the path of a model file, or the model as a table
                      parameters       a table like [parameters], for this candidate alone; the
                                       study's own [parameters] hold for all candidates, a coupling
-                                      there for those that have it
+                                      there, or in profile, for those that have it
     [[instrument]]   what could be measured next (default: what was, as precisely)
                      name             default: the quantity
                      quantity, units, per    as in [[data]]
@@ -204,8 +204,11 @@ def read_rivals(source: str | os.PathLike[str] | Mapping[str, object]) -> Rivals
     couplings = {name for _, model, _ in read for name in model.couplings}
     studies = []
     for name, model, extra in read:
-        mine = {k: v for k, v in shared.items() if k in model.couplings or k not in couplings}
+        others = couplings - set(model.couplings)
+        mine = {k: v for k, v in shared.items() if k not in others}
         table = {**own, "model": model, "parameters": {**mine, **extra}}
+        if isinstance(asked := own.get("profile"), Sequence) and not isinstance(asked, str):
+            table["profile"] = [name for name in asked if name not in others]
         place = f"{content.name}, candidate {name!r}"
         studies.append(build_study(Content(table, place, content.folder, content.text)))
     if len({study.reduced for study in studies}) > 1:
