@@ -18,6 +18,7 @@ from typing import TYPE_CHECKING, Any
 from thermo import errors
 
 if TYPE_CHECKING:
+    from thermo.correlating import correlations
     from thermo.ensemble import curves
     from thermo.fit import fit, read_study
     from thermo.fit.candidates import compare
@@ -36,6 +37,7 @@ __all__ = [
     "Distributed",
     "Local",
     "compare",
+    "correlations",
     "curves",
     "errors",
     "export_csv",
@@ -56,6 +58,7 @@ _HOMES = {
     "Distributed": ("thermo.spectrum.executors", "Distributed"),
     "Local": ("thermo.spectrum.executors", "Local"),
     "compare": ("thermo.fit.candidates", "compare"),
+    "correlations": ("thermo.correlating", "correlations"),
     "curves": ("thermo.ensemble", "curves"),
     "export_csv": ("thermo.report", "export_csv"),
     "export_latex": ("thermo.report", "export_latex"),

@@ -252,6 +252,29 @@ _COMPARISON = (
     _v("map_separation", "map_point", "f8", "1", "proposal_separation at this point",
        required=False, finite=False, note="missing where a cluster's size shows"),
 )  # fmt: skip
+_PAIRS, _WAVES = "temperature field pair_class", "temperature field q"
+_CORRELATIONS = (
+    _v("temperature", "temperature", "f8", "@temperature", "temperature"),
+    _v("field", "field", "f8", "@field", "magnetic field B"),
+    _v("pair_name", "pair_class", "str", None, "one pair of the class, by the names of its sites",
+       label=True),
+    _v("pair_first", "pair_class", "i4", "1", "index along site of the first site of this pair"),
+    _v("pair_second", "pair_class", "i4", "1", "index along site of its second site",
+       note="equal to the first in a class of single sites"),
+    _v("pair_count", "pair_class", "i4", "1", "number of pairs in the class"),
+    _v("site_name", "site", "str", None, "name of the site", label=True),
+    _v("class_of_pair", "site other_site", "i4", "1", "index along pair_class of a pair's class"),
+    _v("correlation", _PAIRS, "f8", "1", "thermal average of S_i . S_j over the class"),
+    *(_v(f"correlation_{a}{a}", _PAIRS, "f8", "1",
+         f"thermal average of S^{a}_i S^{a}_j over the class", required=False) for a in "xyz"),
+    _v("wave_vector", "q direction", "f8", "1", "wave vector in reciprocal lattice units",
+       required=False,
+       note="times 2 pi it gives the phase of a site at a place in units of the cell's vectors"),
+    _v("structure_factor", _WAVES, "f8", "1", "static structure factor", required=False,
+       note="(1/N) sum over all pairs of sites of exp(i q.(r_i - r_j)) <S_i . S_j>"),
+    *(_v(f"structure_factor_{a}{a}", _WAVES, "f8", "1",
+         f"static structure factor of the {a} components", required=False) for a in "xyz"),
+)  # fmt: skip
 REGISTRY: dict[str, dict[str, Variable]] = {
     kind: {v.name: v for v in table}
     for kind, table in (
@@ -259,5 +282,6 @@ REGISTRY: dict[str, dict[str, Variable]] = {
         ("curves", _CURVES),
         ("fit", _FIT),
         ("comparison", _COMPARISON),
+        ("correlations", _CORRELATIONS),
     )
 }

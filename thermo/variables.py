@@ -1,10 +1,10 @@
 """The registry of every variable in every file; it builds and checks the datasets.
 
-Four kinds of file: ``levels`` (a solved spectrum), ``curves`` (its thermodynamics), ``fit`` and
-``comparison`` (rival candidates fitted to the same points); their tables are in
-``thermo.variable_tables``. Each holds CF-1.11 root attributes, and ``content`` = its kind. On
-disk molar quantities are SI: "cm3 mol-1" would read as 10⁻⁶ m³/mol to a units library, 4π wrong
-for a CGS susceptibility.
+Five kinds of file: ``levels`` (a solved spectrum), ``curves`` (its thermodynamics),
+``correlations``, ``fit`` and ``comparison`` (rival candidates fitted to the same points); their
+tables are in ``thermo.variable_tables``. Each holds CF-1.11 root attributes, and ``content`` =
+its kind. On disk molar quantities are SI: "cm3 mol-1" would read as 10⁻⁶ m³/mol to a units
+library, 4π wrong for a CGS susceptibility.
 """
 
 from __future__ import annotations
@@ -58,12 +58,14 @@ REQUIRED_ATTRS: dict[str, tuple[str, ...]] = {
     "curves": ("energy_unit", "units_system", "per"),
     "fit": ("energy_unit",),
     "comparison": ("energy_unit", "verdict", "conclusion"),
+    "correlations": ("energy_unit", "n_sites", "model_text", "model_digest"),
 }
 _TITLES = {
     "levels": "Energy levels of a spin cluster",
     "curves": "Thermodynamics of a spin cluster",
     "fit": "Fit of a spin cluster to measured curves",
     "comparison": "Rival spin clusters fitted to the same measured points",
+    "correlations": "Thermal correlations of a spin cluster",
 }
 _COMMENTS = {
     "levels": "Each level stands for `weight` states of the whole cluster.",
@@ -71,6 +73,8 @@ _COMMENTS = {
     "fit": "Each dataset is given in its own units, which dataset_units names; "
     "temperatures are in K and fields in T unless the model is dimensionless.",
     "comparison": "Each dataset is given in its own units, which dataset_units names.",
+    "correlations": "Spins are counted in units of hbar, moments and form factors left out; "
+    "averages are not reduced by those of the single spins.",
 }
 
 
@@ -136,6 +140,14 @@ def build_comparison(arrays: Mapping[str, Any], attrs: Mapping[str, Any]) -> xr.
     sentence) and conclusion ("preferred", "undecided", "none" or "single").
     """
     return _build("comparison", arrays, attrs)
+
+
+def build_correlations(arrays: Mapping[str, Any], attrs: Mapping[str, Any]) -> xr.Dataset:
+    """A correlations dataset; ``arrays`` maps the names in REGISTRY["correlations"] to arrays.
+
+    ``attrs`` needs energy_unit, n_sites, model_text and model_digest.
+    """
+    return _build("correlations", arrays, attrs)
 
 
 def _build(kind: str, arrays: Mapping[str, Any], attrs: Mapping[str, Any]) -> xr.Dataset:
@@ -306,7 +318,7 @@ def validate(dataset: xr.Dataset, kind: str) -> None:
         if known is None:
             raise FileFormatError(f"not a Partita {kind} file: unknown variable {key}")
         _check(known, found, dataset.attrs)
-    if kind == "curves":
+    if kind in ("curves", "correlations"):
         _check_axes(dataset)
     if kind == "levels":
         _check_sampled(dataset)

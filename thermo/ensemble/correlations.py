@@ -49,3 +49,20 @@ def level_averages(table: LevelTable, values: Array, temperature: Array, field: 
         share /= share.sum(axis=1, keepdims=True)
         found[:, :, b] = np.einsum("tg,tgp->pt", share, mean)
     return found
+
+
+def structure_weights(
+    of_pair: NDArray[np.int64], places: Array, wave_vectors: Array, n_classes: int
+) -> Array:
+    """Weights (Q, K) with S(q) = Σ_k weight[q, k] ⟨S_i·S_j⟩_k, S(q) = (1/N) Σ_ij cos(2π q·(r_i −
+    r_j)) ⟨S_i·S_j⟩.
+
+    ``of_pair`` (N, N) the class of each pair, ``places`` (N, D) in units of the cell's vectors,
+    ``wave_vectors`` (Q, D) in units of their reciprocals. Cost: N² cosines for each q.
+    """
+    angle = 2 * np.pi * wave_vectors @ places.T
+    flat, n = of_pair.ravel(), len(places)
+    found = np.empty((len(angle), n_classes))
+    for k, a in enumerate(angle):
+        found[k] = np.bincount(flat, np.cos(a[:, None] - a[None]).ravel(), n_classes) / n
+    return found

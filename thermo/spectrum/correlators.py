@@ -19,7 +19,7 @@ from thermo.model.spin_model import Bond, Ion, SpinModel
 from thermo.spectrum import planning
 from thermo.spectrum.full import FullSolver
 from thermo.spectrum.memory import memory_limit
-from thermo.symmetry.interaction import RELATIVE_TOLERANCE, conserved, interaction
+from thermo.symmetry.interaction import RELATIVE_TOLERANCE, interaction
 from thermo.symmetry.pairs import PairClasses, pair_classes
 from thermo.symmetry.sectors import plan_symmetry
 
@@ -45,11 +45,6 @@ class CorrelatedLevels:
     table: LevelTable
     classes: PairClasses
     values: dict[str, NDArray[np.float64]]
-
-
-def is_isotropic(model: SpinModel) -> bool:
-    """Whether every term of H is isotropic, so that ⟨SᵃᵢSᵃⱼ⟩ = ⟨S_i·S_j⟩/3 without a field."""
-    return conserved(interaction(model)).total_spin
 
 
 def correlated_levels(
