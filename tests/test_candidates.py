@@ -478,3 +478,30 @@ def test_a_trend_within_the_errors_speaks_against_these(tmp_path):
     ).candidates
     assert not only.adequate
     assert "follow a trend" in only.remark
+
+
+def test_dimensionless_rivals_are_compared_and_reported(tmp_path):
+    t = np.geomspace(0.1, 5, 40)
+    chi = 1.1025 * 4 / t / (3 + np.exp(1 / t))  # per ion, g = 2.1, J = 1
+    content = rival_study(tmp_path, t, chi, 0.05 * chi, ("dimer", "uniform chain"))
+    for entry in content["candidate"]:
+        entry["model"] |= {"energy_unit": "1", "couplings": {"J": 0.8}}
+        entry["parameters"] = {"J": {"lower": 0.1, "upper": 3.0}, "g": {"lower": 1.0}}
+    content["data"][0]["units"] = "1"
+    content["instrument"] = [
+        {
+            "quantity": "magnetization",
+            "units": "1",
+            "temperature": [0.1, 2],
+            "field": [0, 3],
+            "absolute_uncertainty": 0.5,
+        }
+    ]
+    found = compare(content, profiles="none")
+    assert found.best.name == "dimer"
+    fits = {c.name: c.result.to_dataset() for c in found.candidates}
+    thermo.html_report(fits, tmp_path / "r.html", found.to_dataset())
+    text = (tmp_path / "r.html").read_text()
+    assert " K " not in text[text.index("<main>") : text.index("Where this comes from")]
+    for proposal in found.proposals:
+        assert "magnetization at T = " in str(proposal)

@@ -94,9 +94,10 @@ class Proposal:
     def __str__(self) -> str:
         """In a sentence or two."""
         i = self.instrument
-        at = f"{plain(self.temperature, 3)} K"
+        kelvin, tesla = ("", "") if i.units == "1" else (" K", " T")
+        at = f"{'T = ' if i.units == '1' else ''}{plain(self.temperature, 3)}{kelvin}"
         if i.field[1] > 0:
-            at += f" and {plain(self.field, 3)} T"
+            at += f" and {'B = ' if i.units == '1' else ''}{plain(self.field, 3)}{tesla}"
         unit = "" if i.units == "1" else f" {i.units}".replace("muB", "μB")
         if i.per == "formula":
             unit += " per formula unit"
