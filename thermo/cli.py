@@ -39,6 +39,7 @@ from thermo.options import (
     CheckpointFile,
     ExactStates,
     FullBelow,
+    KeepFolder,
     Memory,
     Method,
     MethodWord,
@@ -290,6 +291,7 @@ def fit(
     ] = None,
     picture: PictureFile = None,
     report: ReportFile = None,
+    keep: KeepFolder = None,
     memory: Memory = None,
     threads: Threads = None,
 ) -> None:
@@ -304,7 +306,7 @@ def fit(
     _set_threads(threads)
     from thermo.fit_command import run_fit
 
-    run_fit(study, output, picture, report, memory)
+    run_fit(study, output, picture, report, memory, keep)
 
 
 @app.command()

@@ -16,7 +16,12 @@ if TYPE_CHECKING:
 
 
 def run_fit(
-    study: Path, output: Path | None, picture: Path | None, report: Path | None, memory: str | None
+    study: Path,
+    output: Path | None,
+    picture: Path | None,
+    report: Path | None,
+    memory: str | None,
+    keep: Path | None = None,
 ) -> None:
     """Fit a study, print the result, and write the files asked for."""
     from thermo.fit.candidates import read_rivals
@@ -25,9 +30,9 @@ def run_fit(
     for notes in dict.fromkeys(one.model.notes for one in rivals.studies):
         tell_notes(notes)
     if len(rivals.studies) > 1:
-        result, fits = _compare(rivals, memory)
+        result, fits = _compare(rivals, memory, keep)
     else:
-        result, fits = _fit_one(rivals, memory)
+        result, fits = _fit_one(rivals, memory, keep)
     if output is not None:
         import thermo
 
@@ -45,23 +50,27 @@ def run_fit(
         confirm(f"wrote {report}")
 
 
-def _fit_one(rivals: Rivals, memory: str | None) -> tuple[xr.Dataset, Mapping[str, xr.Dataset]]:
+def _fit_one(
+    rivals: Rivals, memory: str | None, keep: Path | None
+) -> tuple[xr.Dataset, Mapping[str, xr.Dataset]]:
     from thermo.fit import fit
     from thermo.report import print_fit
 
     problem = rivals.studies[0]
-    found = work(lambda progress: fit(problem, progress=progress, memory=memory))
+    found = work(lambda progress: fit(problem, progress=progress, memory=memory, cache=keep))
     result = found.to_dataset()
     print_fit(result)
     tell_notes(found.cautions)
     return result, {rivals.names[0]: result}
 
 
-def _compare(rivals: Rivals, memory: str | None) -> tuple[xr.Dataset, Mapping[str, xr.Dataset]]:
+def _compare(
+    rivals: Rivals, memory: str | None, keep: Path | None
+) -> tuple[xr.Dataset, Mapping[str, xr.Dataset]]:
     from thermo.fit.candidates import compare
     from thermo.report import print_comparison
 
-    found = work(lambda progress: compare(rivals, progress=progress, memory=memory))
+    found = work(lambda progress: compare(rivals, progress=progress, memory=memory, cache=keep))
     result = found.to_dataset()
     print_comparison(result)
     told = list(found.cautions)

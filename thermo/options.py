@@ -116,6 +116,10 @@ PictureFile = Annotated[
         "--picture", metavar="FILE", help="Picture of data, fit and residuals (.png .svg .pdf)."
     ),
 ]
+KeepFolder = Annotated[
+    Path | None,
+    typer.Option("--keep", metavar="FOLDER", help="Keeps spectra there for later fits."),
+]
 ReportFile = Annotated[
     Path | None,
     typer.Option("--report", metavar="FILE", help="The whole report as one page (.html)."),

@@ -249,11 +249,12 @@ def compare(
     memory: int | float | str | None = None,
     starts: int = FURTHER_STARTS,
     profiles: str = "auto",
+    cache: str | os.PathLike[str] | None = None,
 ) -> Comparison:
     """Fit every candidate of a study to the same points and say what the data decide.
 
-    ``progress``, ``memory``, ``starts`` and ``profiles`` as for ``fit``, the last for candidates
-    left standing. Cost: one or two fits for each candidate, and for each left standing two
+    ``progress``, ``memory``, ``starts``, ``profiles`` and ``cache`` as for ``fit``, the profiles for
+    candidates left standing. Cost: one or two fits for each candidate, and for each left standing two
     diagonalisations and its profiles.
     Raises what ``fit`` raises, with the candidate's name.
     """
@@ -270,7 +271,7 @@ def compare(
             return None
         return lambda done, text: progress((k + done) / count, f"{rivals.names[k]}: {text}")
 
-    fits = [single_fit(solver, told(k), starts) for k, solver in enumerate(solvers)]
+    fits = [single_fit(solver, told(k), starts, cache) for k, solver in enumerate(solvers)]
     alone = [
         fit_in_window(study, fit_once, memory)
         for study, fit_once in zip(rivals.studies, fits, strict=True)
