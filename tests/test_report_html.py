@@ -232,6 +232,26 @@ def test_only_fits_and_their_own_comparison_are_reported(rivals, tmp_path):
     assert list(tmp_path.iterdir()) == []
 
 
+def test_the_page_of_a_file_is_that_of_the_fit(dimer_fit, tmp_path):
+    thermo.write(dimer_fit, tmp_path / "fit.nc")
+    a, _ = report(dimer_fit, tmp_path / "a.html")
+    b, _ = report(thermo.read(tmp_path / "fit.nc"), tmp_path / "b.html")
+    assert a == b
+
+
+def test_profile_intervals_are_shown_and_cited(tmp_path):
+    fit = samples.fit()
+    for end, shift in (("lower", -1.0), ("upper", 1.5)):
+        for level, width in (("68", 1), ("95", 2)):
+            ends = np.full(fit.sizes["parameter"], np.nan)
+            ends[0] = 40.12 + shift * width
+            fit[f"{end}_{level}"] = ("parameter", ends)
+    _, page = report(fit, tmp_path / "r.html")
+    assert "39.1 to 41.6" in page.text
+    assert "38.1 to 43.1" in page.text
+    assert "James and M. Roos" in page.text
+
+
 def test_the_page_is_the_same_every_time(dimer_fit, tmp_path):
     report(dimer_fit, tmp_path / "a.html")
     report(dimer_fit, tmp_path / "b.html")

@@ -21,6 +21,7 @@ _FIT = (
     "Runs of the residuals: A. Wald and J. Wolfowitz, Ann. Math. Stat. 11, 147 (1940); "
     "correlation of neighbours: J. Durbin and G. S. Watson, Biometrika 37, 409 (1950).",
 )
+_PROFILES = "Profile intervals: F. James and M. Roos, Comput. Phys. Commun. 10, 343 (1975)."
 _COMPARISON = (
     "Corrected Akaike criterion: H. Akaike, IEEE Trans. Autom. Control 19, 716 (1974); "
     "C. M. Hurvich and C.-L. Tsai, Biometrika 76, 297 (1989).",
@@ -28,12 +29,17 @@ _COMPARISON = (
 )
 
 
-def citations(attrs: Mapping[str, Any], comparison: bool) -> list[str]:
-    """One entry for each method a fit (its root attributes) or a comparison rests on."""
+def citations(attrs: Mapping[str, Any], comparison: bool, profiles: bool = False) -> list[str]:
+    """One entry for each method a fit (its root attributes) or a comparison rests on.
+
+    ``profiles``: the fit has profile intervals.
+    """
     version = str(attrs.get("source", "partita"))
     found = [f"Program: {version[:1].upper() + version[1:]}."]
     found.append(_SAMPLED if attrs.get("method") == "sampled" else _FULL)
     found += _FIT
+    if profiles:
+        found.append(_PROFILES)
     if comparison:
         found += _COMPARISON
     return [*found, *_ALWAYS]

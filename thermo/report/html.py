@@ -98,9 +98,9 @@ def _document(fits: Mapping[str, xr.Dataset], comparison: xr.Dataset | None) -> 
             section(name, tables.parameters(fits[name]), level=3) for name in others
         )  # fmt: skip
         body.append(section("Ruled out", details("Their parameters at the best fit", inside)))
-    body.append(
-        section("How to cite", bullets(citations(best.attrs, several)), _own_words())
-    )  # fmt: skip
+    profiled = any(tables.profiled(fit) for fit in fits.values())
+    cited = bullets(citations(best.attrs, several, profiled))
+    body.append(section("How to cite", cited, _own_words()))  # fmt: skip
     body.append(section("Where this comes from", *_provenance(fits, source, several)))
     body.append("</main>")
     return page(esc(title), "\n".join(part for part in body if part))

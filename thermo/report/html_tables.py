@@ -112,12 +112,17 @@ def sets(fit: xr.Dataset) -> str:
     return table("", heads, rows) + (paragraph(note, "soft") if tested else "")
 
 
+def profiled(fit: xr.Dataset) -> bool:
+    """Whether any profile interval was found."""
+    ends = [name for name in ("lower_95", "upper_95") if name in fit]
+    return any(bool(np.isfinite(fit[name].values).any()) for name in ends)
+
+
 def parameters(fit: xr.Dataset) -> str:
     """Every parameter with its error, unit, start and bounds."""
-    profiled = any(name in fit and bool(np.isfinite(fit[name].values).any())
-                   for name in ("lower_95", "upper_95"))  # fmt: skip
+    profiles = profiled(fit)
     heads = [Cell("parameter"), Cell("value", True), Cell("unit")]
-    heads += [Cell("68 %", True), Cell("95 %", True)] if profiled else []
+    heads += [Cell("68 %", True), Cell("95 %", True)] if profiles else []
     heads += [Cell("start", True), Cell("bounds"), Cell("")]
     rows = []
     for n, name in enumerate(fit["parameter_name"].values):
@@ -138,7 +143,7 @@ def parameters(fit: xr.Dataset) -> str:
                 Cell(str(name)),
                 Cell(valued(float(fit["value"][n]), float(fit["standard_error"][n])), True),
                 Cell("" if unit == "1" else unit),
-                *([Cell(_interval(fit, n, level), True) for level in (68, 95)] if profiled else []),
+                *([Cell(_interval(fit, n, level), True) for level in (68, 95)] if profiles else []),
                 Cell(number(float(fit["start"][n]), 5) if free else "", True),
                 Cell(_bounds(fit, n) if free else ""),
                 Cell(remark),
