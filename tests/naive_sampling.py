@@ -167,5 +167,5 @@ def several_lanczos(diagonal, vectors, steps, rng):
         w -= alpha[j][:, None] * v
         b = np.linalg.norm(w, axis=1)
         beta[j] = b
-        u, v = v, w / b[:, None]
+        u, v = v, w / np.where(b > 0, b, 1.0)[:, None]
     return r, alpha, beta, dots

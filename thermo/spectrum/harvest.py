@@ -34,12 +34,13 @@ Vector = NDArray[np.float64]
 CONVERGED = 1e-9
 # Ritz values closer than this (in the same unit) belong to one eigenvalue.
 SAME_LEVEL = 1e-8
-# A normalised Gram matrix of random projections is singular below this, regular above. Rounding
-# leaves 1e-8 at most; with one state too many the smallest eigenvalue is of order one, and falls
-# below this once in several million.
-SINGULAR = 1e-7
-# Halves of a Gram matrix that differ by more were found by recursions that lost their way.
-ASYMMETRIC = 1e-5
+# Eigenvalues of a normalised Gram matrix of random projections below the first are zero, above
+# the second not, between them it cannot tell. Rounding leaves 1e-8 as a rule, more where a
+# projection is faint beside that on a close neighbour; eigenvalues that are not zero are of
+# order one, and fall below the first once in several million.
+SINGULAR, REGULAR = 1e-7, 1e-5
+# The halves of a Gram matrix are found independently: they differ as it errs.
+ASYMMETRIC = 1e-6
 # A projection shorter than this (squared) is known too badly to count states with.
 FAINT = 1e-13
 
@@ -120,7 +121,10 @@ def _degeneracy(members: Sequence[tuple[Ritz, _Cluster]]) -> int | None:
     gram /= np.outer(norm, norm)
     if np.abs(gram - gram.conj().T).max() > ASYMMETRIC:
         return None
-    rank = int(np.sum(np.linalg.eigvalsh((gram + gram.conj().T) / 2) > SINGULAR))
+    eigenvalue = np.linalg.eigvalsh((gram + gram.conj().T) / 2)
+    rank = int(np.sum(eigenvalue > REGULAR))
+    if np.sum(eigenvalue > SINGULAR) > rank:
+        return None
     return rank if 0 < rank < size else None
 
 
