@@ -29,8 +29,7 @@ def export_csv(
     units_system: str | None = None,
     what: str | Sequence[str] | None = None,
 ) -> None:
-    """Write a curves, levels, fit or comparison dataset as CSV to a path (whole or not at all) or
-    a stream.
+    """Write a dataset of any kind as CSV to a path (whole or not at all) or a stream.
 
     Curves: one row for each temperature and field, values to 7 significant digits (the file
     holds all) and 0 below 10⁻³⁰ of their column's largest; ``units_system`` converts molar ones
@@ -39,8 +38,9 @@ def export_csv(
     (number of states), S or M where resolved, block, and of sampled levels the random vector (−1:
     exact), one row each. A fit: ``what`` is
     "points" (the default: data, prediction and residual of each) or "parameters". A comparison:
-    "candidates" (the default), "parameters", "points" or "next", what to measure. A missing value
-    is an empty cell. Raises FileFormatError, UnavailableError or UnitsError.
+    "candidates" (the default), "parameters", "points" or "next", what to measure. Correlations:
+    "pairs" (the default) or "structure", S(q). A missing value is an empty cell. Raises
+    FileFormatError, UnavailableError or UnitsError.
     """
     header, rows = _table(dataset, units_system, what)
     if isinstance(target, str | os.PathLike):
@@ -70,7 +70,8 @@ def _table(
         return _curves(dataset, chosen)
     tables = _TABLES.get(kind)
     if tables is None:
-        raise FileFormatError("only levels, curves, fit and comparison datasets can be exported")
+        known = ", ".join(["curves", *_TABLES])
+        raise FileFormatError(f"only datasets of these kinds can be exported: {known}")
     if units_system is not None:
         raise UnitsError(f"a {kind} file is exported in its own units; leave the units out")
     name = ",".join(chosen) or next(iter(tables))
@@ -241,8 +242,49 @@ def _next(found: xr.Dataset) -> Table:
     )
 
 
+def _correlation_pairs(found: xr.Dataset) -> Table:
+    """One row for each pair class, temperature and field: one class after the other."""
+    kinds = [n for n in ("", "_xx", "_yy", "_zz") if f"correlation{n}" in found]
+    header = ["pair", "pairs alike", *_grid_heads(found), *(f"correlation{n}" for n in kinds)]
+    columns = [found[f"correlation{n}"].values for n in kinds]
+    count = found["pair_count"].values
+    return header, (
+        [str(name), str(count[k]), *point, *(_number(c[i, j, k], _CURVE_DIGITS) for c in columns)]
+        for k, name in enumerate(found["pair_name"].values)
+        for i, j, point in _grid_points(found)
+    )
+
+
+def _structure_factor(found: xr.Dataset) -> Table:
+    """One row for each wave vector, temperature and field: all of one grid point together."""
+    if "structure_factor" not in found:
+        why = found.attrs.get("structure_factor_unavailable", "compute it again")
+        raise UnavailableError(f"the file holds no structure factor: {why}")
+    kinds = [n for n in ("", "_xx", "_yy", "_zz") if f"structure_factor{n}" in found]
+    q = found["wave_vector"].values
+    header = [*_grid_heads(found), *("hkl"[: q.shape[1]]), *(f"structure_factor{n}" for n in kinds)]
+    columns = [found[f"structure_factor{n}"].values for n in kinds]
+    return header, (
+        [*point, *map(_number, q[k]), *(_number(c[i, j, k], _CURVE_DIGITS) for c in columns)]
+        for i, j, point in _grid_points(found)
+        for k in range(len(q))
+    )
+
+
+def _grid_heads(found: xr.Dataset) -> list[str]:
+    return [_head(n, str(found[n].attrs["units"])) for n in ("temperature", "field")]
+
+
+def _grid_points(found: xr.Dataset) -> Iterator[tuple[int, int, list[str]]]:
+    """All temperatures of one field together."""
+    for j, b in enumerate(found["field"].values):
+        for i, t in enumerate(found["temperature"].values):
+            yield i, j, [_number(t), _number(b)]
+
+
 _TABLES: dict[str, dict[str, Callable[[xr.Dataset], Table]]] = {
     "levels": {"levels": _levels},
+    "correlations": {"pairs": _correlation_pairs, "structure": _structure_factor},
     "fit": {"points": _points, "parameters": _parameters},
     "comparison": {
         "candidates": _candidates,

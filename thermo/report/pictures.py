@@ -15,6 +15,7 @@ from matplotlib.ticker import MaxNLocator
 from thermo.errors import FileFormatError, RangeError, UnavailableError
 from thermo.report import style
 from thermo.report.comparison_picture import draw_comparison
+from thermo.report.correlation_picture import draw_correlations
 from thermo.report.fit_picture import draw_fit
 from thermo.report.numbers import grouped, typeset
 from thermo.report.quantities import (
@@ -44,12 +45,13 @@ def plot(
     title: str | None = None,
     scale: str | None = None,
 ) -> None:
-    """Draw a curves, levels, fit or comparison dataset into a .png, .svg or .pdf file.
+    """Draw a dataset of any kind into a .png, .svg or .pdf file.
 
     ``what`` chooses the panels: for curves one or several (a list, or names with commas) of
     specific_heat, specific_heat_over_T, entropy, susceptibility, chi_T, magnetization (over the
     field), internal_energy, free_energy; for a fit the name of a data set; for a comparison the
-    same, or "next", what to measure; for levels "levels" or "density". All there is by default.
+    same, or "next", what to measure; for levels "levels" or "density"; for correlations "pairs" or
+    "structure". All there is by default.
     ``units_system`` converts molar curves to "molar-si" or "molar-cgs". ``scale`` "linear" or
     "log" sets the temperature axis; by default it is linear for evenly spaced temperatures and
     logarithmic for geometric ones, or others that span over 1.5 decades. Raises FileFormatError,
@@ -59,7 +61,8 @@ def plot(
     chosen = names(what)
     kind = str(dataset.attrs.get("content"))
     if kind not in _DRAWN:
-        raise FileFormatError("only levels, curves, fit and comparison datasets can be drawn")
+        known = ", ".join(_DRAWN)
+        raise FileFormatError(f"only datasets of these kinds can be drawn: {known}")
     if scale not in (None, "linear", "log"):
         raise RangeError(f"the scale {scale!r} is unknown; use linear or log")
     if scale is not None and kind == "levels":
@@ -288,4 +291,5 @@ _DRAWN: dict[str, Any] = {
     "levels": _draw_levels,
     "fit": draw_fit,
     "comparison": draw_comparison,
+    "correlations": draw_correlations,
 }
