@@ -17,7 +17,8 @@ A study that lists rivals has no ``model``; its keys, besides those of ``thermo.
                                       which then add in quadrature
 
 All candidates are fitted to the same points: those that the window of trust of every one of them
-leaves. They are weighed by the corrected Akaike criterion (Akaike, IEEE Trans. Autom. Control 19,
+leaves, and then, should some fall there, those that the windows of the others leave. They are
+weighed by the corrected Akaike criterion (Akaike, IEEE Trans. Autom. Control 19,
 716 (1974); Hurvich and Tsai, Biometrika 76, 297 (1989)) and the Bayesian one (Schwarz, Ann. Stat.
 6, 461 (1978)). With n points, k free parameters and stated uncertainties, AICc = χ² + 2k +
 2k(k+1)/(n−k−1) and BIC = χ² + k ln n; without, χ² becomes n ln(RSS/n) and the scatter counts as
@@ -50,7 +51,7 @@ from thermo.fit.result import FitResult
 from thermo.fit.starts import FURTHER_STARTS
 from thermo.fit.strict import Section, did_you_mean
 from thermo.fit.study import Content, Study, build_study, load_content
-from thermo.fit.trust import chance_of, cut_alike, fit_in_window
+from thermo.fit.trust import SharedCut, chance_of, cut_alike, fit_in_window, shared_cut
 from thermo.fit.verdict import conclude
 from thermo.model import read_model
 
@@ -253,9 +254,9 @@ def compare(
 ) -> Comparison:
     """Fit every candidate of a study to the same points and say what the data decide.
 
-    ``progress``, ``memory``, ``starts``, ``profiles`` and ``cache`` as for ``fit``, the profiles for
-    candidates left standing. Cost: one or two fits for each candidate, and for each left standing two
-    diagonalisations and its profiles.
+    ``progress``, ``memory``, ``starts``, ``profiles`` and ``cache`` as for ``fit``, the profiles
+    for candidates left standing. Cost: one or two fits for each candidate, and for each left
+    standing two diagonalisations and its profiles.
     Raises what ``fit`` raises, with the candidate's name.
     """
     if isinstance(starts, bool) or not isinstance(starts, int) or not 0 <= starts <= 1000:
@@ -276,9 +277,14 @@ def compare(
         fit_in_window(study, fit_once, memory)
         for study, fit_once in zip(rivals.studies, fits, strict=True)
     ]
-    results, cautions = cut_alike(rivals.names, rivals.studies, alone, fits)
-    ranked = _ranked(rivals.names, results)
-    candidates, conclusion, verdict = conclude(ranked)
+    fallen: dict[str, Candidate] = {}
+    shared: SharedCut | None = None
+    while (now := shared_cut(rivals.names, alone, fallen)) != shared:
+        shared = now
+        results = cut_alike(rivals.studies, alone, fits, shared)
+        candidates, conclusion, verdict = conclude(_ranked(rivals.names, results, fallen))
+        # What fell on the points that every window leaves no longer costs the others points.
+        fallen |= {c.name: c for c in candidates if not c.standing and conclusion != "none"}
     candidates = [
         replace(c, result=add_profiles(c.result, profiles, told(rivals.names.index(c.name))))
         if c.standing
@@ -298,13 +304,24 @@ def compare(
         conclusion,
         verdict,
         proposals,
-        tuple(cautions),
+        tuple(shared.cautions(rivals.studies[0]) if shared else ()),
     )
 
 
-def _ranked(names: Sequence[str], results: Sequence[FitResult]) -> list[Candidate]:
-    """The candidates with their criteria and residual tests, the lowest criterion first."""
-    aicc, bic = zip(*(criteria(result) for result in results), strict=True)
+def _ranked(
+    names: Sequence[str], results: Sequence[FitResult], fallen: Mapping[str, Candidate]
+) -> list[Candidate]:
+    """The candidates with their criteria and residual tests, the lowest criterion first.
+
+    Those that have ``fallen`` on fewer points stay at least as far above the others.
+    """
+    known = [criteria(result) for result in results]
+    alive = [k for k, name in enumerate(names) if name not in fallen]
+    least_aicc, least_bic = (min(known[k][i] for k in alive) for i in (0, 1))
+    aicc = [max(a, least_aicc + fallen[n].aicc) if n in fallen else a
+            for n, (a, _) in zip(names, known, strict=True)]  # fmt: skip
+    bic = [max(b, least_bic + fallen[n].bic) if n in fallen else b
+           for n, (_, b) in zip(names, known, strict=True)]  # fmt: skip
     found = []
     for k, (name, result) in enumerate(zip(names, results, strict=True)):
         runs, watson = {}, {}

@@ -57,7 +57,7 @@ class Minimum:
 
 
 @dataclass(frozen=True, eq=False)
-class _End:
+class End:
     """Where one start led."""
 
     theta: Vector
@@ -116,9 +116,9 @@ def _minimise(problem: Problem, starts: int, always: bool) -> Minimum:
     )
 
 
-def _lowest(problem: Problem, starts: int, always: bool) -> tuple[_End, int, str]:
+def _lowest(problem: Problem, starts: int, always: bool) -> tuple[End, int, str]:
     """The lowest end of all starts tried, how many these were, and how it was reached."""
-    best = _settle(problem, problem.parameters.start)
+    best = settle(problem, problem.parameters.start)
     doubtful = _doubtful(problem, best)
     others = further_starts(problem.parameters, starts) if doubtful or always else []
     if not others:
@@ -141,7 +141,7 @@ def _lowest(problem: Problem, starts: int, always: bool) -> tuple[_End, int, str
     return best, 1 + len(others), f"{best.message}; {tried} and {outcome}"
 
 
-def _doubtful(problem: Problem, end: _End) -> bool:
+def _doubtful(problem: Problem, end: End) -> bool:
     parameters, sets = problem.parameters, problem.sets
     couplings = [
         problem.forward.couplings(parameters.values(t)) for t in (parameters.start, end.theta)
@@ -165,35 +165,44 @@ def _height(problem: Problem, theta: Vector, k: int, count: int) -> float:
     return chi_square if math.isfinite(chi_square) else math.inf
 
 
-def _follow(problem: Problem, start: Vector, to_beat: float) -> _End | None:
+def _follow(problem: Problem, start: Vector, to_beat: float) -> End | None:
     """Where a further start leads, or None: not lower, or to where the model has no value."""
     try:
         theta, _, _ = descend(problem, start, (), TOLERANCE_FOLLOWING, EVALUATIONS_FOLLOWING)
         rough = problem.residuals(theta)
         if not rough @ rough < (1 - LOWER) * to_beat:
             return None
-        return _settle(problem, theta)
+        return settle(problem, theta)
     except StudyError:
         return None
 
 
-def _settle(problem: Problem, start: Vector) -> _End:
+def settle(
+    problem: Problem,
+    start: Vector,
+    held: tuple[int, ...] = (),
+    tolerance: float = TOLERANCE,
+    evaluations: int = MAX_EVALUATIONS,
+) -> End:
     """Trust-region reflective least squares (Branch, Coleman and Li 1999, as in SciPy).
 
     Parameters that end at a bound are put on it and the others are fitted again, so the result is
-    a minimum on that bound and not one that still creeps towards it.
+    a minimum on that bound and not one that still creeps towards it. Those ``held`` stay as they
+    are.
     """
     lower, upper = problem.parameters.bounds
-    theta, converged, message = descend(problem, start, ())
+    theta, converged, message = descend(problem, start, held, tolerance, evaluations)
     bound = np.zeros(len(theta), dtype=np.int64)
     for _ in range(len(theta)):
         new = _pushed(problem, theta, bound, lower, upper)
+        new[list(held)] = 0
         if not np.any(new):
             break
         bound += new
         theta = np.where(bound < 0, lower, np.where(bound > 0, upper, theta))
-        theta, converged, message = descend(problem, theta, tuple(np.flatnonzero(bound)))
-    return _End(theta, bound, problem.residuals(theta), converged, message)
+        fixed = (*np.flatnonzero(bound).tolist(), *held)
+        theta, converged, message = descend(problem, theta, fixed, tolerance, evaluations)
+    return End(theta, bound, problem.residuals(theta), converged, message)
 
 
 def descend(

@@ -4,8 +4,9 @@ A parameter's profile is χ² minimised over all others; its interval of level p
 profile has risen by the quantile of χ² with one degree of freedom (Venzon and Moolgavkar, Appl.
 Stat. 37, 87 (1988)). Unlike the standard error it knows of curvature and of bounds. Least squares
 with one parameter held find it in some 5 evaluations for each end, since they know the exact
-slopes of every point; where they do not, MINOS of Minuit is asked (James and Roos, Comput. Phys.
-Commun. 10, 343 (1975), by iminuit), which knows the slopes of χ² only and takes 15 times as many.
+slopes of every point; where they do not, and the study asks for the interval, MINOS of Minuit has
+a try (James and Roos, Comput. Phys. Commun. 10, 343 (1975), by iminuit), which knows the slopes of
+χ² only and takes 15 times as many.
 """
 
 from __future__ import annotations
@@ -19,7 +20,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from thermo.errors import StudyError
-from thermo.fit.minimise import descend
+from thermo.fit.minimise import settle
 from thermo.fit.problem import Problem, make_problem
 from thermo.fit.result import RISE, FitResult, Interval
 
@@ -31,15 +32,15 @@ NEAR = 3.0
 STRONG = 0.95
 # Profiles nobody asked for may take so many seconds, at so many evaluations each.
 PATIENCE = 20.0
-EVALUATIONS = 30
+EVALUATIONS = 60
 # A profile ends within this share of its rise.
 CLOSE = 2e-3
 STEPS = 14
 # From so many standard errors on, an end counts as infinite.
 FAR = 1e3
 TOLERANCE = 1e-6
-# Calls of χ² that MINOS may take where least squares found no end.
-CALLS = 300
+# Evaluations that MINOS may take where least squares found no end.
+CALLS = 1000
 
 
 def add_profiles(
@@ -130,7 +131,8 @@ def _profile(
     scale = result.scatter
     found, better = held(problem, theta, k, result, scale)
     lost = any(math.isnan(end) for i in found for end in (i.lower, i.upper))
-    if lost and not better and not result.at_bound:
+    asked = result.free_names[k] in result.study.asked
+    if lost and asked and not better and not result.at_bound:
         return minos(problem, theta, k, result, scale) or (found, False)
     return found, better
 
@@ -146,7 +148,11 @@ def minos(
 
     names = list(result.free_names)
 
+    until = problem.n_evaluations + CALLS
+
     def cost(x: Vector) -> float:
+        if problem.n_evaluations > until:
+            raise RuntimeError("no end in sight")
         residuals = problem.residuals(np.asarray(x, dtype=np.float64))
         return float(residuals @ residuals) / scale**2
 
@@ -163,10 +169,10 @@ def minos(
         fit.limits[name] = (low[n], high[n])
         fit.errors[name] = result[name].standard_error
     try:
-        fit.migrad(ncall=CALLS)
+        fit.migrad()
         intervals = []
         for level in RISE:
-            fit.minos(names[k], cl=level, ncall=CALLS)
+            fit.minos(names[k], cl=level)
             ends = fit.merrors[names[k]]
             if ends.lower_new_min or ends.upper_new_min:
                 return (), True
@@ -229,7 +235,7 @@ def _end(
     reach = abs(bound - theta[k])
     if reach == 0:
         return float(bound), True, start, False
-    inner, outer = 0.0, math.inf
+    inner, outer = (0.0, 0.0), (math.inf, math.inf)  # (distance, root of the rise) either side
     size = max(abs(start[k] - theta[k]), wanted * error)
     at = start
     for _ in range(STEPS):
@@ -239,8 +245,8 @@ def _end(
         trial = at.copy()
         trial[k] = theta[k] + sign * size
         try:
-            trial, _, _ = descend(problem, trial, (k,), TOLERANCE, 30)
-            residuals = problem.residuals(trial)
+            end = settle(problem, trial, (k,), TOLERANCE, 30)
+            trial, residuals = end.theta, end.residuals
         except StudyError:
             return math.nan, False, at, False
         rise = float(residuals @ residuals) - bottom
@@ -253,10 +259,14 @@ def _end(
         if root < wanted:
             if size >= reach:
                 return float(bound), True, at, False
-            inner = size
+            inner = (size, root)
         else:
-            outer = size
-        size = size * wanted / root if root > 0.05 * wanted else 2 * size
-        if not inner < size < outer:
-            size = (inner + outer) / 2 if math.isfinite(outer) else 2 * inner
+            outer = (size, root)
+        if math.isinf(outer[0]):
+            size = size * wanted / root if root > 0.05 * wanted else 2 * size
+            size = max(size, 1.05 * inner[0])
+            continue
+        # A little inside the straight line between the two, so that both ends close in.
+        share = (wanted - inner[1]) / (outer[1] - inner[1])
+        size = inner[0] + min(max(share, 0.05), 0.95) * (outer[0] - inner[0])
     return math.nan, False, at, False
