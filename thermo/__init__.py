@@ -19,6 +19,7 @@ from thermo import errors
 
 if TYPE_CHECKING:
     from thermo.correlating import correlations
+    from thermo.directions import directional_curves
     from thermo.ensemble import curves
     from thermo.fit import fit, read_study
     from thermo.fit.candidates import compare
@@ -39,6 +40,7 @@ __all__ = [
     "compare",
     "correlations",
     "curves",
+    "directional_curves",
     "errors",
     "export_csv",
     "export_latex",
@@ -60,6 +62,7 @@ _HOMES = {
     "compare": ("thermo.fit.candidates", "compare"),
     "correlations": ("thermo.correlating", "correlations"),
     "curves": ("thermo.ensemble", "curves"),
+    "directional_curves": ("thermo.directions", "directional_curves"),
     "export_csv": ("thermo.report", "export_csv"),
     "export_latex": ("thermo.report", "export_latex"),
     "fit": ("thermo.fit", "fit"),

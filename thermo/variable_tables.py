@@ -80,6 +80,12 @@ _CURVES = (
        required=False),
     _v("magnetization", _GRID, "f8", "@moment", "magnetic moment along the field",
        required=False),
+    # Of curves along a stated direction, in the frame of the model's matrices:
+    *(_v(f"magnetization_{a}", _GRID, "f8", "@moment",
+         f"component of the magnetic moment along {a}", required=False) for a in "xyz"),
+    *(_v(f"susceptibility_{ab}", _GRID, "f8", "@susceptibility",
+         f"change of the magnetic moment along {ab[0]} with the field along {ab[1]}",
+         required=False) for ab in ("xx", "yy", "zz", "xy", "xz", "yz")),
 )  # fmt: skip
 _EXCLUDED = (
     _v("excluded_temperature", "excluded_point", "f8", "@temperature",

@@ -27,6 +27,8 @@ SYMBOLS = {
     "magnetization": "M",
     "internal_energy": "U",
     "free_energy": "F",
+    **{f"susceptibility_{ab}": rf"\chi_{{{ab}}}" for ab in ("xx", "yy", "zz", "xy", "xz", "yz")},
+    **{f"magnetization_{a}": f"M_{a}" for a in "xyz"},
 }
 #: derived quantity -> (stored one, power of T it is multiplied by)
 DERIVED = {"chi_T": ("susceptibility", 1), "specific_heat_over_T": ("specific_heat", -1)}
@@ -87,6 +89,8 @@ def unit_of(curves: xr.Dataset, name: str) -> str:
     if energy == "1":
         return "1"
     moment = "muB2"
+    if "_" in stored and stored.split("_")[0] in MAGNETIC:  # a component has the whole's unit
+        name = stored.split("_")[0]
     return {
         "internal_energy": energy,
         "free_energy": energy,
@@ -161,11 +165,17 @@ def per_note(attrs: Any) -> str:
     text = share(attrs)
     if attrs.get("units_system") == "reduced" and attrs.get("energy_unit") == "1":
         text += ", $k_B = \\mu_B = 1$"
-    if along_z(attrs):
-        text += ", B \u2225 z"
+    if direction := direction_note(attrs):
+        text += f", {direction}"
     if "error_unavailable" in attrs:
         return text + ", sampled by one vector: no error bars"
     return text + (", sampled: bands are standard errors" if "standard_errors" in attrs else "")
+
+
+def direction_note(attrs: Any) -> str:
+    """Where the field points, "B ∥ z" or "powder"; nothing where all directions are alike."""
+    axis = str(attrs.get("field_direction", "any"))
+    return {"any": "", "powder": "powder"}.get(axis, f"B \u2225 {axis}")
 
 
 def along_z(attrs: Any) -> bool:

@@ -24,6 +24,7 @@ from thermo.report.quantities import (
     along_z,
     by_scatter,
     dataset_per,
+    direction_note,
     quantity,
     share,
     unit_of,
@@ -327,4 +328,6 @@ def print_curves(curves: xr.Dataset, console: Console | None = None) -> None:
     direction = []
     if magnetic and along_z(curves.attrs):
         direction.append("B \u2225 z: the field, susceptibility and magnetization are along z.")
+    elif magnetic and (note := direction_note(curves.attrs)):
+        direction.append(f"{note}.")
     show(console, sheet, *direction)
