@@ -30,6 +30,7 @@ from thermo.arguments import (
     parse_grid,
     parse_range,
 )
+from thermo.correlations_command import run_correlations
 from thermo.errors import FileFormatError, PartitaError, RangeError
 from thermo.messages import confirm, note, say, tell_notes
 from thermo.options import (
@@ -57,7 +58,7 @@ from thermo.options import (
     Vectors,
     Workers,
 )
-from thermo.process import catch_signals, drop, ending, open_streams
+from thermo.process import catch_signals, drop, ending, open_streams, set_threads
 from thermo.progress import Interrupted, keeping, work
 
 if TYPE_CHECKING:
@@ -102,8 +103,8 @@ def _partita(
 ) -> None:
     """Finite-temperature thermodynamics of interacting spins.
 
-    From a model file to its spectrum (survey, solve), from the spectrum to curves (curves, plot,
-    export), from measured curves to exchange constants (fit).
+    From a model file to its spectrum (survey, solve) or its spins' correlations, from the spectrum
+    to curves (curves, plot, export), from measured curves to exchange constants (fit).
     """
     if context.invoked_subcommand is None:
         print(context.get_help())
@@ -176,7 +177,7 @@ def solve(
     check_source(model)
     check_target(output, (".nc",), sources=(model,))
     kept = check_checkpoint(checkpoint, output, model)
-    _set_threads(threads)
+    set_threads(threads)
     import thermo
     from thermo.spectrum.checkpoint import discard
 
@@ -282,6 +283,9 @@ def curves(
         confirm(f"wrote {output}: {len(temperatures)} temperatures × {len(fields)} fields")
 
 
+app.command("correlations")(run_correlations)
+
+
 @app.command()
 def fit(
     study: Annotated[Path, typer.Argument(metavar="STUDY", help="Study file (TOML).")],
@@ -303,7 +307,7 @@ def fit(
         check_target(picture, PICTURES, sources=(study,))
     if report is not None:
         check_target(report, (".html", ".htm"), sources=(study,))
-    _set_threads(threads)
+    set_threads(threads)
     from thermo.fit_command import run_fit
 
     run_fit(study, output, picture, report, memory, keep)
@@ -365,7 +369,8 @@ def export(
         typer.Option(
             metavar="NAMES",
             help='Columns of curves, for example "specific_heat,chi_T"; of a fit: points (default) '
-            "or parameters; of a comparison: candidates (default), parameters, points or next.",
+            "or parameters; of a comparison: candidates (default), parameters, points or next; of "
+            "correlations: pairs (default) or structure.",
         ),
     ] = None,
     units: Annotated[
@@ -403,15 +408,7 @@ def _read(file: Path, kind: str | None = None) -> xr.Dataset:
     }.get(file.suffix.lower())
     if advice is not None:
         raise FileFormatError(f"{file} {advice}")
-
     return thermo.read(file, kind)
-
-
-def _set_threads(threads: int | None) -> None:
-    """Bound every thread pool; they read these when they are first loaded."""
-    if threads is not None:
-        pools = ("OMP_NUM_THREADS", "OPENBLAS_NUM_THREADS", "NUMBA_NUM_THREADS")
-        os.environ.update(dict.fromkeys(("PARTITA_THREADS", *pools), str(threads)))
 
 
 # ---------------------------------------------------------------- faults to sentences

@@ -108,7 +108,8 @@ Workers = Annotated[
     typer.Option(metavar="N", help="Work in N processes of this machine, through Dask."),
 ]
 AnyFile = Annotated[
-    Path, typer.Argument(metavar="FILE", help="Curves, fit, comparison or levels file.")
+    Path,
+    typer.Argument(metavar="FILE", help="Curves, correlations, fit, comparison or levels file."),
 ]
 PictureFile = Annotated[
     Path | None,

@@ -70,3 +70,10 @@ def drop(stream: TextIO) -> None:
         null = os.open(os.devnull, os.O_WRONLY)
         os.dup2(null, stream.fileno())
         os.close(null)
+
+
+def set_threads(threads: int | None) -> None:
+    """Bound every thread pool; they read these when they are first loaded."""
+    if threads is not None:
+        pools = ("OMP_NUM_THREADS", "OPENBLAS_NUM_THREADS", "NUMBA_NUM_THREADS")
+        os.environ.update(dict.fromkeys(("PARTITA_THREADS", *pools), str(threads)))
