@@ -3,9 +3,9 @@
 from __future__ import annotations
 
 import functools
-import glob
 import os
 import re
+import signal
 import sys
 import tempfile
 import threading
@@ -206,13 +206,13 @@ def told(process: psutil.Process) -> str:
 
 
 @pytest.fixture
-def nothing_left() -> Iterator[None]:
+def nothing_left(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> Iterator[None]:
     """No process, no folder and no changed environment is left by a run."""
-    pattern = os.path.join(tempfile.gettempdir(), "partita-workers-*")
-    before, environment = set(glob.glob(pattern)), settings_of_environment()
+    monkeypatch.setattr(tempfile, "tempdir", str(tmp_path))
+    environment = settings_of_environment()
     children = set(psutil.Process().children(recursive=True))
     yield
-    assert set(glob.glob(pattern)) == before
+    assert list(tmp_path.glob("partita-workers-*")) == []
     assert settings_of_environment() == environment
     # The interpreter's own process that tracks shared resources stays; killed ones may take a
     # moment to vanish.
@@ -232,6 +232,31 @@ def test_a_worker_killed_in_its_task(tmp_path: Path, how: str) -> None:
         assert right(found, SIX)
         assert kept.keys() == sorted(p.key for p in SIX)
     assert run_pieces(SIX, pieces.solve).keys() == found.keys()
+
+
+@pytest.mark.usefixtures("nothing_left")
+def test_workers_that_cannot_be_started_again(monkeypatch: pytest.MonkeyPatch) -> None:
+    import distributed
+
+    clusters: list[Any] = []
+
+    class Watched(distributed.LocalCluster):  # type: ignore[misc]
+        def __init__(self, **options: Any) -> None:
+            super().__init__(**options)
+            clusters.append(self)
+
+    def progress(fraction: float, _text: str) -> None:
+        if fraction > 0:
+            for nanny in clusters.pop().workers.values() if clusters else ():
+                nanny.close_gracefully()
+                os.kill(nanny.pid, signal.SIGKILL)
+
+    monkeypatch.setattr(distributed, "LocalCluster", Watched)
+    monkeypatch.setattr(cluster, "OWN_SECONDS", 1)
+    monkeypatch.setattr(cluster, "_LOOK", 0.2)
+    slow = functools.partial(pieces.slow_after, number=0)
+    with pytest.raises(WorkerError, match="cannot be started again"):
+        run_pieces(SIX, slow, executor=Distributed(workers=1), progress=progress)
 
 
 @pytest.mark.usefixtures("nothing_left")
@@ -267,7 +292,7 @@ def test_faults_and_stops_of_a_cluster(tmp_path: Path) -> None:
     with LocalCluster(
         n_workers=1,
         threads_per_worker=2,
-        dashboard_address=None,
+        dashboard_address="127.0.0.1:0",
         local_directory=str(tmp_path),
         env={"PARTITA_THREADS": "3"},
         silence_logs=60,
@@ -290,6 +315,7 @@ def test_faults_and_stops_of_a_cluster(tmp_path: Path) -> None:
                 progress=progress,
             )
         assert time.monotonic() - started < 3
+        assert len(running.scheduler.tasks) <= 2  # those at hand; all others were given up
 
 
 @pytest.mark.usefixtures("as_it_was")
@@ -299,7 +325,7 @@ def test_a_lost_scheduler(tmp_path: Path) -> None:
     running = LocalCluster(
         n_workers=1,
         threads_per_worker=1,
-        dashboard_address=None,
+        dashboard_address="127.0.0.1:0",
         local_directory=str(tmp_path / "w"),
         silence_logs=60,
     )

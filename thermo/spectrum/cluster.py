@@ -29,6 +29,7 @@ if TYPE_CHECKING:
 
 CONNECT_SECONDS = 10
 CLOSE_SECONDS = 5
+OWN_SECONDS = 60
 _POLL = 0.1
 _LOOK = 2.0  # seconds between looks at who is working
 _FETCH_SECONDS = 60
@@ -55,13 +56,11 @@ def in_cluster(
                 _task, solve, piece, threads, version, pure=False, priority=-index
             )
             futures[future] = index
-        try:
-            labels = [piece.label for piece in pieces]
-            for future, result in _finished(client, futures, labels, beat):
-                yield futures.pop(future), result
-        finally:
-            with contextlib.suppress(Exception):
-                client.cancel(list(futures))
+        # Whatever is not fetched is given up when the client closes.
+        own = executor.workers is not None
+        labels = [piece.label for piece in pieces]
+        for future, result in _finished(client, futures, labels, beat, own):
+            yield futures.pop(future), result
 
 
 def _task(
@@ -142,7 +141,7 @@ def _client(executor: Distributed) -> Iterator[tuple[Any, int | None]]:
                 threads_per_worker=1,
                 processes=True,
                 host="127.0.0.1",
-                dashboard_address=None,
+                dashboard_address="127.0.0.1:0",  # else a second cluster is told of the port
                 local_directory=folder,
                 memory_limit=0,  # planned before the run; a killed worker would only try again
                 silence_logs=logging.CRITICAL + 1,
@@ -172,7 +171,7 @@ def _restore(environment: Mapping[str, str]) -> None:
 def _end(cluster: Any) -> None:
     """End our own workers at once: a piece at hand is done again, and would take its time."""
     for nanny in cluster.workers.values():
-        nanny.auto_restart = False
+        nanny.close_gracefully()  # it would start another worker else
         with contextlib.suppress(OSError, TypeError):  # has ended already, or never began
             os.kill(nanny.pid, signal.SIGKILL)
     cluster.close(timeout=CLOSE_SECONDS)
@@ -197,12 +196,17 @@ def _finished(
     futures: Mapping[Any, int],
     labels: Sequence[str],
     beat: Callable[[str], None],
+    own: bool,
 ) -> Iterator[tuple[Any, Arrays]]:
-    """Futures with their arrays as they finish, with a heartbeat while none does."""
+    """Futures with their arrays as they finish, with a heartbeat while none does.
+
+    Workers of a scheduler may come and go; our ``own`` are missed when they are not started again.
+    """
     from distributed import as_completed
 
     waiting, left = as_completed(list(futures), loop=client.loop), len(futures)
-    looked, note = time.monotonic(), ""
+    looked = manned = time.monotonic()
+    note = ""
     while left:
         batch = waiting.next_batch(block=False)
         for future in batch:
@@ -216,7 +220,15 @@ def _finished(
             continue
         if time.monotonic() - looked > _LOOK:
             looked = time.monotonic()
-            note = "" if client.nthreads() else "no worker has come yet"
+            if client.nthreads():
+                manned, note = looked, ""
+            elif own and looked - manned > OWN_SECONDS:
+                raise WorkerError(
+                    "the processes for the work have ended and cannot be started again; free "
+                    "memory or ask for fewer workers"
+                )
+            else:
+                note = "no worker is there"
         beat(note)
         time.sleep(_POLL)
 
