@@ -418,3 +418,25 @@ def test_dimensionless_rivals_are_compared_and_reported(tmp_path):
     assert " K " not in text[text.index("<main>") : text.index("Where this comes from")]
     for proposal in found.proposals:
         assert "magnetization at T = " in str(proposal)
+
+
+def test_what_has_fallen_no_longer_costs_the_others_points(tmp_path):
+    """A frustrated chain shows its size far up; once it has fallen where all can be trusted, the
+    others are compared on what their own windows leave."""
+    model = network("uniform chain", 12)
+    model["couplings"] = {"J": 60.0, "K": 10.0}
+    model["lattice"] = {**model["lattice"], "couplings": {"nearest": "J", "next": "K"}}
+    chi = chain_chi(70.0, 28.0)
+    error = 0.002 * chi
+    content = rival_study(tmp_path, T, noisy(chi, error, 0), error, ("alternating chain", "ladder"))
+    pair = compare(content, profiles="none")
+    content["candidate"].append(
+        {"name": "frustrated", "model": model, "parameters": parameters("ladder")}
+    )
+    found = compare(content, profiles="none")
+    assert not found["frustrated"].standing
+    assert found["frustrated"].result.window.lower["chi"] > found.best.result.window.lower["chi"]
+    assert found.best.name == pair.best.name == "alternating chain"
+    assert found.best.result.n_points == pair.best.result.n_points
+    assert {c.result.n_points for c in found.candidates} == {found.best.result.n_points}
+    assert found.cautions == pair.cautions

@@ -284,7 +284,8 @@ def compare(
         results = cut_alike(rivals.studies, alone, fits, shared)
         candidates, conclusion, verdict = conclude(_ranked(rivals.names, results, fallen))
         # What fell on the points that every window leaves no longer costs the others points.
-        fallen |= {c.name: c for c in candidates if not c.standing and conclusion != "none"}
+        if conclusion in ("preferred", "undecided"):
+            fallen |= {c.name: c for c in candidates if not c.standing}
     candidates = [
         replace(c, result=add_profiles(c.result, profiles, told(rivals.names.index(c.name))))
         if c.standing

@@ -13,7 +13,7 @@ from __future__ import annotations
 
 import contextlib
 import math
-from collections.abc import Callable, Mapping, Sequence
+from collections.abc import Callable, Container, Mapping, Sequence
 from dataclasses import dataclass, fields, replace
 from typing import Any
 
@@ -139,34 +139,58 @@ def find_relative(study: Study, memory: int | float | str | None = None) -> Rela
     return None
 
 
+@dataclass(frozen=True)
+class SharedCut:
+    """Where the points of rival fits begin: the edge of each data set, in K, and whose it is."""
+
+    edges: Mapping[str, float]
+    owners: Mapping[str, str]
+
+    def cautions(self, study: Study) -> list[str]:
+        """What to tell of the points it leaves out."""
+        told = []
+        for data in study.sets:
+            edge = self.edges[data.name]
+            lost = int(np.count_nonzero(data.temperature < edge))
+            if lost:
+                below = f", below {kelvin(edge, '' if study.reduced else 'K')},"
+                told.append(
+                    f"{lost} of {data.n_points} points of {data.name!r}"
+                    + (below if math.isfinite(edge) else "")
+                    + " were left out for all candidates: there the size of the cluster of "
+                    f"{self.owners[data.name]!r} shows"
+                )
+        return told
+
+
+def shared_cut(
+    names: Sequence[str], results: Sequence[FitResult], fallen: Container[str]
+) -> SharedCut:
+    """The highest edges of all rivals' windows, but for those named in ``fallen``.
+
+    A rival whose χ² in its own window is beyond all chance has fallen already, and takes no points
+    from the others, as long as another has not.
+    """
+    windows = {n: r.window for n, r in zip(names, results, strict=True) if r.window is not None}
+    alive = [n for n, r in zip(names, results, strict=True) if not chance_of(r) < HOPELESS]
+    counted = [n for n in alive if n not in fallen] or [n for n in names if n not in fallen]
+    sets = next(iter(windows.values())).cut
+    owners = {s: max(counted, key=lambda n: windows[n].cut[s]) for s in sets}
+    return SharedCut({s: windows[owner].cut[s] for s, owner in owners.items()}, owners)
+
+
 def cut_alike(
-    names: Sequence[str],
     studies: Sequence[Study],
     results: Sequence[FitResult],
     fits: Sequence[FitOnce],
-) -> tuple[list[FitResult], list[str]]:
-    """Rival fits brought to the same points, those that every one's window leaves, with cautions.
+    shared: SharedCut,
+) -> list[FitResult]:
+    """Rival fits brought to the same points, those from the shared edges on.
 
-    A rival whose χ² in its own window is beyond all chance has fallen already, and takes no points
-    from the others, as long as another has not. All studies hold the same data sets. Raises
-    StudyError where no points are left.
+    All studies hold the same data sets. Raises StudyError where no points are left.
     """
     windows = [result.window or without_edge(s) for result, s in zip(results, studies, strict=True)]
-    alive = [not chance_of(r) < HOPELESS for r in results]
-    counted = [k for k, lives in enumerate(alive) if lives] or list(range(len(results)))
-    cut, told = {}, []
-    for data in studies[0].sets:
-        cuts = [windows[k].cut[data.name] for k in counted]
-        cut[data.name] = max(cuts)
-        lost = int(np.count_nonzero(data.temperature < max(cuts)))
-        if lost:
-            below = f", below {kelvin(max(cuts), windows[0].unit)},"
-            told.append(
-                f"{lost} of {data.n_points} points of {data.name!r}"
-                + (below if math.isfinite(max(cuts)) else "")
-                + " were left out for all candidates: there the size of the cluster of "
-                f"{names[counted[cuts.index(max(cuts))]]!r} shows"
-            )
+    cut = dict(shared.edges)
     found = []
     for study, result, window, fit_once in zip(studies, results, windows, fits, strict=True):
         told_alone = window_cautions(study, window)
@@ -196,7 +220,7 @@ def cut_alike(
                 cautions=(*fitted.cautions, *kept),
             )
         )
-    return found, told
+    return found
 
 
 def chance_of(result: FitResult) -> float:
