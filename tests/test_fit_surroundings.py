@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+import subprocess
 
 import mpmath
 import numpy as np
@@ -10,6 +11,7 @@ import pytest
 
 import thermo
 from tests import fitting
+from tests.conftest import command_path
 from tests.fitting import CURIE, MODEL, MU_B, R, dimer_chi, dimer_heat, dimer_moments, write_csv
 from thermo import errors
 from thermo.fit import fit, read_study
@@ -427,3 +429,17 @@ def test_spectra_kept_on_disk_serve_the_next_fit(tmp_path):
 def test_the_constants_of_the_molecular_field():
     assert pytest.approx(thermo.units.CURIE_EMU, rel=1e-9) == CURIE
     assert fitting.CURIE == CURIE
+
+
+def test_the_command_keeps_spectra(tmp_path):
+    study = fitting.write_dimer(tmp_path)
+    command = [command_path(), "fit", str(study), "--keep", str(tmp_path / "kept")]
+    for _ in range(2):
+        done = subprocess.run(command, capture_output=True, text=True, timeout=120)
+        assert done.returncode == 0, done.stderr
+        assert len(list((tmp_path / "kept").glob("spectrum-*.npz"))) == 1
+    command[-1] = str(study)
+    done = subprocess.run(command, capture_output=True, text=True, timeout=120)
+    assert done.returncode == 4
+    assert done.stderr.count("\n") == 1
+    assert "spectra cannot be kept there" in done.stderr
