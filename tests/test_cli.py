@@ -130,7 +130,9 @@ def test_help_documents_every_exit_code(partita: Command) -> None:
 
 
 @pytest.mark.parametrize("width", [80, 120])
-@pytest.mark.parametrize("command", ["", "survey", "solve", "curves", "fit", "plot", "export"])
+@pytest.mark.parametrize(
+    "command", ["", "survey", "solve", "curves", "correlations", "fit", "plot", "export"]
+)
 def test_help_fits_the_terminal(partita: Command, command: str, width: int) -> None:
     environment = {**os.environ, "COLUMNS": str(width)}
     done = partita(*command.split(), "--help", env=environment)

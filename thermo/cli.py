@@ -299,7 +299,7 @@ def fit(
     memory: Memory = None,
     threads: Threads = None,
 ) -> None:
-    """Fit exchange constants to measured curves; rivals are compared."""
+    """Fit exchange constants to measured curves; compare rivals."""
     check_source(study)
     if output is not None:
         check_target(output, (".nc",), sources=(study,))
@@ -377,7 +377,7 @@ def export(
         Units | None, typer.Option(help="Units of the curves; default: those of the file.")
     ] = None,
 ) -> None:
-    """Write the table in a file as CSV, units in its header, or LaTeX."""
+    """Write a file's table as CSV, units in its header, or LaTeX."""
     check_source(file)
     if output is not None:
         check_target(output, (".csv", ".tex"), sources=(file,))
