@@ -35,7 +35,7 @@ Vector = NDArray[np.float64]
 #: Fits a study; the flag says that it starts where an earlier fit ended.
 FitOnce = Callable[[Study, bool], FitResult]
 
-# A larger cluster is cheap up to so many states and seconds.
+# A larger cluster is cheap up to so many states and seconds of all its blocks.
 CHEAP_STATES = 2**17
 CHEAP_SECONDS = 3.0
 MOST_SECONDS = 60.0
@@ -123,7 +123,7 @@ def find_relative(study: Study, memory: int | float | str | None = None) -> Rela
     """A larger cluster of the lattice where that is cheap, else the largest smaller one that can be
     diagonalised in a minute (of a sampled cluster the next may not); None for neither."""
     from thermo.spectrum.full import FullSolver
-    from thermo.spectrum.planning import time_needed
+    from thermo.spectrum.planning import block_cost
 
     if not can_resize(study.model):
         return None
@@ -133,7 +133,8 @@ def find_relative(study: Study, memory: int | float | str | None = None) -> Rela
         limit = CHEAP_SECONDS if found is bigger else MOST_SECONDS
         with contextlib.suppress(MemoryLimitError):
             solver = FullSolver(found, memory)
-            if time_needed(solver.plan) <= limit:
+            # On a reference machine: the same cluster, and result, whatever else this one does.
+            if sum(block_cost(s.dimension, s.real) for s in solver.plan.sectors) <= limit:
                 return Relative(found, make_forward(replace(study, model=found), solver))
         found = smaller(study.model if found is bigger else found)
     return None
