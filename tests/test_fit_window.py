@@ -251,3 +251,13 @@ def test_the_command_tells_of_points_left_out_and_of_none_left(partita, tmp_path
     # The same numbers from a molecule, which has no other size, are fitted whole.
     (tmp_path / "ring.toml").write_text("finite = true\n" + head + ring)
     assert partita("fit", "study.toml", "-o", "molecule.nc").returncode == 0
+
+
+def test_a_busy_machine_chooses_the_same_other_cluster(tmp_path, long_chain, monkeypatch):
+    from thermo.fit.trust import find_relative
+
+    found = read_study(study(tmp_path, long_chain, 0.003 * long_chain))
+    quick = find_relative(found)
+    monkeypatch.setattr("thermo.spectrum.planning._speed_factor", lambda: 1e6)
+    slow = find_relative(found)
+    assert len(quick.model.sites) == len(slow.model.sites) == 10
