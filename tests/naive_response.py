@@ -39,8 +39,13 @@ def response(spins, bonds, ions, g, temperature, field):
 def responses(spins, bonds, ions, g, temperatures, field):
     """The same at several temperatures, from one diagonalisation."""
     matrix = naive.hamiltonian(spins, bonds, ions, field=field, g=g)
+    return canonical(matrix, moments(spins, g), temperatures)
+
+
+def canonical(matrix, operators, temperatures):
+    """The same for any H and its dense moments."""
     energy, vectors = np.linalg.eigh(matrix)
-    x = [vectors.conj().T @ m @ vectors for m in moments(spins, g)]
+    x = [vectors.conj().T @ m @ vectors for m in operators]
     difference = energy[None, :] - energy[:, None]
     upper = np.triu(np.ones_like(difference), 1)
     found = []
