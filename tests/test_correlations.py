@@ -237,3 +237,23 @@ def test_any_power_of_ten_of_the_energy_unit(unit):
 def test_too_large_is_refused_beforehand():
     with pytest.raises(MemoryLimitError, match="memory limit"):
         correlated_levels(thermo.read_model(ring(24).mapping()), memory="1 GiB")
+
+
+#: Ground-state energies of rings, in J: Bethe's equations.
+BETHE = {8: -3.651093409, 10: -4.515446354, 12: -5.387390917, 14: -6.263549534}
+
+
+def test_cold_rings_approach_the_infinite_chain():
+    """Bonds have Bethe's energy per site; second neighbours approach Takahashi's value
+    1/4 - 4 ln 2 + (9/4) ζ(3) of the infinite chain (J. Phys. C 10, 1289 (1977); from memory)."""
+    values = []
+    for n, energy in BETHE.items():
+        found = averages(ring(n), temperature=[1e-4])["total"][0]
+        assert found[0, 1] == pytest.approx(energy / n, abs=1e-9)
+        values.append([found[0, 1], found[0, 2]])
+    powers = np.vander(1 / np.array(list(BETHE)) ** 2.0, 3)
+    first, second = np.linalg.lstsq(powers, np.array(values), rcond=None)[0][-1]
+    zeta3 = 1.2020569031595942
+    assert first == pytest.approx(0.25 - np.log(2), rel=1e-4)
+    # Logarithms in 1/N are left out of the fit.
+    assert second == pytest.approx(0.25 - 4 * np.log(2) + 9 / 4 * zeta3, rel=1e-3)
