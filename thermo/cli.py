@@ -31,6 +31,7 @@ from thermo.arguments import (
     parse_range,
 )
 from thermo.correlations_command import run_correlations
+from thermo.directions_command import run_directions
 from thermo.errors import FileFormatError, PartitaError, RangeError
 from thermo.messages import confirm, note, say, tell_notes
 from thermo.options import (
@@ -273,16 +274,15 @@ def curves(
         note(f"no susceptibility and magnetization: {found.attrs['unavailable']}")
     if "error_unavailable" in found.attrs:
         note(f"no error bars: {found.attrs['error_unavailable']}")
-    if output is None:
-        thermo.export_csv(found, sys.stdout)
-    elif output.suffix.lower() == ".csv":
-        thermo.export_csv(found, output)
+    if output is None or output.suffix.lower() == ".csv":
+        thermo.export_csv(found, output or sys.stdout)
     else:
         thermo.write(found, output)
     if output is not None:
         confirm(f"wrote {output}: {len(temperatures)} temperatures × {len(fields)} fields")
 
 
+app.command("directions")(run_directions)
 app.command("correlations")(run_correlations)
 
 

@@ -103,6 +103,14 @@ def read_g(value: object, path: str) -> Matrix:
         tensor = number(value, path) * np.eye(3)
     if not tensor.any():
         raise fault(path, "g is zero, so the site would carry no moment; give its g, such as 2.0")
+    principal = np.linalg.eigvalsh(tensor)
+    if np.abs(principal).min() <= 1e-12 * np.abs(principal).max():
+        shown = ", ".join(f"{round(v, 12) + 0.0:g}" for v in principal)
+        raise fault(
+            path,
+            f"has the principal values {shown}, and a g of zero is improper; give a small number, "
+            "such as 0.001, for a direction that hardly carries a moment",
+        )
     return tensor
 
 

@@ -126,6 +126,12 @@ class MomentSolver:
     def _refuse(self) -> None:
         needed = self._needed()
         if needed > self._limit:
+            if needed < 2 * planning.BASE_BYTES:
+                raise MemoryLimitError(
+                    f"the program itself needs about {size_text(planning.BASE_BYTES)} and this "
+                    f"model {size_text(needed - planning.BASE_BYTES)} more, where the limit is "
+                    f"{size_text(self._limit)}; raise the memory limit"
+                )
             raise MemoryLimitError(
                 f"the largest block with its moments has {planning.grouped(self.largest_block)} "
                 f"states and needs {size_text(needed)} where the limit is "
