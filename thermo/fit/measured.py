@@ -15,9 +15,10 @@ import numpy as np
 from numpy.typing import NDArray
 
 from thermo.errors import DataError, UnitsError
+from thermo.fit.amounts import read_amount
 from thermo.fit.masks import read_masks
 from thermo.fit.strict import Section, did_you_mean
-from thermo.units import molar_twin, quantity_factor, unit_name
+from thermo.units import quantity_factor, unit_name
 
 Vector = NDArray[np.float64]
 
@@ -111,7 +112,7 @@ def read_measured(section: Section, folder: Path, reduced: bool) -> Measured:
     stated = section.has("header")
     temperature_unit = section.text("temperature_unit", "K or mK", "1" if reduced else "K")
     field_unit = section.text("field_unit", "T, mT, Oe or kOe", "1" if reduced else "T")
-    units, per_amount = _amount(section, quantity, units, reduced)
+    units, per_amount = read_amount(section, quantity, units, reduced)
     to_si = _factor(section, "units", quantity, units, reduced)
     to_kelvin = _factor(section, "temperature_unit", "temperature", temperature_unit, reduced)
     to_tesla = _factor(section, "field_unit", "field", field_unit, reduced)
@@ -219,37 +220,6 @@ def read_measured(section: Section, folder: Path, reduced: bool) -> Measured:
         sample=sample,
         scale_error=scale_error,
     )
-
-
-def _amount(section: Section, quantity: str, units: str, reduced: bool) -> tuple[str, float]:
-    """The unit per mole and the factor to it, from ``molar_mass`` [g/mol] and ``mass`` [mg].
-
-    A unit per gram or kilogram needs the molar mass (of what ``per`` counts), one of the whole
-    sample its mass besides; neither goes with a unit that is per mole already.
-    """
-    molar = section.optional_number("molar_mass", "the molar mass in g/mol")
-    mass = section.optional_number("mass", "the sample's mass in mg")
-    for key, number in (("molar_mass", molar), ("mass", mass)):
-        if number is not None and number <= 0:
-            raise section.fail(key, f"= {number:g} must be above zero")
-    twin = None if reduced else molar_twin(quantity, units)
-    if twin is None:
-        for key, number in (("molar_mass", molar), ("mass", mass)):
-            if number is not None:
-                raise section.fail(
-                    key, f"has no part in a value in {units!r}; leave it out or correct units"
-                )
-        return units, 1.0
-    name, kind, factor = twin
-    if molar is None:
-        raise section.fail("molar_mass", f"is missing: a value in {units!r} needs it; give g/mol")
-    if kind == "g":
-        if mass is not None:
-            raise section.fail("mass", f"has no part in a value in {units!r}; leave it out")
-        return name, factor * molar
-    if mass is None:
-        raise section.fail("mass", f"is missing: {units!r} is of the whole sample; give it in mg")
-    return name, factor * molar / (1e-3 * mass)
 
 
 def _factor(section: Section, key: str, quantity: str, unit: str, reduced: bool) -> float:
