@@ -54,7 +54,7 @@ def test_a_checkpoint_that_was_asked_for_stays(partita: Command, ring: Path) -> 
 
 
 BAD = {
-    "steps": (["--steps", "1"], 3, ["steps is 1", "whole number from 2"]),
+    "steps": (["--steps", "1"], 3, ["steps is 1", "whole number from 10"]),
     "steps in words": (["--steps", "many"], 2, ["--steps", "integer"]),
     "vectors": (["--vectors", "0"], 3, ["vectors is 0"]),
     "seed": (["--seed", "-1"], 3, ["seed is -1"]),

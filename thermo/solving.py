@@ -62,6 +62,11 @@ def solve(
     if method not in ("full", "auto", "sampled"):
         raise RangeError(f"method {method!r} is unknown; use 'full', 'sampled' or 'auto'")
     settings = check_sampling(vectors, steps, seed, full_below, exact_states, trace_order, accuracy)
+    if accuracy_range is not None and accuracy is None:
+        raise RangeError(
+            "an accuracy range without an accuracy has no effect; give the accuracy to reach, for "
+            "example 0.01"
+        )
     if method == "auto":
         method = surveying.survey(
             model, memory, vectors=vectors, steps=steps, full_below=full_below

@@ -39,6 +39,8 @@ _HARDLY_FREE = 1 << 20  # bytes
 def write_failure(target: str | os.PathLike[str], error: OSError) -> FileFormatError:
     """The one sentence that tells why a target cannot be written."""
     reason = _REASONS.get(error.errno or 0, f"{error.strerror or error}; choose another place")
+    if error.errno == errno.ENOENT and os.path.isdir(os.path.dirname(os.path.realpath(target))):
+        reason = "that place takes no new files; choose another place"
     name = os.fspath(target)
     shown = name if len(name) <= 300 else name[:296] + " ..."
     return FileFormatError(f"cannot write {shown}: {reason}")

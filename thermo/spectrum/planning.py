@@ -70,11 +70,7 @@ def refuse_if_too_large(plan: SymmetryPlan, limit: int, slopes: bool = False) ->
     if needed <= limit:
         return
     if needed < 2 * BASE_BYTES:
-        raise MemoryLimitError(
-            f"the program itself needs about {size_text(BASE_BYTES)} and this model "
-            f"{size_text(needed - BASE_BYTES)} more, where the limit is {size_text(limit)}; raise "
-            "the memory limit"
-        )
+        raise base_exceeds(needed, limit)
     largest = max(plan.sectors, key=lambda s: block_bytes(s.dimension, s.real))
     size = f"{grouped(largest.dimension)} states ({'real' if largest.real else 'complex'})"
     raise MemoryLimitError(
@@ -82,6 +78,15 @@ def refuse_if_too_large(plan: SymmetryPlan, limit: int, slopes: bool = False) ->
         f"needs {size_text(needed)} where the limit is {size_text(limit)}; take a smaller "
         "cluster, keep more symmetry (equal couplings, isotropic or axial terms), or raise the "
         "memory limit if the machine has more"
+    )
+
+
+def base_exceeds(needed: int, limit: int) -> MemoryLimitError:
+    """The refusal where it is not the model that is too large for the limit."""
+    return MemoryLimitError(
+        f"the program itself needs about {size_text(BASE_BYTES)} and this model "
+        f"{size_text(needed - BASE_BYTES)} more, where the limit is {size_text(limit)}; raise "
+        "the memory limit"
     )
 
 
@@ -124,5 +129,6 @@ def check_model(model: object, caller: str) -> None:
     """Refuse anything but a SpinModel, with the way to get one."""
     if not isinstance(model, SpinModel):
         raise ModelError(
-            f"{caller} takes a model, not {type(model).__name__}; make one with read_model(path)"
+            f"{caller} takes a model, not {type(model).__name__}; make one with read_model(path), "
+            "which takes a mapping as well"
         )

@@ -26,7 +26,7 @@ from thermo.model.level_table import LevelTable, energy_scale
 from thermo.model.spin_model import SpinModel
 from thermo.spectrum import sampling_plan
 from thermo.spectrum.full import FullSolver, energy_bounds
-from thermo.spectrum.harvest import harvest, ritz_pairs
+from thermo.spectrum.harvest import CONVERGED, harvest, ritz_pairs
 from thermo.spectrum.moments import exact_moments, orbit_images
 from thermo.spectrum.sampling_plan import family_size
 from thermo.spectrum.settings import Settings
@@ -83,6 +83,7 @@ class SampledSolver:
         self.model = model
         self.unit = energy_scale(model) or 1.0
         self.threads = threads
+        self.unresolved = 0.0  # of the last table: see _unresolved
         self.families = -(-_given(settings.vectors) // family_size(_given(settings.vectors)))
         # Energies in units of the largest term, so that no power of ten is too large or small.
         scaled = model.with_couplings({n: c / self.unit for n, c in model.couplings.items()})
@@ -256,6 +257,7 @@ class SampledSolver:
         unit_sector: list[int] = []
         moments = np.zeros((len(self.plan.magnetic), _given(self.settings.trace_order) + 1))
         number = 0
+        lowest: list[tuple[float, float]] = []
 
         def add(e: Any, w: Any, sector: int, group: int, unit: int) -> None:
             energy.append(np.asarray(e, dtype=np.float64))
@@ -268,6 +270,10 @@ class SampledSolver:
             mirror = 2.0 if magnetic.sectors[0].mirrored else 1.0
             small = results.get(f"{name}/full", {})
             ritz = dict(self.ritz(magnetic, results))
+            lowest += [
+                (float(r.value[0]), float(r.residual[0]))
+                for families in ritz.values() for family in families for r in family
+            ]  # fmt: skip
             for k, sector in enumerate(magnetic.sectors):
                 if str(k) in small:
                     e = small[str(k)]
@@ -307,8 +313,16 @@ class SampledSolver:
             joined, raw, np.full(len(joined), -1, dtype=np.int64), twice_m,
             self.plan.resolved, self.plan.terms.n_sites,
         )  # fmt: skip
+        self.unresolved = self._unresolved(joined[unit < 0], lowest)
         calibrated = calibrated_table(table, sampling)
         return calibrated.scaled(self.unit), np.concatenate(sector_of)[order]
+
+    def _unresolved(self, exact: NDArray[np.float64], lowest: list[tuple[float, float]]) -> float:
+        """How far the ground state may lie from what was found, in the model's energy unit."""
+        value, residual = min(lowest, default=(np.inf, 0.0))
+        if residual <= CONVERGED * 2 * self.half_width or np.min(exact, initial=np.inf) < value:
+            return 0.0
+        return residual * self.unit
 
     def ritz(
         self, magnetic: MagneticSector, results: Mapping[str, Arrays]

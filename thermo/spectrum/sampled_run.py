@@ -58,7 +58,11 @@ def solve_sampled(
     chosen = check_executor(executor)
     local = isinstance(chosen, Local)
     cores = chosen.workers or thread_count() if isinstance(chosen, Local) else thread_count()
-    cost = sampling_plan.cost(plan, settings, memory_limit(memory), cores)
+    limit = memory_limit(memory)
+    if not isinstance(chosen, Local):
+        # Each process does one piece with what belongs to it.
+        cores, limit = 1, limit // chosen.at_once
+    cost = sampling_plan.cost(plan, settings, limit, cores)
     threads = cost.threads if local else 1
     solver = sampled.SampledSolver(model, settings, threads)
     results: dict[str, sampled.Arrays] = {}
@@ -98,6 +102,13 @@ def solve_sampled(
     }
     if settings.accuracy is not None:
         attrs |= {"accuracy_wanted": settings.accuracy, "accuracy_reached": reached}
+    if solver.unresolved:
+        unit = "" if model.energy_unit == "1" else f" {model.energy_unit}"
+        attrs["caution"] = (
+            f"the ground state has not converged in {settings.steps} steps (residual "
+            f"{solver.unresolved:.2g}{unit}), so curves at temperatures below some ten times that "
+            "are biased beyond their error bars; take more steps"
+        )
     return levels_dataset(model, solver.plan, table, sector, attrs)
 
 

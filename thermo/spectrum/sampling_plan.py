@@ -197,6 +197,8 @@ def cost(plan: SymmetryPlan, settings: Settings, limit: int, cores: int) -> Cost
     while at_once > 1 and needed(at_once) > limit:
         at_once -= 1
     memory = needed(at_once)
+    if memory > limit and memory < 2 * planning.BASE_BYTES:
+        raise planning.base_exceeds(memory, limit)
     if memory > limit:
         largest = max(magnetic, key=lambda m: m.orbits, default=plan.magnetic[0])
         raise MemoryLimitError(

@@ -57,7 +57,7 @@ class Settings:
 # name: (smallest, largest, None allowed, why and what to do)
 _RANGES: Mapping[str, tuple[int, int, bool, str]] = {
     "vectors": (1, LARGEST_COUNT, True, "two or more give error bars"),
-    "steps": (2, LARGEST_COUNT, False, "100 to 300 are usual"),
+    "steps": (10, LARGEST_COUNT, False, "100 to 300 are usual"),
     "seed": (0, LARGEST_SEED, False, "the same seed gives the same levels"),
     "full_below": (0, LARGEST_DIMENSION, True, "0 samples every sector"),
     "exact_states": (0, LARGEST_COUNT, True, "0 takes none, leaving it out all that converge"),
@@ -84,7 +84,13 @@ def check_sampling(
         "trace_order": trace_order,
     }
     checked = {name: _whole(name, value) for name, value in counts.items()}
-    return Settings(**checked, accuracy=None if accuracy is None else _accuracy(accuracy))
+    wanted = None if accuracy is None else _accuracy(accuracy)
+    if wanted is not None and checked["vectors"] == 1:
+        raise RangeError(
+            "an accuracy cannot be reached with families of one vector, which have no error bar; "
+            "leave vectors out or give two or more"
+        )
+    return Settings(**checked, accuracy=wanted)
 
 
 def _whole(name: str, value: Any) -> Any:
