@@ -205,3 +205,17 @@ def test_one_sentence_for_a_mistake(changed, kind, words):
 def test_a_very_long_or_short_axis():
     for size in (1e300, 1e-300):
         assert directions.read_axis([size, 0, size]) == pytest.approx([0.5**0.5, 0, 0.5**0.5])
+
+
+def test_components_that_symmetry_forbids_are_zero():
+    model = read(ring(4, form="ising"), [np.diag([2.0, 2.0, 2.4])] * 4)
+    found = thermo.directional_curves(model, T, [0.0, 0.5], "x", "reduced")
+    for name in ("susceptibility_xy", "susceptibility_xz", "magnetization_y", "magnetization_z"):
+        assert not np.any(found[name].values)
+    assert np.all(found["magnetization_x"].values[:, 1] > 0)
+
+
+def test_improper_arguments_leave_no_other_way_in():
+    """A levels dataset, or nothing, is not a model."""
+    with pytest.raises(thermo.errors.ModelError, match="directional_curves takes a model"):
+        thermo.directional_curves(None, T)

@@ -32,6 +32,8 @@ DEGREES = (5, 9, 15, 21, 31, 41, 53, 71, 95, 131)
 # The finer of two rules that agree to this is taken; its own error is smaller still.
 POWDER_TOLERANCE = 1e-7
 RELATIVE_TOLERANCE = 1e-12
+# Components below this fraction of the largest are rounding, far below the accuracy promised.
+NOISE = 1e-13
 
 Array = NDArray[np.float64]
 Progress = Callable[[float, str], None]
@@ -162,7 +164,7 @@ def directional_curves(
 
 
 def isotropic(model: SpinModel) -> bool:
-    """Whether every exchange tensor is a multiple of one; ions of one kind of direction none."""
+    """Whether every pair and ion tensor is a multiple of the unit matrix."""
     pairs, ions = total_matrices(model)
     matrices = [*pairs.values(), *ions.values()]
     scale = max((float(np.abs(a).max()) for a in matrices), default=0.0)
@@ -351,6 +353,12 @@ def _average(
     return _Point(caloric, mean["magnetization"], mean["susceptibility"]), change, degree
 
 
+def _without_noise(components: Array, axes: tuple[int, ...]) -> Array:
+    """Components that symmetry forbids come out as rounding; they are set to zero."""
+    largest = np.abs(components).max(axis=axes, keepdims=True)
+    return np.where(np.abs(components) <= NOISE * largest, 0.0, components)
+
+
 def _dataset(
     points: list[_Point],
     model: SpinModel,
@@ -368,10 +376,12 @@ def _dataset(
     tensors = [p.tensor for p in points if p.tensor is not None]
     if len(vectors) == len(points):
         for a, letter in enumerate(AXES):
-            values[f"magnetization_{letter}"] = [v[:, a] for v in vectors]
+            values[f"magnetization_{letter}"] = [_without_noise(v, (1,))[:, a] for v in vectors]
     if len(tensors) == len(points):
         for i, j, letters in PAIRS:
-            values[f"susceptibility_{letters}"] = [v[:, i, j] for v in tensors]
+            values[f"susceptibility_{letters}"] = [
+                _without_noise(v, (1, 2))[:, i, j] for v in tensors
+            ]
     share = 1 / len(model.sites)
     if units != "reduced" and per == "formula":
         share *= model.ions_per_formula
