@@ -74,15 +74,16 @@ def mapping_of(given) -> dict:
 def check_statistics(found, seeds: int) -> None:
     """No bias, and as many bars that reach the truth as there should be.
 
-    Where nothing is left to sample, all that is asked is that the floor of the bars holds.
+    Where most seeds have nothing left to sample their bars are at the floor that rounding sets:
+    they may then reach the truth too often, not too seldom.
     """
-    noisy = found.noise > 1e-10
+    noisy = np.median(np.abs(found.deviation), axis=0) / found.exact > 1e-10
     assert noisy.any()
     assert np.abs(found.bias[noisy]).max() < stats.t.ppf(1 - 1e-4, seeds - 1)
     # Of a share p of n seeds: p ± √(p(1−p)/n), four of which no seed should ever leave.
     allowed = 4 * (0.6827 * 0.3173 / seeds) ** 0.5
     assert np.abs(found.coverage[noisy] - 0.6827).max() < allowed
-    assert np.abs(found.deviation[:, ~noisy]).max(initial=0) < 1e-9
+    assert found.coverage.min() > 0.6827 - allowed
 
 
 @pytest.mark.parametrize("name", CLUSTERS)
