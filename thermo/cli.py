@@ -30,9 +30,8 @@ from thermo.arguments import (
     parse_grid,
     parse_range,
 )
-from thermo.correlations_command import run_correlations
-from thermo.directions_command import run_directions
 from thermo.errors import FileFormatError, PartitaError, RangeError
+from thermo.further_commands import COMMANDS
 from thermo.messages import confirm, note, say, tell_notes
 from thermo.options import (
     Accuracy,
@@ -282,8 +281,8 @@ def curves(
         confirm(f"wrote {output}: {len(temperatures)} temperatures × {len(fields)} fields")
 
 
-app.command("directions")(run_directions)
-app.command("correlations")(run_correlations)
+for _name, _run in COMMANDS.items():
+    app.command(_name)(_run)
 
 
 @app.command()
