@@ -21,6 +21,7 @@ if TYPE_CHECKING:
     from thermo.correlating import correlations
     from thermo.directions import directional_curves
     from thermo.ensemble import curves
+    from thermo.ensemble.magnetocaloric import magnetocaloric
     from thermo.fit import fit, read_study
     from thermo.fit.candidates import compare
     from thermo.model import read_model
@@ -46,6 +47,7 @@ __all__ = [
     "export_latex",
     "fit",
     "html_report",
+    "magnetocaloric",
     "plot",
     "read",
     "read_levels",
@@ -67,6 +69,7 @@ _HOMES = {
     "export_latex": ("thermo.report", "export_latex"),
     "fit": ("thermo.fit", "fit"),
     "html_report": ("thermo.report", "html_report"),
+    "magnetocaloric": ("thermo.ensemble.magnetocaloric", "magnetocaloric"),
     "plot": ("thermo.report", "plot"),
     "read": ("thermo.model.level_table", "read_checked"),
     "read_levels": ("thermo.model.level_table", "read_levels"),

@@ -281,6 +281,23 @@ _CORRELATIONS = (
     *(_v(f"structure_factor_{a}{a}", _WAVES, "f8", "1",
          f"static structure factor of the {a} components", required=False) for a in "xyz"),
 )  # fmt: skip
+_MAGNETOCALORIC = (
+    _v("temperature", "temperature", "f8", "@temperature", "temperature"),
+    _v("field", "field", "f8", "@field", "magnetic field B"),
+    _v("entropy_change", _GRID, "f8", "@entropy",
+       "entropy less that at start_field and the same temperature"),
+    _v("isentrope_temperature", _GRID, "f8", "@temperature",
+       "temperature reached from that at start_field with the entropy kept", finite=False,
+       note="missing where no temperature has that entropy"),
+    _v("adiabatic_temperature_change", _GRID, "f8", "@temperature",
+       "temperature reached with the entropy kept less that at start_field", finite=False,
+       note="missing where no temperature has that entropy"),
+    _v("magnetization_slope", _GRID, "f8", "@moment_slope",
+       "change of the magnetic moment with temperature at constant field"),
+    _v("gruneisen_ratio", _GRID, "f8", "@per_field", "magnetic Grueneisen ratio", finite=False,
+       note="-(dM/dT)/C at constant field, equal to (1/T)(dT/dB) at constant entropy; missing "
+       "where the specific heat vanishes"),
+)  # fmt: skip
 REGISTRY: dict[str, dict[str, Variable]] = {
     kind: {v.name: v for v in table}
     for kind, table in (
@@ -289,5 +306,6 @@ REGISTRY: dict[str, dict[str, Variable]] = {
         ("fit", _FIT),
         ("comparison", _COMPARISON),
         ("correlations", _CORRELATIONS),
+        ("magnetocaloric", _MAGNETOCALORIC),
     )
 }

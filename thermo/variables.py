@@ -1,8 +1,9 @@
 """The registry of every variable in every file; it builds and checks the datasets.
 
-Five kinds of file: ``levels`` (a solved spectrum), ``curves`` (its thermodynamics),
-``correlations``, ``fit`` and ``comparison`` (rival candidates fitted to the same points); their
-tables are in ``thermo.variable_tables``. Each holds CF-1.11 root attributes, and ``content`` =
+Six kinds of file: ``levels`` (a solved spectrum), ``curves`` (its thermodynamics),
+``correlations``, ``magnetocaloric`` (what a change of field does), ``fit`` and ``comparison``
+(rival candidates fitted to the same points); their tables are in ``thermo.variable_tables``.
+Each holds CF-1.11 root attributes, and ``content`` =
 its kind. On disk molar quantities are SI: "cm3 mol-1" would read as 10⁻⁶ m³/mol to a units
 library, 4π wrong for a CGS susceptibility.
 """
@@ -36,10 +37,14 @@ _MOLAR_SI = {
     "@entropy": "J mol-1 K-1",
     "@susceptibility": "m3 mol-1",
     "@moment": "A m2 mol-1",
+    "@moment_slope": "A m2 mol-1 K-1",
+    "@per_field": "T-1",
 }
 _SYSTEMS: dict[str, dict[str, str]] = {
     "molar-si": _MOLAR_SI,
-    "molar-cgs": _MOLAR_SI | {"@susceptibility": "emu mol-1", "@moment": "emu mol-1"},
+    "molar-cgs": _MOLAR_SI
+    | {"@susceptibility": "emu mol-1", "@moment": "emu mol-1"}
+    | {"@moment_slope": "emu mol-1 K-1"},
     "reduced": {
         "@temperature": "K",
         "@field": "T",
@@ -47,6 +52,8 @@ _SYSTEMS: dict[str, dict[str, str]] = {
         "@entropy": "1",
         "@susceptibility": "{per_energy}",
         "@moment": "1",
+        "@moment_slope": "K-1",
+        "@per_field": "T-1",
     },
 }
 _PER_ENERGY = {"K": "K-1", "meV": "meV-1", "cm-1": "cm", "1": "1"}
@@ -59,6 +66,7 @@ REQUIRED_ATTRS: dict[str, tuple[str, ...]] = {
     "fit": ("energy_unit",),
     "comparison": ("energy_unit", "verdict", "conclusion"),
     "correlations": ("energy_unit", "n_sites", "model_text", "model_digest"),
+    "magnetocaloric": ("energy_unit", "units_system", "per", "start_field"),
 }
 _TITLES = {
     "levels": "Energy levels of a spin cluster",
@@ -66,6 +74,7 @@ _TITLES = {
     "fit": "Fit of a spin cluster to measured curves",
     "comparison": "Rival spin clusters fitted to the same measured points",
     "correlations": "Thermal correlations of a spin cluster",
+    "magnetocaloric": "What a change of field does to a spin cluster",
 }
 _COMMENTS = {
     "levels": "Each level stands for `weight` states of the whole cluster.",
@@ -75,6 +84,8 @@ _COMMENTS = {
     "comparison": "Each dataset is given in its own units, which dataset_units names.",
     "correlations": "Spins are counted in units of hbar, moments and form factors left out; "
     "averages are not reduced by those of the single spins.",
+    "magnetocaloric": "Molar quantities are per mole of what the attribute `per` names; changes "
+    "are counted from the field `start_field`.",
 }
 
 
@@ -150,6 +161,14 @@ def build_correlations(arrays: Mapping[str, Any], attrs: Mapping[str, Any]) -> x
     return _build("correlations", arrays, attrs)
 
 
+def build_magnetocaloric(arrays: Mapping[str, Any], attrs: Mapping[str, Any]) -> xr.Dataset:
+    """A magnetocaloric dataset; ``arrays`` maps the names in REGISTRY["magnetocaloric"] to arrays.
+
+    ``attrs`` needs energy_unit, units_system, per and start_field.
+    """
+    return _build("magnetocaloric", arrays, attrs)
+
+
 def _build(kind: str, arrays: Mapping[str, Any], attrs: Mapping[str, Any]) -> xr.Dataset:
     root = _root_attributes(kind, attrs)
     columns: dict[str, Any] = {}
@@ -194,7 +213,7 @@ def units_of(variable: Variable, attrs: Mapping[str, Any]) -> str | None:
     energy = str(attrs.get("energy_unit", "K"))
     if rule == "@model_energy":
         return energy
-    if energy == "1" and rule in ("@temperature", "@field"):
+    if energy == "1" and rule in ("@temperature", "@field", "@moment_slope", "@per_field"):
         return "1"
     text = _SYSTEMS[str(attrs.get("units_system", "molar-si"))][rule]
     return text.format(energy=energy, per_energy=_PER_ENERGY[energy])
@@ -207,7 +226,7 @@ def _attributes(variable: Variable, root: Mapping[str, Any]) -> dict[str, Any]:
         attrs["units"] = unit
     attrs["long_name"] = variable.long_name
     note = variable.note
-    if variable.units in ("@energy", "@entropy", "@susceptibility", "@moment"):
+    if variable.units in _SHARED:
         note = _share(variable.units, root)
     if note:
         attrs["comment"] = note
@@ -217,6 +236,9 @@ def _attributes(variable: Variable, root: Mapping[str, Any]) -> dict[str, Any]:
     if variable.ancillary:
         attrs["ancillary_variables"] = variable.ancillary
     return attrs
+
+
+_SHARED = ("@energy", "@entropy", "@susceptibility", "@moment", "@moment_slope")
 
 
 def _share(rule: str, root: Mapping[str, Any]) -> str:
@@ -229,6 +251,7 @@ def _share(rule: str, root: Mapping[str, Any]) -> str:
         "@entropy": "in units of k_B",
         "@susceptibility": "in units of mu_B^2 per energy_unit",
         "@moment": "in units of mu_B",
+        "@moment_slope": "in units of mu_B per unit of temperature",
     }
     return f"per site, {natural[rule]}"
 
@@ -318,7 +341,7 @@ def validate(dataset: xr.Dataset, kind: str) -> None:
         if known is None:
             raise FileFormatError(f"not a Partita {kind} file: unknown variable {key}")
         _check(known, found, dataset.attrs)
-    if kind in ("curves", "correlations"):
+    if kind in ("curves", "correlations", "magnetocaloric"):
         _check_axes(dataset)
     if kind == "levels":
         _check_sampled(dataset)
@@ -386,10 +409,11 @@ def convert_curves(dataset: xr.Dataset, units_system: str) -> xr.Dataset:
     converted = dataset.copy()
     converted.attrs = {**dataset.attrs, "units_system": target}
     for key in dataset.data_vars:
-        variable = lookup("curves", str(key))
+        variable = lookup(str(dataset.attrs["content"]), str(key))
         factor = {
             "@susceptibility": units.CHI_SI_PER_EMU,
             "@moment": units.MOMENT_SI_PER_EMU,
+            "@moment_slope": units.MOMENT_SI_PER_EMU,
         }.get((variable.units or "") if variable else "")
         if variable is None or factor is None:
             continue

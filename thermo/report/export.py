@@ -39,7 +39,8 @@ def export_csv(
     exact), one row each. A fit: ``what`` is
     "points" (the default: data, prediction and residual of each) or "parameters". A comparison:
     "candidates" (the default), "parameters", "points" or "next", what to measure. Correlations:
-    "pairs" (the default) or "structure", S(q). A missing value is an empty cell. Raises
+    "pairs" (the default) or "structure", S(q). Magnetocaloric
+    values: all, one row for each temperature and field. A missing value is an empty cell. Raises
     FileFormatError, UnavailableError or UnitsError.
     """
     header, rows = _table(dataset, units_system, what)
@@ -124,6 +125,28 @@ def _without_tails(values: Any) -> Any:
     finite = np.abs(values[np.isfinite(values)])
     smallest = _NOTHING * finite.max() if finite.size else 0.0
     return np.where(np.abs(values) < smallest, 0.0, values)
+
+
+def _magnetocaloric(dataset: xr.Dataset) -> Table:
+    named = [str(n) for n in dataset.data_vars]
+    per = share(dataset.attrs)
+    molar = ("entropy_change", "magnetization_slope")
+    units = [str(dataset[n].attrs["units"]) for n in named]
+    header = [_head(n, str(dataset[n].attrs["units"])) for n in ("temperature", "field")]
+    header += [
+        f"{_head(n, u)} {per}" if n in molar else _head(n, u)
+        for n, u in zip(named, units, strict=True)
+    ]
+    columns = [dataset[n].values for n in named]
+    temperature, field = dataset["temperature"].values, dataset["field"].values
+
+    def rows() -> Iterator[list[str]]:
+        for j, b in enumerate(field):
+            for i, t in enumerate(temperature):
+                point = [_number(t), _number(b)]
+                yield [*point, *(_number(c[i, j], _CURVE_DIGITS) for c in columns)]
+
+    return header, rows()
 
 
 def _levels(levels: xr.Dataset) -> Table:
@@ -283,6 +306,7 @@ def _grid_points(found: xr.Dataset) -> Iterator[tuple[int, int, list[str]]]:
 
 
 _TABLES: dict[str, dict[str, Callable[[xr.Dataset], Table]]] = {
+    "magnetocaloric": {"values": _magnetocaloric},
     "levels": {"levels": _levels},
     "correlations": {"pairs": _correlation_pairs, "structure": _structure_factor},
     "fit": {"points": _points, "parameters": _parameters},
