@@ -32,7 +32,7 @@ from thermo.arguments import (
 )
 from thermo.errors import FileFormatError, PartitaError, RangeError
 from thermo.further_commands import COMMANDS
-from thermo.messages import confirm, note, say, tell_notes
+from thermo.messages import confirm, note, say, tell_attributes, tell_notes
 from thermo.options import (
     Accuracy,
     AccuracyRange,
@@ -203,6 +203,7 @@ def solve(
             note(f"the full spectrum was at hand, so {option_names(idle)} had no effect")
     elif checkpoint is None:
         discard(kept)
+    tell_attributes(levels.attrs)
     confirm(
         f"wrote {output}: {len(spins.sites)} sites, {spins.n_states} states, "
         f"{levels.sizes['level']} levels, {time.monotonic() - started:.1f} s"
@@ -269,10 +270,7 @@ def curves(
     found = thermo.curves(spectrum, temperatures, fields, units=system.value, per=per.value, g=g)
     if found.attrs.get("field_direction") == "z":
         note("the model is anisotropic: fields, susceptibility and magnetization are along z")
-    if "unavailable" in found.attrs:
-        note(f"no susceptibility and magnetization: {found.attrs['unavailable']}")
-    if "error_unavailable" in found.attrs:
-        note(f"no error bars: {found.attrs['error_unavailable']}")
+    tell_attributes(found.attrs)
     if output is None or output.suffix.lower() == ".csv":
         thermo.export_csv(found, output or sys.stdout)
     else:

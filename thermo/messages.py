@@ -6,7 +6,7 @@ import re
 import shutil
 import sys
 import textwrap
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 
 from thermo.arguments import brief
 from thermo.process import drop
@@ -38,3 +38,15 @@ def confirm(sentence: str) -> None:
     """Tell someone who watches what was done; a script needs only the exit code."""
     if sys.stderr.isatty():
         say(sentence)
+
+
+def tell_attributes(attrs: Mapping[str, object]) -> None:
+    """What a result says against itself, or why it lacks something."""
+    leads = {
+        "unavailable": "no susceptibility and magnetization: ",
+        "error_unavailable": "no error bars: ",
+        "caution": "",
+    }
+    for name, lead in leads.items():
+        if name in attrs:
+            note(f"{lead}{attrs[name]}")
