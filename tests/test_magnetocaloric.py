@@ -202,7 +202,7 @@ def test_sampled_levels_say_that_errors_are_missing():
 def test_the_command_writes_a_table_and_a_file(tmp_path):
     levels, target = tmp_path / "levels.nc", tmp_path / "m.nc"
     thermo.write(thermo.solve(model([0.5] * 2, unit="K"), method="full"), levels)
-    words = ["magnetocaloric", str(levels), "-b", "1,2", "-t", "3", "--from", "1"]
+    words = ["caloric", str(levels), "-b", "1,2", "-t", "3", "--from", "1"]
     done = CliRunner().invoke(app, words)
     assert done.exit_code == 0, done.output
     header, *rows = done.stdout.splitlines()[-3:]

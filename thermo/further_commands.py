@@ -11,7 +11,7 @@ from thermo.structure_command import run_structure
 
 COMMANDS: dict[str, Callable[..., None]] = {
     "directions": run_directions,
-    "magnetocaloric": run_magnetocaloric,
+    "caloric": run_magnetocaloric,
     "correlations": run_correlations,
     "structure": run_structure,
 }

@@ -1,4 +1,4 @@
-"""What ``partita magnetocaloric`` takes and does."""
+"""What ``partita caloric`` takes and does."""
 
 from __future__ import annotations
 
@@ -70,6 +70,8 @@ def run_magnetocaloric(
     fields = parse_grid(field, "field")
     if g is not None and not 0 < g < float("inf"):
         raise RangeError(f"--g {g:g} is no g factor; give a finite number above zero")
+    if not abs(start) < float("inf"):
+        raise RangeError(f"--from {start:g} is no field; give a finite number of tesla")
     check_source(levels)
     if output is not None:
         check_target(output, (".nc", ".csv"), (levels, *grid_files(temperature, field)))

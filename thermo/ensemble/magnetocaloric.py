@@ -152,7 +152,7 @@ def magnetocaloric(
     per_tesla = moment_g * constants.tesla_to_energy(unit)
     with np.errstate(all="ignore"):
         ratio = -slope * per_tesla / here.specific_heat
-    ratio[~np.isfinite(ratio)] = np.nan
+    ratio = np.where(np.isfinite(ratio), ratio + 0.0, np.nan)  # + 0.0: no "-0"
     # Curves that are not wanted are zero; the others pass through the one conversion of units.
     none = np.zeros_like(slope)
     raw = ClusterCurves(none, none, change, none, slope / kelvin, none)
