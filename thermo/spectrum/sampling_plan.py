@@ -36,10 +36,10 @@ TRACE_SHARE = 1.5
 # step in the cache and beyond it; per row, column and vector of a family; per link found and
 # symmetry element; per link of a local walk; per tridiagonal matrix of 100
 # steps; to begin.
-_LINK, _FAR_LINK, _ROW = 0.8e-9, 1.6e-9, 0.8e-9
+_LINK, _FAR_LINK, _ROW = 1.05e-9, 1.7e-9, 0.8e-9
 _CACHE_BYTES = 16 * 2**20
-_FIND, _WALK, _RITZ, _BEGIN = 5.0e-9, 8.0e-9, 1.0e-3, 0.3
-_PROBE_SECONDS = 0.0115
+_FIND, _WALK, _RITZ, _BEGIN = 8.0e-9, 8.0e-9, 2.0e-3, 0.5
+_PROBE_SECONDS = 0.0027
 
 
 def family_size(vectors: int) -> int:
