@@ -25,6 +25,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from thermo.errors import SpectrumError
 from thermo.hilbert.tridiagonal import eigen_rows
 
 Vector = NDArray[np.float64]
@@ -178,7 +179,10 @@ def harvest(
         weight.append(square / square.sum() if square.sum() > 0 else square)
     counts = np.array(degeneracy, dtype=np.int64)[keep]
     if counts.sum() > dimension:
-        raise RuntimeError(f"{counts.sum()} exact states in a sector of {dimension}")
+        raise SpectrumError(
+            f"a sector of {dimension} states came out with {counts.sum()} exact ones; this is a fault "
+            "of the program, please report it with the model file (exact_states = 0 goes around it)"
+        )
     return Harvest(np.array(exact)[keep], counts, energy, weight)
 
 
