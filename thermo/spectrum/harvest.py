@@ -180,8 +180,9 @@ def harvest(
     counts = np.array(degeneracy, dtype=np.int64)[keep]
     if counts.sum() > dimension:
         raise SpectrumError(
-            f"a sector of {dimension} states came out with {counts.sum()} exact ones; this is a fault "
-            "of the program, please report it with the model file (exact_states = 0 goes around it)"
+            f"a sector of {dimension} states came out with {counts.sum()} exact ones; this is a "
+            "fault of the program, please report it with the model file (exact_states = 0 goes "
+            "around it)"
         )
     return Harvest(np.array(exact)[keep], counts, energy, weight)
 
