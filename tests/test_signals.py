@@ -136,3 +136,15 @@ def test_interruption(tmp_path: Path, terminal: bool) -> None:
         assert len(text.strip().splitlines()) == 1
     assert (tmp_path / "levels.nc").read_bytes() == b"older levels"
     assert sorted(p.name for p in tmp_path.iterdir()) == ["levels.nc", "ring.toml"]
+
+
+def test_a_signal_whose_exception_was_lost(tmp_path: Path) -> None:
+    """An exception raised in a finaliser is swallowed; the work must end all the same."""
+    (tmp_path / "model.toml").write_text(MODEL)
+    lost = "from thermo import process\ndef handler(n, _):\n    process.Signals.last = "
+    lost += "process.signal.Signals(n)\n    process.Signals.time = time.monotonic()\n"
+    code = SLOW.replace("def slow", lost + "process._interrupt = handler\n\ndef slow")
+    process = start(tmp_path, code, "solve", "solve", "model.toml", "-o", "levels.nc")
+    process.send_signal(signal.SIGTERM)
+    _, told = process.communicate(timeout=30)
+    assert (process.returncode, told.count("\n")) == (143, 1)

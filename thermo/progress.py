@@ -12,6 +12,7 @@ from typing import Any, TypeVar
 
 from thermo.errors import CheckpointError, WorkerError
 from thermo.messages import note
+from thermo.process import Signals
 
 Result = TypeVar("Result")
 _LEAVE = 8.0  # seconds in which work that is to end may do so by itself
@@ -115,9 +116,13 @@ def work(task: Callable[[Callable[[float, str], None]], Result]) -> Result:
 
     # Not Thread.join: broken off by a signal, it takes the thread for ended (Python 3.11).
     ended = threading.Event()
+    began = time.monotonic()
     try:
         threading.Thread(target=body, daemon=True).start()
         while not ended.wait(0.1):
+            # The exception of a signal that came during a finaliser is lost; the signal is not.
+            if Signals.time > began:
+                raise KeyboardInterrupt
             bar.refresh()
     except KeyboardInterrupt:
         bar.stopping = True
