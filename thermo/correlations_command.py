@@ -4,7 +4,6 @@ from __future__ import annotations
 
 import sys
 import time
-from pathlib import Path
 from typing import Annotated
 
 import typer
@@ -12,22 +11,12 @@ import typer
 from thermo.arguments import check_source, check_target, grid_files, parse_grid
 from thermo.errors import RangeError
 from thermo.messages import confirm, note, tell_notes
-from thermo.options import Memory, ModelFile, Threads
+from thermo.options import Memory, ModelFile, TableOutput, Temperatures, Threads
 from thermo.process import set_threads
 from thermo.progress import work
 
 TABLES = ("pairs", "structure")
 
-Temperatures = Annotated[
-    str,
-    typer.Option(
-        "--temperature",
-        "-t",
-        metavar="GRID",
-        help='"start:stop:count", "log start:stop:count", a list "2,5,10", or a file with one '
-        "number a line.",
-    ),
-]
 Fields = Annotated[
     str, typer.Option("--field", "-b", metavar="GRID", help='Fields along z in T, such as "0,1,5".')
 ]
@@ -44,12 +33,6 @@ What = Annotated[
         metavar="TABLE", help="Table of a CSV: pairs (default) or structure, the structure factor."
     ),
 ]
-Output = Annotated[
-    Path | None,
-    typer.Option(
-        "--output", "-o", metavar="FILE", help=".nc or .csv; default: CSV to standard output."
-    ),
-]
 
 
 def run_correlations(
@@ -60,7 +43,7 @@ def run_correlations(
     what: What = None,
     memory: Memory = None,
     threads: Threads = None,
-    output: Output = None,
+    output: TableOutput = None,
 ) -> None:
     """Find thermal correlations of spins, and S(q).
 

@@ -4,7 +4,6 @@ from __future__ import annotations
 
 import sys
 import time
-from pathlib import Path
 from typing import Annotated
 
 import typer
@@ -19,22 +18,12 @@ from thermo.arguments import (
 )
 from thermo.errors import RangeError
 from thermo.messages import confirm, note, tell_notes
-from thermo.options import Memory, ModelFile, Per, Threads, Units
+from thermo.options import Memory, ModelFile, Per, TableOutput, Temperatures, Threads, Units
 from thermo.process import set_threads
 from thermo.progress import work
 
 WORDS = ("x", "y", "z", "powder")
 
-Temperatures = Annotated[
-    str,
-    typer.Option(
-        "--temperature",
-        "-t",
-        metavar="GRID",
-        help='"start:stop:count", "log start:stop:count", a list "2,5,10", or a file with one '
-        "number a line.",
-    ),
-]
 Fields = Annotated[
     str, typer.Option("--field", "-b", metavar="GRID", help='Fields in T, for example "0,1,5".')
 ]
@@ -53,12 +42,6 @@ UnitsWord = Annotated[
     typer.Option(help="Units of the curves; default: molar-si, or reduced without a unit."),
 ]
 PerWord = Annotated[Per, typer.Option(help="Per mole of magnetic ions or of formula units.")]
-Output = Annotated[
-    Path | None,
-    typer.Option(
-        "--output", "-o", metavar="FILE", help=".nc or .csv; default: CSV to standard output."
-    ),
-]
 
 
 def parse_axis(text: str) -> str | list[float]:
@@ -86,7 +69,7 @@ def run_directions(
     per: PerWord = Per.ion,
     memory: Memory = None,
     threads: Threads = None,
-    output: Output = None,
+    output: TableOutput = None,
 ) -> None:
     """Find curves along any axis, or of a powder.
 

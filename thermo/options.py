@@ -125,3 +125,19 @@ ReportFile = Annotated[
     Path | None,
     typer.Option("--report", metavar="FILE", help="The whole report as one page (.html)."),
 ]
+Temperatures = Annotated[
+    str,
+    typer.Option(
+        "--temperature",
+        "-t",
+        metavar="GRID",
+        help='"start:stop:count", "log start:stop:count", a list "2,5,10", or a file with one '
+        "number a line.",
+    ),
+]
+TableOutput = Annotated[
+    Path | None,
+    typer.Option(
+        "--output", "-o", metavar="FILE", help=".nc or .csv; default: CSV to standard output."
+    ),
+]

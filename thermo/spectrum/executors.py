@@ -7,10 +7,9 @@ that calls ``run_pieces`` alone holds the checkpoint; workers only compute.
 from __future__ import annotations
 
 import contextlib
+import functools
 import operator
-import queue
 import re
-import threading
 import time
 from collections.abc import Callable, Generator, Iterator, Mapping, Sequence
 from dataclasses import dataclass
@@ -22,14 +21,13 @@ from numpy.typing import NDArray
 from thermo.errors import RangeError, WorkerError
 from thermo.numbers import duration
 from thermo.spectrum.checkpoint import Checkpoint
+from thermo.spectrum.tasks import run_tasks
 from thermo.spectrum.threads import thread_count
 
 Arrays = dict[str, NDArray[Any]]
 Progress = Callable[[float, str], None]
 Finished = Generator[tuple[int, Mapping[str, NDArray[Any]]], None, None]
 MOST_WORKERS = 9999
-# How often a waiting run tells how it stands, and can be stopped.
-HEARTBEAT = 0.25
 
 
 class Piece(Protocol):
@@ -172,7 +170,8 @@ def run_pieces(
         chosen = check_executor(executor)
         if isinstance(chosen, Local):
             at_once = min(chosen.at_once, workers or chosen.at_once)
-            finished = _in_threads(waiting, solve, at_once, clock.beat)
+            tasks = [functools.partial(solve, piece) for piece in waiting]
+            finished = run_tasks(tasks, at_once, functools.partial(clock.beat, ""))
         else:
             from thermo.spectrum.cluster import in_cluster
 
@@ -186,45 +185,6 @@ def run_pieces(
                 found[piece.key] = arrays
                 clock.finished(piece)
     return {key: found[key] for key in keys}
-
-
-def _in_threads(
-    pieces: Sequence[P], solve: Solve[P], workers: int, beat: Callable[[str], None]
-) -> Finished:
-    """(index, arrays) as pieces finish, done by daemon threads, which die with the program."""
-    waiting: queue.SimpleQueue[int] = queue.SimpleQueue()
-    finished: queue.SimpleQueue[tuple[int, Any, BaseException | None]] = queue.SimpleQueue()
-    stop = threading.Event()
-    for index in range(len(pieces)):
-        waiting.put(index)
-
-    def work() -> None:
-        while not stop.is_set():
-            try:
-                index = waiting.get_nowait()
-            except queue.Empty:
-                return
-            try:
-                finished.put((index, solve(pieces[index]), None))
-            except BaseException as fault:
-                finished.put((index, None, fault))
-                return
-
-    for _ in range(min(workers, len(pieces))):
-        threading.Thread(target=work, daemon=True).start()
-    try:
-        for _ in range(len(pieces)):
-            while True:
-                try:
-                    index, result, fault = finished.get(timeout=HEARTBEAT)
-                    break
-                except queue.Empty:
-                    beat("")
-            if fault is not None:
-                raise fault
-            yield index, result
-    finally:
-        stop.set()
 
 
 @contextlib.contextmanager
